@@ -1,0 +1,301 @@
+"""Starts named children, watches them, and stops them in order; nothing is left running.
+
+Children get their own process group (so that Ctrl-C reaches the supervisor alone), write to
+``<folder>/<name>.log``, and are stopped in the reverse order of their start.
+"""
+
+from __future__ import annotations
+
+import fcntl
+import os
+import signal
+import threading
+import time
+from collections.abc import Callable, Iterator, Mapping, Sequence
+from contextlib import contextmanager, suppress
+from dataclasses import dataclass
+from pathlib import Path
+from subprocess import Popen, TimeoutExpired
+from types import FrameType
+
+from .failures import AlreadyRunning, ChildDied, ChildFailed, NotReady
+from .guard import Guard, group_is_running, is_running, kill_group
+
+LINES_SHOWN = 15
+
+
+@dataclass(frozen=True)
+class Child:
+    """One program to keep running.
+
+    ``is_ready`` answers whether it can be used now, within ``ready_timeout`` seconds of its start;
+    ``grace`` is how long, in seconds, it may take to stop before its whole group is killed;
+    ``user`` is a user and group id to run as.
+    """
+
+    name: str
+    command: Sequence[str]
+    environment: Mapping[str, str] | None = None
+    folder: Path | None = None
+    is_ready: Callable[[], bool] | None = None
+    ready_timeout: float = 30.0
+    grace: float = 10.0
+    stop_signal: int = signal.SIGTERM
+    user: tuple[int, int] | None = None
+    hint: str = ""
+
+
+@dataclass
+class _Running:
+    child: Child
+    process: Popen[bytes]
+    log: Path
+
+
+class Supervisor:
+    """Owns a set of children from their start to their end.
+
+    Parameters
+    ----------
+    log_folder : Path
+        Where the children's output goes, a file each.
+    lock : Path, optional
+        A file which only one supervisor at a time can hold; it contains the holder's process id.
+
+    Raises
+    ------
+    AlreadyRunning
+        When another supervisor holds the lock; the message gives its process id.
+    """
+
+    def __init__(self, log_folder: Path, *, lock: Path | None = None):
+        self.log_folder = log_folder
+        log_folder.mkdir(parents=True, exist_ok=True)
+        self._running: list[_Running] = []
+        self._lock = _hold(lock) if lock is not None else None
+        # The guard shares the lock, so that it is free only when the last child of a killed owner is gone.
+        self.guard = Guard(keep_open=() if self._lock is None else (self._lock,))
+
+    def __enter__(self) -> Supervisor:
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.stop()
+
+    def log(self, name: str) -> Path:
+        return self.log_folder / f"{name}.log"
+
+    def pid(self, name: str) -> int:
+        """Process id of a running child (also the id of its process group)."""
+        return self._find(name).process.pid
+
+    def names(self) -> list[str]:
+        return [one.child.name for one in self._running]
+
+    def start(self, child: Child) -> int:
+        """Start a child and wait until it is ready; answers its process id.
+
+        Raises
+        ------
+        ChildDied
+            When it, or another child, ends meanwhile.
+        NotReady
+            When it does not answer within its time. It is stopped with the others.
+        """
+        running = self._spawn(child)
+        if child.is_ready is not None:
+            deadline = time.monotonic() + child.ready_timeout
+            while not child.is_ready():
+                self.check()
+                if time.monotonic() > deadline:
+                    raise NotReady(
+                        f"The {child.name} did not become ready within {child.ready_timeout:g} s."
+                        + _evidence(running.log, child.hint),
+                        name=child.name,
+                        log=running.log,
+                    )
+                time.sleep(0.05)
+        self.check()
+        return running.process.pid
+
+    def run(self, child: Child, *, timeout: float) -> None:
+        """Run a child that should end by itself with status 0 within ``timeout`` seconds."""
+        running = self._spawn(child)
+        deadline = time.monotonic() + timeout
+        while running.process.poll() is None:
+            if time.monotonic() > deadline:
+                self.stop_child(child.name)
+                raise NotReady(
+                    f"The step '{child.name}' did not end within {timeout:g} s." + _evidence(running.log, ""),
+                    name=child.name,
+                    log=running.log,
+                )
+            time.sleep(0.02)
+        self._reap(running)
+        status = running.process.returncode
+        if status != 0:
+            raise ChildFailed(
+                f"The step '{child.name}' failed ({describe_status(status)})."
+                + _evidence(running.log, child.hint),
+                name=child.name,
+                log=running.log,
+                exit_status=status,
+            )
+
+    def check(self) -> None:
+        """Raise ChildDied, naming the child and its last words, if any has ended."""
+        for running in self._running:
+            status = running.process.poll()
+            if status is not None:
+                raise ChildDied(
+                    f"The {running.child.name} has died ({describe_status(status)})."
+                    + _evidence(running.log, running.child.hint),
+                    name=running.child.name,
+                    log=running.log,
+                    exit_status=status,
+                )
+        if not self.guard.is_alive():
+            raise ChildDied(
+                f"The guard (process {self.guard.pid}) that cleans up after this program has died.",
+                name="guard",
+                log=self.log_folder,
+            )
+
+    def wait(self) -> None:
+        """Watch the children until interrupted; raises ChildDied when one ends."""
+        while True:
+            self.check()
+            time.sleep(0.2)
+
+    def stop_child(self, name: str, *, kill: bool = False) -> None:
+        """Stop one child: its stop signal, then after its grace (or at once) SIGKILL for its group."""
+        running = self._find(name)
+        process = running.process
+        if not kill and process.poll() is None:
+            with suppress(ProcessLookupError):
+                os.kill(process.pid, running.child.stop_signal)
+            with suppress(TimeoutExpired):
+                process.wait(running.child.grace)
+        self._reap(running)
+
+    def stop(self) -> None:
+        """Stop every child, the last started first, and free the lock. May be called twice."""
+        with ignoring_interrupts():
+            for running in reversed(list(self._running)):
+                self.stop_child(running.child.name)
+            self.guard.close()
+            if self._lock is not None:
+                os.close(self._lock)
+                self._lock = None
+
+    def _spawn(self, child: Child) -> _Running:
+        log = self.log(child.name)
+        if log.exists():
+            log.replace(log.with_suffix(".log.1"))
+        with log.open("wb") as output:
+            process = self.guard.start(
+                child.command,
+                output=output,
+                environment=child.environment,
+                folder=child.folder,
+                stop_signal=child.stop_signal,
+                user=child.user,
+            )
+        running = _Running(child, process, log)
+        self._running.append(running)
+        return running
+
+    def _reap(self, running: _Running) -> None:
+        group = running.process.pid
+        # Also after a clean end: a grandchild must not outlive its parent.
+        kill_group(group)
+        running.process.wait()
+        deadline = time.monotonic() + 5.0
+        while group_is_running(group) and time.monotonic() < deadline:
+            time.sleep(0.01)
+        self.guard.forget(group)
+        self._running.remove(running)
+
+    def _find(self, name: str) -> _Running:
+        for running in self._running:
+            if running.child.name == name:
+                return running
+        raise KeyError(name)
+
+
+def describe_status(status: int) -> str:
+    """Say in words how a process ended: 'exit status 3' or 'killed by SIGKILL'."""
+    if status >= 0:
+        return f"exit status {status}"
+    try:
+        return f"killed by {signal.Signals(-status).name}"
+    except ValueError:
+        return f"killed by signal {-status}"
+
+
+def _evidence(log: Path, hint: str) -> str:
+    try:
+        lines = log.read_text(errors="replace").rstrip().splitlines()[-LINES_SHOWN:]
+    except OSError:
+        lines = []
+    advice = f" {hint}" if hint else ""
+    if not lines:
+        return f"{advice} It wrote nothing to {log}"
+    return f"{advice} The last lines of {log}:\n" + "\n".join(f"    {line}" for line in lines)
+
+
+def _hold(path: Path) -> int:
+    """Take the lock file, waiting while the children of a killed holder are being stopped."""
+    path.parent.mkdir(parents=True, exist_ok=True)
+    descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o600)
+    deadline = time.monotonic() + 60.0
+    while True:
+        try:
+            fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
+        except OSError as error:
+            written = os.pread(descriptor, 20, 0).strip()
+            holder = int(written) if written.isdigit() else 0
+            if (holder and is_running(holder)) or time.monotonic() > deadline:
+                os.close(descriptor)
+                raise AlreadyRunning(
+                    f"Ratewright already runs from {path.parent} as process {holder or 'unknown'}; "
+                    f"stop it first (Ctrl-C where it runs, or: kill {holder or 'PID'})."
+                ) from error
+            time.sleep(0.1)
+            continue
+        os.ftruncate(descriptor, 0)
+        os.pwrite(descriptor, f"{os.getpid()}\n".encode(), 0)
+        return descriptor
+
+
+@contextmanager
+def interruptible() -> Iterator[None]:
+    """Within this block SIGTERM and SIGHUP end the program as Ctrl-C does: by KeyboardInterrupt."""
+
+    def interrupt(number: int, frame: FrameType | None) -> None:
+        raise KeyboardInterrupt
+
+    with _handlers({number: interrupt for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)}):
+        yield
+
+
+@contextmanager
+def ignoring_interrupts() -> Iterator[None]:
+    """Within this block a second Ctrl-C cannot break off what must be finished."""
+    with _handlers(dict.fromkeys((signal.SIGINT, signal.SIGTERM, signal.SIGHUP), signal.SIG_IGN)):
+        yield
+
+
+@contextmanager
+def _handlers(
+    wanted: Mapping[signal.Signals, Callable[[int, FrameType | None], None] | signal.Handlers],
+) -> Iterator[None]:
+    if threading.current_thread() is not threading.main_thread():
+        yield  # signals belong to the main thread
+        return
+    before = {number: signal.signal(number, handler) for number, handler in wanted.items()}
+    try:
+        yield
+    finally:
+        for number, handler in before.items():
+            signal.signal(number, signal.SIG_DFL if handler is None else handler)

@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class DatasetsConfig(AppConfig):
+    name = "kinetics_db.datasets"

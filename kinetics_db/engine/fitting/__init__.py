@@ -1,0 +1,1 @@
+"""Global fits of one network to many experiments."""

@@ -1,0 +1,237 @@
+"""One descent from one start: trust-region least squares, and the profiled sigmas around it.
+
+SciPy's trust-region reflective method (Branch, Coleman & Li, SIAM J. Sci. Comput. 21 (1999) 1) on exact Jacobians.
+It ends when a full Gauss-Newton step would no longer lower -2 ln L noticeably (in the spirit of the
+relative offset, Bates & Watts, Technometrics 23 (1981) 179).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from typing import Any, Literal
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.optimize import least_squares
+
+from kinetics_db.engine.fitting.objective import Objective, Point
+from kinetics_db.engine.fitting.problem import Settings
+from kinetics_db.engine.fitting.residuals import Evaluation, InterruptedFitError, Model
+from kinetics_db.engine.fitting.uncertainty import curvature, pushed_against_bounds
+
+Floats = NDArray[np.float64]
+DescentStatus = Literal["converged", "stopped", "not converged", "cannot start"]
+
+TIGHT = 1e-12  # further fall of -2 ln L that counts as none
+LOOSE = 1e-5  # fall that integration noise may leave undone
+MOST_FAILURES_IN_A_ROW = 16
+MOST_SIGMA_ROUNDS = 60
+SIGMA_TOLERANCE = 1e-7
+
+
+@dataclass(frozen=True, eq=False)
+class Descent:
+    """Where a descent ended.
+
+    Attributes
+    ----------
+    status : 'cannot start' when the model cannot be integrated at the start
+    point : the best point, None when there is none
+    """
+
+    status: DescentStatus
+    message: str
+    point: Point | None
+    iterations: int = 0
+
+
+class _StalledError(Exception):
+    """No trial point was better for a long while."""
+
+
+class Descender:
+    """Runs descents on one problem and remembers the best point seen."""
+
+    def __init__(
+        self,
+        model: Model,
+        objective: Objective,
+        settings: Settings,
+        on_progress: Callable[[int, float], None] | None,
+    ) -> None:
+        self.model = model
+        self.objective = objective
+        self.best: Point | None = None
+        self.iterations = 0
+        self._settings = settings
+        self._on_progress = on_progress
+        parameters = objective.parameters
+        self._lower, self._upper = parameters.bounds
+        self._scale = np.array([p.scale for p in parameters.parameters])
+
+    def descend(self, theta: Floats) -> Descent:
+        """From theta to the nearest minimum, within the settings' limits."""
+        begun = self.iterations
+        self.best = None
+        status: DescentStatus
+        try:
+            evaluation = self.model.evaluate(theta)
+            if evaluation.failed is not None:
+                return Descent("cannot start", _failure(evaluation), None)
+            self._meet(evaluation)
+            status, message = self._rounds(begun)
+        except InterruptedFitError as interruption:
+            status, message = "stopped", str(interruption)
+            if self.best is None:
+                message += " before the first evaluation was complete"
+        return Descent(status, message, self.best, self.iterations - begun)
+
+    def _rounds(self, begun: int) -> tuple[Literal["converged", "not converged"], str]:
+        """Alternate the parameters and the profiled sigmas to their fixed point."""
+        message = ""
+        for _ in range(MOST_SIGMA_ROUNDS):
+            assert self.best is not None  # noqa: S101  met before the first round
+            sigmas = self.best.sigmas
+            converged, message = self._minimise(sigmas, begun)
+            if not converged:
+                return "not converged", message
+            # with one common sigma and no prior a second round only sharpens the criterion
+            if np.allclose(np.log(self.best.sigmas), np.log(sigmas), rtol=0, atol=SIGMA_TOLERANCE):
+                return "converged", message
+        return "not converged", "the standard uncertainties did not settle"
+
+    def _meet(self, evaluation: Evaluation) -> Point:
+        point = self.objective.point(evaluation)
+        if self.best is None or point.cost < self.best.cost:
+            self.best = point
+        return point
+
+    def _minimise(self, sigmas: Floats, begun: int) -> tuple[bool, str]:
+        assert self.best is not None  # noqa: S101
+        if self.decrease(self.best, sigmas) < TIGHT:
+            return True, "a full step would not lower the cost any further"
+        search = _Search(self, self.best, sigmas, begun)
+        ending = search.run()
+        remaining = self.decrease(self.best, sigmas)
+        if ending is None:
+            return True, "a full step would not lower the cost any further"
+        if remaining < LOOSE:
+            return True, f"{ending}; a full step would lower -2 ln L by {remaining:.1e}"
+        return False, f"{ending}, though a full step should lower -2 ln L by {remaining:.3g}"
+
+    def decrease(self, point: Point, sigmas: Floats) -> float:
+        """By how much a full Gauss-Newton step inside the bounds would lower -2 ln L - 2 ln prior."""
+        residuals, jacobian = self.objective.standardised(point, sigmas)
+        pulls = self.objective.prior_residuals(point.theta)
+        gradient = jacobian.T @ residuals + pulls / self.objective.prior_sds
+        fixed = pushed_against_bounds(point.theta, self._lower, self._upper, gradient, self._scale)
+        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed).decrease
+
+    def accepted(self, point: Point) -> None:
+        """Count an iteration and tell of it."""
+        self.iterations += 1
+        if self._on_progress is not None:
+            self._on_progress(self.iterations, point.cost)
+
+
+class _Search:
+    """One call of the least-squares solver at fixed sigmas, in steps of each parameter's scale."""
+
+    def __init__(self, owner: Descender, origin: Point, sigmas: Floats, begun: int) -> None:
+        self._owner = owner
+        self._origin = origin
+        self._sigmas = sigmas
+        self._last_iteration = begun + owner._settings.max_iterations
+        self._known: list[tuple[Floats, Point]] = [(np.zeros_like(origin.theta), origin)]
+        self._accepted = origin
+        self._failures = 0
+        self._lowest = self._sum_of_squares(origin)
+
+    def run(self) -> str | None:
+        """None when the tight criterion was met, else how the search ended."""
+        owner = self._owner
+        scale, theta = owner._scale, self._origin.theta
+        lower, upper = (owner._lower - theta) / scale, (owner._upper - theta) / scale
+        try:
+            found = least_squares(
+                self._residuals,
+                np.zeros_like(theta),
+                jac=self._jacobian,
+                bounds=(lower, upper),
+                method="trf",
+                ftol=1e-12,
+                xtol=1e-10,
+                gtol=1e-14,
+                x_scale=1.0,
+                max_nfev=10 * owner._settings.max_iterations,
+                callback=self._after_iteration,
+            )
+        except _StalledError:
+            return "no smaller step was better"
+        endings = {
+            -2: None,
+            0: f"the limit of {owner._settings.max_iterations} iterations was reached",
+            1: "the gradient vanished",
+            2: "the cost no longer fell",
+            3: "the steps became negligible",
+            4: "the cost no longer fell and the steps became negligible",
+        }
+        if found.status == -2 and owner.iterations >= self._last_iteration:
+            return endings[0]
+        return endings.get(found.status, "the search ended")
+
+    def _point(self, z: Floats) -> Point | None:
+        for known, point in self._known:
+            if np.array_equal(known, z):
+                return point
+        evaluation = self._owner.model.evaluate(self._origin.theta + z * self._owner._scale)
+        if evaluation.failed is not None:
+            return None
+        point = self._owner._meet(evaluation)
+        self._known = [(z.copy(), point)]  # the solver asks for the Jacobian at its last trial point only
+        return point
+
+    def _residuals(self, z: Floats) -> Floats:
+        point = self._point(z)
+        better = False
+        if point is not None:
+            total = self._sum_of_squares(point)
+            better = total < self._lowest
+            self._lowest = min(total, self._lowest)
+        self._failures = 0 if better or z.any() == 0 else self._failures + 1
+        if self._failures > MOST_FAILURES_IN_A_ROW:
+            raise _StalledError
+        if point is None:
+            # not finite: the solver shrinks its region and tries again nearer
+            return np.full(self._owner.objective.data.n + len(z), np.inf)
+        return self._stacked(point)
+
+    def _jacobian(self, z: Floats) -> Floats:
+        point = self._point(z)
+        if point is None:  # cannot be: only finite points are accepted
+            raise _StalledError
+        self._accepted = point
+        objective = self._owner.objective
+        _, jacobian = objective.standardised(point, self._sigmas)
+        priors = np.diag(1.0 / objective.prior_sds)
+        return np.asarray(np.vstack([jacobian, priors]) * self._owner._scale)
+
+    def _stacked(self, point: Point) -> Floats:
+        objective = self._owner.objective
+        residuals, _ = objective.standardised(point, self._sigmas)
+        return np.concatenate([residuals, objective.prior_residuals(point.theta)])
+
+    def _sum_of_squares(self, point: Point) -> float:
+        return float(np.sum(self._stacked(point) ** 2))
+
+    def _after_iteration(self, intermediate_result: Any) -> None:
+        self._owner.accepted(self._accepted)
+        if self._owner.iterations >= self._last_iteration:
+            raise StopIteration
+        if self._owner.decrease(self._accepted, self._sigmas) < TIGHT:
+            raise StopIteration
+
+
+def _failure(evaluation: Evaluation) -> str:
+    return f"{evaluation.failed}: {evaluation.reason}" if evaluation.failed else evaluation.reason

@@ -1,0 +1,270 @@
+"""From the best point of a fit to its outcome: sigmas, covariance, intervals, residuals, pulls."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import Literal
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy import stats
+
+from kinetics_db.engine.fitting.descent import Descent
+from kinetics_db.engine.fitting.objective import Objective, Point
+from kinetics_db.engine.fitting.outcome import (
+    ExperimentFit,
+    FitOutcome,
+    FittedParameter,
+    Minimum,
+    NuisancePull,
+    SigmaEstimate,
+)
+from kinetics_db.engine.fitting.parameters import FreeParameter
+from kinetics_db.engine.fitting.problem import Experiment, Nuisance, Settings
+from kinetics_db.engine.fitting.uncertainty import (
+    WIDEST_INTERVAL,
+    Curvature,
+    curvature,
+    pushed_against_bounds,
+    why_not_determined,
+)
+
+Floats = NDArray[np.float64]
+SET_BY_PRIOR = 0.8  # of the width of the prior's interval
+
+
+def report(
+    descent: Descent,
+    experiments: Sequence[Experiment],
+    nuisances: Sequence[Nuisance],
+    objective: Objective,
+    settings: Settings,
+    *,
+    minima: tuple[Minimum, ...],
+    iterations: int,
+    evaluations: int,
+    seconds: float,
+) -> FitOutcome:
+    """The outcome of the fit that ended in this descent."""
+    point = descent.point
+    if point is None:
+        return FitOutcome(
+            status=descent.status,
+            message=descent.message,
+            n_points=objective.data.n,
+            error_model=settings.error_model,
+            confidence=settings.confidence,
+            iterations=iterations,
+            evaluations=evaluations,
+            seconds=seconds,
+        )
+    data = objective.data
+    spread = _spread(point, objective)
+    quantile, kind = _quantile(spread, settings, estimated=bool(data.group_names))
+    standardised = point.residuals / spread.sigma_of_points
+    return FitOutcome(
+        status=descent.status,
+        message=descent.message,
+        cost=point.cost,
+        minus_two_log_likelihood=point.minus_two_log_likelihood,
+        minus_two_log_prior=point.minus_two_log_prior,
+        residual_sum_of_squares=float(np.sum(point.residuals**2)),
+        weighted_residual_sum_of_squares=float(np.sum(standardised**2)),
+        n_points=data.n,
+        n_estimated_sigmas=len(data.group_names),
+        error_model=settings.error_model,
+        confidence=settings.confidence,
+        sigmas=spread.estimates,
+        parameters=_parameters(point, objective, spread, quantile, settings),
+        theta=point.theta,
+        covariance=spread.curvature.covariance,
+        prior_precision=1.0 / objective.prior_sds**2,
+        degrees_of_freedom=spread.degrees_of_freedom,
+        quantile=quantile,
+        quantile_kind=kind,
+        experiments=_experiments(point, experiments, objective, spread),
+        pulls=_pulls(point, experiments, nuisances, objective),
+        minima=minima,
+        iterations=iterations,
+        evaluations=evaluations,
+        seconds=seconds,
+    )
+
+
+@dataclass(frozen=True, eq=False)
+class _Spread:
+    curvature: Curvature
+    at_bound: NDArray[np.bool_]
+    estimates: tuple[SigmaEstimate, ...]
+    sigma_of_points: Floats  # (v,)
+    degrees_of_freedom: float
+
+
+def _spread(point: Point, objective: Objective) -> _Spread:
+    """Sigmas with their degrees of freedom, and the curvature at them."""
+    data, parameters = objective.data, objective.parameters
+    pulls = objective.prior_residuals(point.theta)
+    residuals, jacobian = objective.standardised(point, point.sigmas)
+    gradient = jacobian.T @ residuals + pulls / objective.prior_sds
+    lower, upper = parameters.bounds
+    scale = np.array([p.scale for p in parameters.parameters])
+    at_bound = pushed_against_bounds(point.theta, lower, upper, gradient, scale)
+    found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound)
+    leverage = found.leverage
+    estimates: list[SigmaEstimate] = []
+    sigmas = point.sigmas.copy()
+    for g, name in enumerate(data.group_names):
+        mine = data.groups == g
+        n = int(mine.sum())
+        freedom = n - float(leverage[mine].sum())
+        rss = float(np.sum(point.residuals[mine] ** 2))
+        value = float(np.sqrt(rss / freedom)) if freedom > 1e-6 * n else None
+        if value is not None:
+            sigmas[g] = max(value, data.smallest_sigmas[g])
+        estimates.append(SigmaEstimate(name, value, float(point.sigmas[g]), n, freedom))
+    if data.group_names:
+        residuals, jacobian = objective.standardised(point, sigmas)
+        found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound)
+        if any(e.value is None for e in estimates):  # no scatter left to judge the points by
+            found = Curvature(
+                found.basis,
+                np.full_like(found.covariance, np.nan),
+                np.zeros_like(found.determined),
+                found.inert,
+                found.decrease,
+            )
+    freedom = data.n - float(found.leverage.sum())
+    return _Spread(found, at_bound, tuple(estimates), data.sigma_of_points(sigmas), freedom)
+
+
+def _quantile(
+    spread: _Spread, settings: Settings, *, estimated: bool
+) -> tuple[float, Literal["normal", "Student's t"]]:
+    level = 0.5 + settings.confidence / 2.0
+    if estimated and spread.degrees_of_freedom > 1e-6:
+        return float(stats.t.ppf(level, spread.degrees_of_freedom)), "Student's t"
+    return float(stats.norm.ppf(level)), "normal"
+
+
+def _parameters(
+    point: Point, objective: Objective, spread: _Spread, quantile: float, settings: Settings
+) -> tuple[FittedParameter, ...]:
+    values = objective.parameters.values(point.theta)
+    return tuple(
+        _parameter(i, p, float(values[i]), float(point.theta[i]), objective, spread, quantile, settings)
+        for i, p in enumerate(objective.parameters.parameters)
+    )
+
+
+def _parameter(
+    i: int,
+    parameter: FreeParameter,
+    value: float,
+    theta: float,
+    objective: Objective,
+    spread: _Spread,
+    quantile: float,
+    settings: Settings,
+) -> FittedParameter:
+    found = spread.curvature
+    error = float(np.sqrt(found.covariance[i, i])) if found.determined[i] else np.inf
+    wide = parameter.positive and parameter.prior_sd is None and quantile * error > WIDEST_INTERVAL
+    determined = bool(found.determined[i]) and not wide
+    why = ""
+    if any(e.value is None for e in spread.estimates):
+        why = "no degree of freedom is left to estimate the scatter"
+    elif not determined:
+        partners = [] if wide or found.inert[i] or spread.at_bound[i] else _partners(i, objective, found)
+        why = why_not_determined(parameter.name, bool(found.inert[i]), bool(spread.at_bound[i]), partners)
+    prior_width = None
+    if parameter.prior_sd is not None:
+        prior_width = float(objective.prior_sds[i] * _normal(settings))
+    prior_mean = parameter.prior_mean
+    return FittedParameter(
+        name=parameter.name,
+        base=parameter.base,
+        kind=parameter.kind,
+        place=parameter.place,
+        value=value,
+        standard_error=(value * error if parameter.positive else error) if determined else None,
+        lower=parameter.value(theta - quantile * error) if determined else None,
+        upper=parameter.value(theta + quantile * error) if determined else None,
+        scale="logarithmic" if parameter.positive else "linear",
+        at_bound=bool(spread.at_bound[i]),
+        determined=determined,
+        set_by_prior=prior_width is not None and determined and quantile * error > SET_BY_PRIOR * prior_width,
+        prior_mean=None if prior_mean is None else parameter.value(prior_mean),
+        prior_sd=parameter.prior_sd,
+        why_not=why,
+    )
+
+
+def _normal(settings: Settings) -> float:
+    return float(stats.norm.ppf(0.5 + settings.confidence / 2.0))
+
+
+def _partners(i: int, objective: Objective, found: Curvature) -> list[str]:
+    """Other parameters that the data do not determine either."""
+    return [
+        p.name
+        for j, p in enumerate(objective.parameters.parameters)
+        if j != i and not found.determined[j] and not found.inert[j]
+    ][:5]
+
+
+def _experiments(
+    point: Point, experiments: Sequence[Experiment], objective: Objective, spread: _Spread
+) -> tuple[ExperimentFit, ...]:
+    found: list[ExperimentFit] = []
+    begin = 0
+    for e, mask, model in zip(experiments, objective.data.masks, point.evaluation.model, strict=True):
+        end = begin + int(mask.sum())
+        sigma = np.full(mask.shape, np.nan)
+        sigma[mask] = spread.sigma_of_points[begin:end]
+        residuals = np.where(mask, e.values - model, np.nan)
+        rows, columns = np.nonzero(mask)
+        found.append(
+            ExperimentFit(
+                name=e.name,
+                times=e.times,
+                observed_names=e.observed,
+                observed=np.where(mask, e.values, np.nan),
+                model=model,
+                residuals=residuals,
+                sigma=sigma,
+                standardised=residuals / sigma,
+                rows=rows,
+                columns=columns,
+                jacobian=point.jacobian[begin:end] / spread.sigma_of_points[begin:end, None],
+                nuisances=nuisances_of(e),
+            )
+        )
+        begin = end
+    return tuple(found)
+
+
+def nuisances_of(experiment: Experiment) -> tuple[str, ...]:
+    """Nuisance parameters that an experiment uses, each once."""
+    names = [f for charge in experiment.charges for f in charge.factors]
+    names += [f for factors in experiment.signal_factors.values() for f in factors]
+    if experiment.time_shift is not None:
+        names.append(experiment.time_shift)
+    return tuple(dict.fromkeys(names))
+
+
+def _pulls(
+    point: Point, experiments: Sequence[Experiment], nuisances: Sequence[Nuisance], objective: Objective
+) -> tuple[NuisancePull, ...]:
+    pulls = objective.prior_residuals(point.theta)
+    values = objective.parameters.values(point.theta)
+    users = {n.name: [e.name for e in experiments if n.name in nuisances_of(e)] for n in nuisances}
+    found = []
+    for nuisance in nuisances:
+        i = objective.parameters.index(nuisance.name)
+        found.append(
+            NuisancePull(
+                nuisance.name, nuisance.owner, float(values[i]), float(pulls[i]), tuple(users[nuisance.name])
+            )
+        )
+    return tuple(found)

@@ -1,0 +1,113 @@
+"""Uncertainty of a fitted point from the curvature of its sum of squares.
+
+Covariance (J'J + P)^-1 of the standardised problem on the fitted scale, with P the precisions of the priors
+(Bard, Nonlinear Parameter Estimation, 1974; Seber & Wild, Nonlinear Regression, 1989), through the singular
+value decomposition of the column-scaled matrix, so that what the data do not determine is found and named
+instead of inverted.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+Floats = NDArray[np.float64]
+
+# Exact sensitivities carry about this relative error; directions flatter than it are not determined.
+SMALLEST_SINGULAR_VALUE = 1e-6
+LARGEST_SHARE_OF_FLAT_DIRECTION = 1e-4
+WIDEST_INTERVAL = math.log(100.0)  # on a logarithmic scale, to each side
+
+
+@dataclass(frozen=True, eq=False)
+class Curvature:
+    """The standardised problem near a point, decomposed.
+
+    Attributes
+    ----------
+    basis : ndarray, shape (v, r), orthonormal where no priors act; hat matrix = basis @ basis.T
+    covariance : ndarray, shape (p, p), NaN in rows and columns of what is not determined or held at a bound
+    determined : ndarray of bool, shape (p,)
+    inert : ndarray of bool, shape (p,), no effect on any point and no prior
+    decrease : by how much a full step would lower the sum of squares
+    """
+
+    basis: Floats
+    covariance: Floats
+    determined: NDArray[np.bool_]
+    inert: NDArray[np.bool_]
+    decrease: float
+
+    @property
+    def leverage(self) -> Floats:
+        """Diagonal of the hat matrix, shape (v,)."""
+        return np.asarray(np.sum(self.basis**2, axis=1))
+
+
+def curvature(
+    jacobian: Floats,
+    residuals: Floats,
+    prior_sds: Floats,
+    prior_residuals: Floats,
+    fixed: NDArray[np.bool_] | None = None,
+) -> Curvature:
+    """Decompose the standardised Jacobian together with the priors.
+
+    Parameters
+    ----------
+    jacobian : ndarray, shape (v, p), d(standardised residual)/d(fitted-scale parameter)
+    residuals : ndarray, shape (v,)
+    prior_sds : ndarray, shape (p,), infinite without a prior
+    prior_residuals : ndarray, shape (p,), (theta - mean)/sd, zero without a prior
+    fixed : ndarray of bool, shape (p,), parameters to leave out, such as those at a bound
+    """
+    v, p = jacobian.shape
+    moving = np.ones(p, dtype=bool) if fixed is None else ~fixed
+    stacked = np.vstack([jacobian, np.diag(1.0 / prior_sds)])[:, moving]
+    norms = np.sqrt(np.sum(stacked**2, axis=0))
+    acting = norms > 1e-12 * max(float(norms.max(initial=0.0)), 1e-290)
+    scaled = stacked[:, acting] / norms[acting]
+    u, s, vt = np.linalg.svd(scaled, full_matrices=False)
+    kept = s > SMALLEST_SINGULAR_VALUE * (s[0] if s.size else 1.0)
+    flat_share = np.sum(vt[~kept] ** 2, axis=0)
+    fixed_by_data = flat_share < LARGEST_SHARE_OF_FLAT_DIRECTION
+    half = (vt[kept] / s[kept, None]) / norms[acting]
+    small = half.T @ half
+    small[~fixed_by_data] = np.nan
+    small[:, ~fixed_by_data] = np.nan
+    positions = np.flatnonzero(moving)
+    at = positions[acting]
+    covariance = np.full((p, p), np.nan)
+    covariance[np.ix_(at, at)] = small
+    determined = np.zeros(p, dtype=bool)
+    determined[at] = fixed_by_data
+    inert = np.zeros(p, dtype=bool)
+    inert[positions[~acting]] = True
+    everything = np.concatenate([residuals, prior_residuals])
+    decrease = float(np.sum((u[:, kept].T @ everything) ** 2))
+    return Curvature(u[:v, kept], covariance, determined, inert, decrease)
+
+
+def pushed_against_bounds(
+    theta: Floats, lower: Floats, upper: Floats, gradient: Floats, scale: Floats
+) -> NDArray[np.bool_]:
+    """Parameters within a thousandth of their scale of a bound that the fit would cross, shape (p,)."""
+    near = 1e-3 * scale
+    at_lower = (theta - lower < near) & (gradient > 0)
+    at_upper = (upper - theta < near) & (gradient < 0)
+    return np.asarray(at_lower | at_upper)
+
+
+def why_not_determined(name: str, inert: bool, at_bound: bool, partners: Sequence[str]) -> str:
+    """Why a parameter has no interval, in words."""
+    if at_bound:
+        return f"{name} is pushed against its bound"
+    if inert:
+        return f"{name} has no effect on any fitted point"
+    if partners:
+        return f"only a combination of {name} with {', '.join(partners)} is determined"
+    return f"the data fix {name} to no better than a factor of 100"

@@ -1,0 +1,129 @@
+"""What one cell says: a number, a time, or that there is none."""
+
+from __future__ import annotations
+
+import math
+import re
+from typing import NamedTuple
+
+from kinetics_db.engine.units import convert, is_unit, kind_of_unit
+
+MISSING = frozenset(
+    [
+        "",
+        "-",
+        "--",
+        "---",
+        "\u2013",
+        "\u2014",
+        "n/a",
+        "na",
+        "#n/a",
+        "nan",
+        "nd",
+        "n.d.",
+        "n.d",
+        "null",
+        "none",
+    ]
+)
+_NUMBER = {
+    ".": re.compile(r"[+-]?(?:\d{1,40}(?:\.\d{0,40})?|\.\d{1,40})(?:[eE][+-]?\d{1,4})?"),
+    ",": re.compile(r"[+-]?(?:\d{1,40}(?:,\d{1,40})?|,\d{1,40})(?:[eE][+-]?\d{1,4})?"),
+}
+_CLOCK = re.compile(r"([+-]?)(?:(\d{1,4}):)?(\d{1,4}):(\d{1,2}(?:[.,]\d{1,9})?)")
+_THOUSANDS = re.compile(r"[+-]?\d{1,3}(?:,\d{3})+(?:\.\d*)?|[+-]?\d{1,3}(?:[. ']\d{3})+(?:,\d*)?")
+_INFINITE = re.compile(r"[+-]?(?:inf(?:inity)?|\u221e)", re.IGNORECASE)
+
+
+class Cell(NamedTuple):
+    """``kind`` is 'number', 'missing', 'limit' (beyond a limit), or 'wrong' for the reason ``why``."""
+
+    kind: str
+    value: float = math.nan
+    why: str = ""
+
+
+class Clock(NamedTuple):
+    """How the time column's numbers and colons are read; ``unit`` '' when the header states none."""
+
+    unit: str
+    colons: str = ""  # '', 'h:mm' or 'mm:ss' when the header states it
+
+
+def number_cell(text: str, decimal: str) -> Cell:
+    """Read a stripped cell of a signal column."""
+    if _NUMBER[decimal].fullmatch(text):
+        value = float(text.replace(",", "."))
+        if math.isinf(value):
+            return Cell("wrong", why="is too large for a number")
+        return Cell("number", value)
+    if text.lower() in MISSING:
+        return Cell("missing")
+    if text[0] in "<>\u2264\u2265" and _NUMBER[decimal].fullmatch(text.lstrip("<>=\u2264\u2265 ")):
+        return Cell("limit")
+    return Cell("wrong", why=_why(text, decimal))
+
+
+def _why(text: str, decimal: str) -> str:
+    if text[0] in "=@":
+        return "is a formula; export values, not formulas"
+    if text[0] == "#":
+        return "is a spreadsheet error"
+    if _INFINITE.fullmatch(text):
+        return "is infinite"
+    if _THOUSANDS.fullmatch(text):
+        return "looks like a number with thousands separators; export it without them"
+    if _NUMBER["," if decimal == "." else "."].fullmatch(text):
+        return f"has another decimal sign than '{decimal}'"
+    return "is not a number"
+
+
+def time_cell(text: str, decimal: str, clock: Clock) -> Cell:
+    """Read a stripped cell of the time column; the value is in s."""
+    plain = number_cell(text, decimal)
+    if plain.kind == "number":
+        if clock.unit:
+            return Cell("number", convert(plain.value, clock.unit, "s"))
+        if plain.value == 0:
+            return plain  # zero is zero in every unit
+        return Cell("wrong", why="has no unit, and the header states none for time")
+    if plain.kind in ("missing", "limit"):
+        return Cell("wrong", why="is no time; every row needs one")
+    match = _CLOCK.fullmatch(text)
+    if match:
+        return _clock_cell(match, clock)
+    number = re.match(_NUMBER[decimal].pattern, text)
+    unit = text[number.end() :].strip() if number else ""
+    if number and is_unit(unit) and kind_of_unit(unit) == "time":
+        return Cell("number", convert(float(number.group().replace(",", ".")), unit, "s"))
+    return plain
+
+
+def _clock_cell(match: re.Match[str], clock: Clock) -> Cell:
+    sign, hours, middle, last = match.groups()
+    low = float(last.replace(",", "."))
+    if hours is None and clock.colons == "h:mm":
+        seconds = int(middle) * 3600.0 + low * 60.0
+    elif hours is None:
+        if clock.unit and convert(1.0, clock.unit, "s") >= 3600:
+            return Cell("wrong", why="can be h:mm or mm:ss; write h:mm:ss")
+        seconds = int(middle) * 60.0 + low
+    else:
+        if int(middle) >= 60:
+            return Cell("wrong", why="has 60 or more minutes after the hours")
+        seconds = int(hours) * 3600.0 + int(middle) * 60.0 + low
+    if low >= 60:
+        return Cell("wrong", why="has 60 or more after the last colon")
+    return Cell("number", -seconds if sign == "-" else seconds)
+
+
+def looks_like_value(text: str, decimal: str) -> bool:
+    """Whether a cell could stand in a row of data (in any column)."""
+    if number_cell(text, decimal).kind in ("number", "missing", "limit") or _INFINITE.fullmatch(text):
+        return True
+    return time_cell(text, decimal, Clock("s")).kind == "number"
+
+
+def is_number(text: str, decimal: str) -> bool:
+    return _NUMBER[decimal].fullmatch(text) is not None

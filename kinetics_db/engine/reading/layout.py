@@ -1,0 +1,324 @@
+"""How a delimited text is laid out: comments, delimiter, decimal sign, header, first row of data.
+
+Nothing is decided from one line. Each pair of delimiter and decimal sign is judged by how many rows of a
+sample it makes sense of; the header is the line above the data that names a time column.
+"""
+
+from __future__ import annotations
+
+import csv
+import re
+from collections import Counter
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from kinetics_db.engine.reading.cells import is_number, looks_like_value
+from kinetics_db.engine.reading.headers import is_units_row, parse_header
+from kinetics_db.engine.reading.options import DELIMITERS, ReadingOptions
+from kinetics_db.errors import InvalidInput, Problem
+
+MAX_LINE = 200_000
+MAX_COLUMNS = 2_000
+SAMPLE = 300
+SAMPLE_CHARACTERS = 150_000
+HEADER_SEARCH = 2_000
+
+_RULE = re.compile(r"[-=_+|;,\s*]+")
+_BELOW_ONE_OR_ODD = re.compile(r"(?<![\d.,])[+-]?0*,\d|\d,(?:\d{1,2}|\d{4,})(?!\d)|\d{4,},\d|,\d+[eE]")
+_DELIMITER_NAMES = {
+    "\t": "tabs", ";": "semicolons", "|": "bars", ",": "commas", " ": "blanks",
+}  # fmt: skip
+
+
+@dataclass(frozen=True)
+class Layout:
+    """Line numbers count from 1; ``header`` and ``units_row`` are cells, ``first`` the first row of data."""
+
+    delimiter: str
+    decimal: str
+    width: int
+    header: tuple[str, ...]
+    units_row: tuple[str, ...]
+    first: int
+    preamble: tuple[tuple[int, str], ...]
+    trailing: bool
+    notes: tuple[str, ...]
+
+
+def split_line(line: str, delimiter: str, number: int) -> list[str]:
+    """Stripped cells of one line; quoted cells may hold the delimiter."""
+    if '"' not in line:
+        cells = line.split() if delimiter == " " else line.split(delimiter)
+        return [cell.strip() for cell in cells]
+    try:
+        text = " ".join(line.split()) if delimiter == " " else line
+        rows = list(csv.reader([text], delimiter=delimiter, skipinitialspace=True, strict=True))
+    except csv.Error as error:
+        problem = Problem(
+            f"quotation marks do not match ({error})", line=number, cure='"..." around whole cells'
+        )
+        raise InvalidInput(problem) from error
+    return [cell.strip() for cell in rows[0]] if rows else []
+
+
+def find_layout(lines: Sequence[str], options: ReadingOptions) -> Layout:
+    """Layout of the text.
+
+    Raises
+    ------
+    InvalidInput
+        when no delimiter gives a table, the decimal sign can be read in two ways, or there is no header.
+    """
+    for number, line in enumerate(lines, start=1):
+        if len(line) > MAX_LINE:
+            raise InvalidInput(
+                Problem("the line is too long", line=number, cure=f"at most {MAX_LINE} characters")
+            )
+    notes: list[str] = []
+    stated = None
+    first_line = next((i for i, line in enumerate(lines) if line.strip()), 0)
+    separator = re.fullmatch(r'"?sep=(.)"?', lines[first_line].strip(" "), re.IGNORECASE)
+    if separator and separator[1] in _DELIMITER_NAMES:
+        stated = separator[1]
+        notes.append(f"line {first_line + 1} states the delimiter")
+    if options.delimiter is not None:
+        stated = DELIMITERS[options.delimiter]
+    skipped = {first_line + 1} if separator else set()
+    sample = _sample(lines, options, skipped)
+    delimiter, decimal, width = _best_pair(sample, stated, options)
+    search = _Search(lines, options, delimiter, decimal, width, skipped)
+    header_line, header, units_line, units_row, first = search.header()
+    trailing = len(header) == width + 1 and header[-1] == ""
+    if len(header) == width + 1 and not trailing:
+        width += 1  # the last cell of every row is missing
+    if decimal == ",":
+        _refuse_thousands(lines, first, delimiter, options)
+    preamble = tuple(
+        (n, lines[n - 1])
+        for n in range(1, first)
+        if n not in (header_line, units_line) and n not in skipped and lines[n - 1].strip()
+    )
+    notes += _describe(delimiter, decimal, header_line, units_line)
+    return Layout(
+        delimiter, decimal, width, tuple(header[:width]), tuple(units_row[:width]), first, preamble, trailing,
+        tuple(notes),
+    )  # fmt: skip
+
+
+def is_comment(line: str, options: ReadingOptions, delimiter: str | None) -> bool:
+    """Whether a stripped line is a comment; ';' begins one only where it is not the delimiter."""
+    if line.startswith(options.comment_prefixes):
+        return True
+    return line.startswith(";") and delimiter not in (None, ";")
+
+
+def _sample(lines: Sequence[str], options: ReadingOptions, skipped: set[int]) -> list[tuple[int, str]]:
+    """Head and later lines, without blank lines and comments, numbered."""
+    step = max(1, (len(lines) - 2 * SAMPLE) // SAMPLE)
+    sample = []
+    for part in (range(min(2 * SAMPLE, len(lines))), range(2 * SAMPLE, len(lines), step)):
+        characters = 0
+        for i in part:
+            line = lines[i].strip()
+            if line and i + 1 not in skipped and not is_comment(line, options, None):
+                sample.append((i + 1, lines[i]))
+                characters += len(line)
+            if characters > SAMPLE_CHARACTERS:
+                break
+    return sample
+
+
+def _best_pair(
+    sample: list[tuple[int, str]], stated: str | None, options: ReadingOptions
+) -> tuple[str, str, int]:
+    best: tuple[int, int, int] = (0, 0, 0)
+    found: tuple[str, str, int] | None = None
+    for delimiter in [stated] if stated else list(_DELIMITER_NAMES):
+        for decimal in [options.decimal] if options.decimal else [".", ","]:
+            score, width = _score(sample, delimiter, decimal)
+            if score > best:
+                best, found = score, (delimiter, decimal, width)
+    if found is None:
+        raise InvalidInput(
+            "no rows of numbers were found",
+            cure="columns separated by tabs, semicolons, bars, commas or blanks, under a header line; "
+            "or state the options delimiter and decimal",
+        )
+    return found
+
+
+def _score(sample: list[tuple[int, str]], delimiter: str, decimal: str) -> tuple[tuple[int, int, int], int]:
+    """(rows fully understood, rows half understood, width) and the width that most such rows have."""
+    full: Counter[int] = Counter()
+    half: Counter[int] = Counter()
+    for number, line in sample:
+        if delimiter not in line.strip():
+            continue
+        try:
+            cells = split_line(line, delimiter, number)
+        except InvalidInput:
+            continue
+        if delimiter == "," and decimal == "," and '"' not in line:
+            continue  # decimal commas between commas are readable only inside quotation marks
+        if len(cells) > 2 and cells[-1] == "":
+            cells.pop()  # a trailing delimiter; a last cell that is missing gives the same width elsewhere
+            full_width = len(cells) + 1
+        else:
+            full_width = len(cells)
+        known = [looks_like_value(cell, decimal) for cell in cells]
+        numbers = sum(is_number(cell, decimal) for cell in cells)
+        if len(cells) < 2 or not numbers:
+            continue
+        for width in {len(cells), full_width}:
+            full[width] += all(known)
+            half[width] += 2 * sum(known) >= len(cells)
+    if not half:
+        return (0, 0, 0), 0
+    width = max(half, key=lambda w: (full[w], half[w], -w))
+    if half[width] == 0:
+        return (0, 0, 0), 0
+    return (full[width], half[width], width), width
+
+
+def _refuse_thousands(lines: Sequence[str], first: int, delimiter: str, options: ReadingOptions) -> None:
+    """'1,234' in every cell can be 1.234 or 1234: only another cell can tell."""
+    if options.decimal is not None:
+        return
+    doubtful: tuple[int, str] | None = None
+    for number in range(first, len(lines) + 1):
+        line = lines[number - 1]
+        if "," not in line or is_comment(line.strip(), options, delimiter):
+            continue
+        both = re.search(r"\d{1,3}(?:,\d{3}\.|\.\d{3},)\d*", line)
+        if both:
+            message = f"'{both.group()}' has thousands separators"
+            raise InvalidInput(Problem(message, line=number, cure="export the numbers without them"))
+        if _BELOW_ONE_OR_ODD.search(line):
+            return
+        if doubtful is None:
+            cells = [c for c in split_line(line, delimiter, number) if re.fullmatch(r"[+-]?\d{1,3},\d{3}", c)]
+            doubtful = (number, cells[0]) if cells else None
+    if doubtful is None:
+        return
+    message = (
+        f"'{doubtful[1]}' can be a decimal comma or a thousands separator, and no other cell tells which"
+    )
+    cure = "state the option decimal: ',' if it is a decimal comma; else export without thousands separators"
+    raise InvalidInput(Problem(message, line=doubtful[0], field="decimal", cure=cure))
+
+
+class _Search:
+    """The search for header, units row and first row of data."""
+
+    def __init__(
+        self, lines: Sequence[str], options: ReadingOptions, delimiter: str, decimal: str, width: int,
+        skipped: set[int],
+    ) -> None:  # fmt: skip
+        self.lines, self.options, self.skipped = lines, options, skipped
+        self.delimiter, self.decimal, self.width = delimiter, decimal, width
+
+    def header(self) -> tuple[int, list[str], int, list[str], int]:
+        """Header's line (0: none), its cells, the units row's line and cells, and the first line of data."""
+        if self.options.header_line == 0:
+            return self._below(0, list(self.options.columns or ()))
+        if self.options.header_line is not None:
+            number = self.options.header_line
+            if number > len(self.lines):
+                message = f"the file has {len(self.lines)} lines, no line {number}"
+                raise InvalidInput(message, field="header_line")
+            return self._below(number, self._cells(number, header=True))
+        named: tuple[int, list[str]] | None = None
+        fallback: tuple[int, list[str]] | None = None
+        for number in range(1, min(len(self.lines), HEADER_SEARCH) + 1):
+            line = self.lines[number - 1].strip()
+            if not line or number in self.skipped:
+                continue
+            cells = self._cells(number, header=True)
+            if not is_comment(line, self.options, self.delimiter):
+                if self._is_header(cells):
+                    found = self._below(number, cells)
+                    if self._is_data(found[-1]):
+                        return found
+                    named = named or (number, cells)
+                elif self._is_data(number):
+                    break
+                elif not _RULE.fullmatch(line) and not is_units_row(cells):
+                    fallback = (number, cells)
+            elif self._is_header(cells) and self._is_data(self._next(number)):
+                return self._below(number, cells)  # a header behind a comment sign
+        if named is not None:
+            return self._below(*named)
+        if fallback is None:
+            message = "no header line with the names of the columns was found"
+            cure = "a header such as 't / min'; or state the options header_line and columns"
+            raise InvalidInput(Problem(message, line=1, field="header_line", cure=cure))
+        return self._below(*fallback)
+
+    def _below(self, number: int, header: list[str]) -> tuple[int, list[str], int, list[str], int]:
+        following = self._next(number)
+        units_line, units_row = 0, [""] * len(header)
+        while following <= len(self.lines):
+            cells = self._cells(following, header=True)
+            if not units_line and is_units_row(cells) and len(cells) in (self.width, self.width + 1):
+                units_line, units_row = following, cells
+            elif not _RULE.fullmatch(self.lines[following - 1]):
+                break
+            following = self._next(following)
+        return number, header, units_line, units_row, following
+
+    def _next(self, number: int) -> int:
+        """Number of the next line that is no comment and not blank; past the end when there is none."""
+        for candidate in range(number + 1, len(self.lines) + 1):
+            line = self.lines[candidate - 1].strip()
+            if line and candidate not in self.skipped and not is_comment(line, self.options, self.delimiter):
+                return candidate
+        return len(self.lines) + 1
+
+    def _cells(self, number: int, *, header: bool = False) -> list[str]:
+        line = self.lines[number - 1]
+        if header:
+            for prefix in self.options.comment_prefixes:
+                line = line.strip(" ").removeprefix(prefix)
+        try:
+            cells = split_line(line, self.delimiter, number)
+        except InvalidInput:
+            return [line]
+        if header and self.delimiter == " " and len(cells) != self.width:
+            # 't / min   A / mM': names hold single blanks, columns stand two or more apart
+            cells = re.split(r" {2,}|\t", line.strip())
+        return cells
+
+    def _fits(self, cells: list[str]) -> bool:
+        return len(cells) in (self.width, self.width + 1)
+
+    def _is_header(self, cells: list[str]) -> bool:
+        if not self._fits(cells):
+            return False
+        if self.options.time_column is not None:
+            wanted = self.options.time_column
+            return any(wanted in (cell, parse_header(cell).name) for cell in cells)
+        headers = [parse_header(cell) for cell in cells]
+        times = [h for h in headers if h.is_time]
+        others = [c for c, h in zip(cells, headers, strict=True) if not h.is_time]
+        if any(h.unit or h.clock for h in times):
+            return True
+        # 'Time; 12:30' above the header is an entry about the file, not a header
+        return bool(times) and not all(looks_like_value(cell, self.decimal) for cell in others)
+
+    def _is_data(self, number: int) -> bool:
+        if number > len(self.lines):
+            return False
+        cells = self._cells(number)
+        if not self._fits(cells) or (len(cells) > self.width and cells[-1]):
+            return False
+        known = sum(looks_like_value(cell, self.decimal) for cell in cells)
+        return known == len(cells) and any(is_number(cell, self.decimal) for cell in cells)
+
+
+def _describe(delimiter: str, decimal: str, header_line: int, units_line: int) -> list[str]:
+    notes = [f"columns are separated by {_DELIMITER_NAMES[delimiter]}"]
+    notes.append(f"decimal sign: {'point' if decimal == '.' else 'comma'}")
+    notes.append(f"line {header_line} is the header" if header_line else "no header; columns named as stated")
+    if units_line:
+        notes.append(f"line {units_line} holds the units")
+    return notes

@@ -1,0 +1,1 @@
+"""From a network and its conditions to curves and sensitivities."""

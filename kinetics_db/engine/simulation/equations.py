@@ -1,0 +1,278 @@
+"""The rate equations of a network as NumPy arrays: d[X]/dt, their Jacobian and their parameter derivatives.
+
+Every mass-action rate is a monomial k * product([X]^n), and so is each of its derivatives. All monomials of
+a network are gathered at once; rates, Jacobian and parameter derivatives are then one matrix product.
+Written-out laws and their exact derivatives come from a tape and join the same product.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Callable, Mapping, Sequence
+from functools import lru_cache
+
+import numpy as np
+from numpy.typing import NDArray
+from scipy.sparse import csr_array
+
+from kinetics_db.engine.network.model import Network, Side
+from kinetics_db.engine.simulation.computed import ComputedConstants
+from kinetics_db.engine.simulation.tape import Tape, power
+
+Floats = NDArray[np.float64]
+Ints = NDArray[np.intp]
+DENSE_LIMIT = 60_000  # elements
+
+
+class Equations:
+    """A network compiled for integration. Immutable once made; `Bound` holds one run's numbers.
+
+    Attributes
+    ----------
+    species, constants : as in the network
+    net : ndarray, shape (s, c)
+        Net stoichiometric numbers of each channel (a direction of a mass-action step); zero for held species.
+    """
+
+    def __init__(self, network: Network) -> None:
+        self.network = network
+        self.species = network.species
+        self.constants = network.constants
+        self.computed = ComputedConstants(network)
+        self.held = np.array([name in network.held for name in network.species], dtype=bool)
+        self._at = {name: i for i, name in enumerate(network.species)}
+        self._powers: dict[tuple[int, float], int] = {}
+        self._compile_channels()
+        self._compile_laws()
+
+    def species_index(self, name: str) -> int:
+        return self._at[name]
+
+    @property
+    def needs_temperature(self) -> bool:
+        return self.law_tape.uses_temperature or self.computed.uses_temperature
+
+    def _compile_channels(self) -> None:
+        channels: list[tuple[str, dict[int, float], Floats]] = []
+        for step in self.network.steps:
+            if step.constant is None:
+                continue
+            net = self._net(step.reactants, step.products)
+            channels.append((step.constant, self._orders(step.reactants), net))
+            if step.reverse_constant is not None:
+                channels.append((step.reverse_constant, self._orders(step.products), -net))
+        s = len(self.species)
+        self.channel_constants = tuple(name for name, _, _ in channels)
+        self.net = np.array([net for _, _, net in channels]).reshape(len(channels), s).T.copy()
+        rows = [self._factors(orders) for _, orders, _ in channels]
+        entries: list[tuple[int, int, float]] = []  # channel, species, order in it
+        for c, (_, orders, _) in enumerate(channels):
+            for i, order in orders.items():
+                entries.append((c, i, order))
+                rows.append(self._factors({**orders, i: order - 1.0}))
+        self.entry_channel = np.array([e[0] for e in entries], dtype=np.intp)
+        self.entry_species = np.array([e[1] for e in entries], dtype=np.intp)
+        self.entry_order = np.array([e[2] for e in entries])
+        self.factor_index, self.power_slots = self._gather(rows)
+
+    def _compile_laws(self) -> None:
+        laws = [(step, step.law) for step in self.network.steps if step.law is not None]
+        s = len(self.species)
+        net = [self._net(step.reactants, step.products) for step, _ in laws]
+        self.law_net = np.array(net).reshape(len(laws), s).T.copy()
+        names = self.computed.names
+        self.law_tape = Tape([law for _, law in laws], species=self.species, names=names)
+
+    def _net(self, reactants: Side, products: Side) -> Floats:
+        net = np.zeros(len(self.species))
+        for name, number in reactants:
+            net[self._at[name]] -= number
+        for name, number in products:
+            net[self._at[name]] += number
+        net[self.held] = 0.0
+        return net
+
+    def _orders(self, side: Side) -> dict[int, float]:
+        orders: dict[int, float] = {}
+        for name, number in side:
+            orders[self._at[name]] = orders.get(self._at[name], 0.0) + number
+        return orders
+
+    def _factors(self, orders: Mapping[int, float]) -> list[int | tuple[int, float]]:
+        factors: list[int | tuple[int, float]] = []
+        for i, order in orders.items():
+            if order == 0.0:
+                continue
+            if order > 0 and order == int(order) and order <= 4:
+                factors.extend([i] * int(order))
+            else:
+                factors.append((i, order))
+        return factors
+
+    def _gather(self, rows: Sequence[list[int | tuple[int, float]]]) -> tuple[Ints, list[tuple[int, float]]]:
+        """Index array, shape (q, monomials), into [species..., 1, powers...]."""
+        s = len(self.species)
+        slots: list[tuple[int, float]] = []
+        depth = max((len(row) for row in rows), default=1) or 1
+        index = np.full((depth, len(rows)), s, dtype=np.intp)
+        for column, row in enumerate(rows):
+            for q, factor in enumerate(row):
+                if isinstance(factor, tuple):
+                    if factor not in slots:
+                        slots.append(factor)
+                    index[q, column] = s + 1 + slots.index(factor)
+                else:
+                    index[q, column] = factor
+        return index, slots
+
+    def bind(
+        self,
+        constants: Floats,
+        *,
+        temperature: float | None = None,
+        wanted: Sequence[int] = (),
+        scales: Floats | None = None,
+    ) -> Bound:
+        """Equations at given values of `network.constants`, with derivatives to the `wanted` ones.
+
+        Parameters
+        ----------
+        constants : ndarray, shape (len(network.constants),)
+        temperature : K
+        wanted : positions in `network.constants`
+        scales : ndarray, shape (len(wanted),), factor on each parameter derivative; 1 when None
+        """
+        return Bound(self, constants, temperature, wanted, scales)
+
+
+@lru_cache(maxsize=64)
+def equations_of(network: Network) -> Equations:
+    """Compiled equations of a network, kept for the next call."""
+    return Equations(network)
+
+
+def _product(matrix: Floats) -> Callable[[Floats, Floats], object]:
+    """matrix @ vector into an array; sparse where the matrix is large, as nearly all of it is then zero."""
+    if matrix.size <= DENSE_LIMIT:
+        dense = np.ascontiguousarray(matrix)
+        return lambda vector, out: np.dot(dense, vector, out=out)
+    sparse = csr_array(matrix)
+
+    def apply(vector: Floats, out: Floats) -> None:
+        out[:] = np.asarray(sparse @ vector)
+
+    return apply
+
+
+class Bound:
+    """The equations of one run: evaluates f, J and df/dp at a state into arrays of its own.
+
+    Not safe for use by two threads at once.
+    """
+
+    def __init__(
+        self,
+        equations: Equations,
+        constants: Floats,
+        temperature: float | None,
+        wanted: Sequence[int],
+        scales: Floats | None,
+    ) -> None:
+        self.equations = equations
+        self.s = s = len(equations.species)
+        self.p = p = len(wanted)
+        values, gradient = equations.computed.evaluate(constants, temperature)
+        self.values = values
+        name_at = {name: i for i, name in enumerate(equations.computed.names)}
+        channel = np.array([name_at[name] for name in equations.channel_constants], dtype=np.intp)
+        k = values[channel]
+        dvalues: Floats = gradient[:, list(wanted)]
+        dk = dvalues[channel]
+        if scales is not None:
+            dk = dk * scales
+            dvalues = dvalues * scales
+        n_c, n_e = len(channel), len(equations.entry_channel)
+        tape = equations.law_tape
+        n_l = tape.outputs
+        self._n_c, self._n_m = n_c, n_c + n_e
+        n_y, n_k = len(tape.species_entries), len(tape.name_entries)
+        total = n_c + n_e + n_l + n_y + n_k
+
+        rates = np.zeros((s, total))
+        rates[:, :n_c] = equations.net * k
+        at_l = n_c + n_e
+        rates[:, at_l : at_l + n_l] = equations.law_net
+        jacobian_t = np.zeros((s, s, total))  # [j, i] = d f_i / d y_j
+        for e in range(n_e):
+            c, j = equations.entry_channel[e], equations.entry_species[e]
+            jacobian_t[j, :, n_c + e] += equations.net[:, c] * k[c] * equations.entry_order[e]
+        at_y = at_l + n_l
+        for e, (law, j) in enumerate(tape.species_entries):
+            jacobian_t[j, :, at_y + e] += equations.law_net[:, law]
+        parameters = np.zeros((p, s, total))
+        for c in range(n_c):
+            parameters[:, :, c] += dk[c][:, None] * equations.net[:, c]
+        at_k = at_y + n_y
+        for e, (law, name) in enumerate(tape.name_entries):
+            parameters[:, :, at_k + e] += dvalues[name][:, None] * equations.law_net[:, law]
+
+        flat_jacobian = jacobian_t.reshape(s * s, total)
+        self._to_rates = _product(np.hstack([rates[:, :n_c], rates[:, at_l:at_y]]))
+        self._to_jacobian = _product(flat_jacobian)
+        self._to_all = _product(np.concatenate([rates, flat_jacobian, parameters.reshape(p * s, total)]))
+        self._monomials = np.zeros(total)
+        self._few = np.zeros(n_c + n_l)
+        self._x = np.ones(s + 1 + len(equations.power_slots))
+        self._index = equations.factor_index
+        self._index_few = np.ascontiguousarray(equations.factor_index[:, :n_c])
+        self._gathered = np.zeros(self._index.shape)
+        self._gathered_few = np.zeros(self._index_few.shape)
+        self._flat = np.zeros(s + s * s + p * s)
+        self._jac = np.zeros(s * s)
+        self._out = np.zeros(s)
+        self._powers = equations.power_slots
+        self._tail: list[float] = [*values.tolist(), math.nan if temperature is None else temperature]
+        self._tape = tape if n_l else None
+        # views into the flat result
+        self.f = self._flat[:s]
+        self.jt = self._flat[s : s + s * s].reshape(s, s)
+        self.dfdp = self._flat[s + s * s :].reshape(p, s)
+
+    def _load(self, y: Floats) -> None:
+        x = self._x
+        x[: self.s] = y
+        for slot, (i, order) in enumerate(self._powers):
+            x[self.s + 1 + slot] = power(float(y[i]), order)
+
+    def rates(self, y: Floats) -> Floats:
+        """d[X]/dt at y, shape (s,); the array is overwritten by the next call. Raises ArithmeticError or
+        ValueError where a written-out law is not defined."""
+        self._load(y)
+        g, few, n_c = self._gathered_few, self._few, self._n_c
+        self._x.take(self._index_few, out=g, mode="clip")
+        np.multiply.reduce(g, axis=0, out=few[:n_c])
+        if self._tape is not None:
+            few[n_c:] = self._tape.run(y.tolist() + self._tail, derivatives=False)
+        self._to_rates(few, self._out)
+        return self._out
+
+    def _fill_monomials(self, y: Floats) -> Floats:
+        self._load(y)
+        g, m, n = self._gathered, self._monomials, self._n_m
+        self._x.take(self._index, out=g, mode="clip")
+        if len(g) == 2:
+            np.multiply(g[0], g[1], out=m[:n])
+        else:
+            np.multiply.reduce(g, axis=0, out=m[:n])
+        if self._tape is not None:
+            m[n:] = self._tape.run(y.tolist() + self._tail, derivatives=True)
+        return m
+
+    def evaluate(self, y: Floats) -> None:
+        """Fill `f` (s,), `jt` (s, s; transposed Jacobian) and `dfdp` (p, s; scaled) at y."""
+        self._to_all(self._fill_monomials(y), self._flat)
+
+    def jacobian_transposed(self, y: Floats) -> Floats:
+        """[j, i] = d f_i / d y_j, shape (s, s); overwritten by the next call."""
+        self._to_jacobian(self._fill_monomials(y), self._jac)
+        return self._jac.reshape(self.s, self.s)

@@ -1,0 +1,53 @@
+"""Evidence: how well a model version explains each run, and how the versions compare."""
+
+from __future__ import annotations
+
+import json
+from typing import Any
+
+from django.db import models
+from django.db.models import Q
+
+from kinetics_db.provenance.models import ImmutableRecord
+
+VERDICTS = ("agrees", "consistent", "strained", "disagrees", "not tested")
+
+
+class ModelEvidence(ImmutableRecord):
+    """Evidence of one fit result as a whole, with the thresholds it was judged by."""
+
+    result = models.OneToOneField("fits.FitResult", on_delete=models.PROTECT, related_name="evidence")
+    aicc = models.FloatField(null=True)
+    bic = models.FloatField(null=True)
+    data_key = models.CharField(max_length=64, help_text="equal where points and weights are the same")
+
+    class Meta:
+        verbose_name = "model evidence"
+
+    def __str__(self) -> str:
+        return f"evidence of {self.result}"
+
+    @property
+    def content(self) -> dict[str, Any]:
+        """Plain values: per model, per run, per run and observable; thresholds."""
+        return dict(json.loads(bytes(self.canonical)))
+
+
+class RunEvidence(models.Model):
+    """Verdict of one run under one fit result: the relational copy, for the grid."""
+
+    evidence = models.ForeignKey(ModelEvidence, on_delete=models.PROTECT, related_name="runs")
+    run_revision = models.ForeignKey("runs.RunRevision", on_delete=models.PROTECT, related_name="+")
+    table = models.ForeignKey("measurements.ConcentrationTable", on_delete=models.PROTECT, related_name="+")
+    verdict = models.CharField(max_length=12)
+    p_value = models.FloatField(null=True)
+    nrmse = models.FloatField(null=True)
+
+    class Meta:
+        constraints = [
+            models.UniqueConstraint(fields=["evidence", "table"], name="one_verdict_a_table"),
+            models.CheckConstraint(condition=Q(verdict__in=VERDICTS), name="verdict_is_known"),
+        ]
+
+    def __str__(self) -> str:
+        return f"{self.run_revision}: {self.verdict}"

@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class FitsConfig(AppConfig):
+    name = "kinetics_db.fits"

@@ -1,0 +1,47 @@
+"""Reads about background work."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+from datetime import timedelta
+
+from django.conf import settings
+from django.db.models import Q, QuerySet
+from django.db.models.functions import Now
+
+from kinetics_db.errors import NotFound
+from kinetics_db.jobs.models import Attempt, Job
+
+
+def job_for(*, kind: str, subject_id: int) -> Job:
+    """The job of a request; NotFound when none was asked for."""
+    job = Job.objects.filter(kind=kind, subject_id=subject_id).first()
+    if job is None:
+        raise NotFound(f"no background work was asked for {kind} {subject_id}")
+    return job
+
+
+def jobs_for(*, kind: str, subject_ids: Sequence[int]) -> dict[int, Job]:
+    """Jobs of several requests by request id, in one query."""
+    return {job.subject_id: job for job in Job.objects.filter(kind=kind, subject_id__in=subject_ids)}
+
+
+def attempts_of(job: Job) -> list[Attempt]:
+    """Attempts at a job in order."""
+    return list(job.attempt_set.order_by("number"))
+
+
+def open_count() -> int:
+    """How many jobs are waiting or running."""
+    return Job.objects.filter(state__in=Job.OPEN).count()
+
+
+def overdue() -> QuerySet[Job]:
+    """Running jobs whose lease ran out, by the database's clock."""
+    return Job.objects.filter(state=Job.State.RUNNING, lease_until__lt=Now())
+
+
+def unheard() -> QuerySet[Job]:
+    """Waiting jobs whose bell was last rung long ago, or never."""
+    limit = Now() - timedelta(seconds=settings.JOB_RESEND_AFTER_SECONDS)
+    return Job.objects.filter(state=Job.State.WAITING).filter(Q(rung__isnull=True) | Q(rung__lt=limit))

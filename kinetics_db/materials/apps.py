@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class MaterialsConfig(AppConfig):
+    name = "kinetics_db.materials"

@@ -1,0 +1,224 @@
+"""Entering compounds, lots and stocks. Entering a name again makes its next revision."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+from kinetics_db.accounts.models import User
+from kinetics_db.engine import amounts
+from kinetics_db.engine.canonical import digest
+from kinetics_db.engine.units import convert
+from kinetics_db.errors import InvalidInput, NotFound
+from kinetics_db.materials.models import (
+    Compound,
+    CompoundRevision,
+    Lot,
+    LotRevision,
+    MaterialRevision,
+    Stock,
+    StockComponent,
+    StockRevision,
+)
+from kinetics_db.materials.selectors import compound_named, lot_named
+from kinetics_db.materials.sources import engine_lot, stock_content
+from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.provenance.services import note_write, recording, save_record
+
+
+@dataclass(frozen=True)
+class Portion:
+    """What goes into a stock: a lot (by code) or a compound (by name), an amount in any unit, its uncertainty."""
+
+    value: float
+    unit: str
+    lot: str | None = None
+    compound: str | None = None
+    uncertainty: float = 0.0
+
+
+def enter_compound(
+    *,
+    user: User,
+    project_id: int,
+    name: str,
+    formula: str = "",
+    molar_mass: float | None = None,
+    density: tuple[float, str] | None = None,
+    hazard_statements: Sequence[str] = (),
+    reason: str = "",
+) -> CompoundRevision:
+    """Enter a compound: molar mass in g/mol, density with its unit, GHS hazard statements (H codes)."""
+    require_contributor(user=user, project_id=project_id)
+    name = _name(name, "name", "a compound")
+    _positive(molar_mass, "molar_mass", "g/mol")
+    content = {
+        "format": "ratewright/compound/1",
+        "name": name,
+        "formula": formula.strip(),
+        "molar_mass": molar_mass,
+        "density": None if density is None else float(convert(density[0], density[1], "g/L")),
+        "hazard_statements": list(hazard_statements),
+    }
+    _positive(content["density"], "density", "g/L")  # type: ignore[arg-type]
+    with recording(user=user):
+        compound, made = Compound.objects.get_or_create(project_id=project_id, name=name)
+        _note_if(made, "compound", compound.pk, project_id, name)
+        Compound.objects.select_for_update().get(pk=compound.pk)
+        return _next_revision(
+            CompoundRevision(compound=compound),
+            CompoundRevision.objects.filter(compound=compound),
+            user=user, content=content, project_id=project_id, label=name, reason=reason,
+        )
+
+
+def enter_lot(
+    *,
+    user: User,
+    project_id: int,
+    code: str,
+    compound: str,
+    purity: float = 1.0,
+    purity_uncertainty: float = 0.0,
+    supplier_note: str = "",
+    reason: str = "",
+) -> LotRevision:
+    """Enter a bottle: purity as a mass fraction with its standard uncertainty."""
+    require_contributor(user=user, project_id=project_id)
+    code = _name(code, "code", "a lot")
+    with recording(user=user):
+        of = compound_named(project_id=project_id, name=compound)
+        amounts.Lot(code, compound, purity=purity, purity_u=purity_uncertainty)  # checks the numbers
+        lot, made = Lot.objects.get_or_create(project_id=project_id, code=code, defaults={"compound": of.compound})
+        if lot.compound_id != of.compound_id:
+            raise InvalidInput(
+                f"lot '{code}' is of '{lot.compound}'", field="compound", cure="another code for another compound"
+            )
+        _note_if(made, "lot", lot.pk, project_id, code)
+        Lot.objects.select_for_update().get(pk=lot.pk)
+        content = {
+            "format": "ratewright/lot/1",
+            "code": code,
+            "compound": of.digest,
+            "purity": purity,
+            "purity_u": purity_uncertainty,
+            "supplier_note": supplier_note,
+        }
+        return _next_revision(
+            LotRevision(lot=lot, compound_revision=of),
+            LotRevision.objects.filter(lot=lot),
+            user=user, content=content, project_id=project_id, label=code, reason=reason, parents=[of],
+        )
+
+
+def make_up_stock(
+    *,
+    user: User,
+    project_id: int,
+    code: str,
+    portions: Sequence[Portion],
+    volume: tuple[float, str],
+    volume_uncertainty: float = 0.0,
+    solvent: str = "",
+    made_on: str = "",
+    temperature: float | None = None,
+    reason: str = "",
+) -> StockRevision:
+    """Make up a stock solution from lots or compounds to a volume (with its unit and standard uncertainty).
+
+    ``made_on`` is an ISO date, ``temperature`` the make-up temperature in K.
+    """
+    require_contributor(user=user, project_id=project_id)
+    code = _name(code, "code", "a stock")
+    if not portions:
+        raise InvalidInput("the stock holds nothing", field="portions", cure="at least one lot or compound")
+    with recording(user=user):
+        stock, made = Stock.objects.get_or_create(project_id=project_id, code=code)
+        _note_if(made, "stock", stock.pk, project_id, code)
+        Stock.objects.select_for_update().get(pk=stock.pk)
+        resolved = [_resolve(project_id, portion) for portion in portions]
+        recipe = amounts.StockRecipe(
+            owner=f"stock {code}",
+            components=tuple(
+                amounts.Charge(engine_lot(of, lot), portion.value, portion.unit, portion.uncertainty)
+                for portion, (of, lot) in zip(portions, resolved, strict=True)
+            ),
+            volume=amounts.TotalVolume(
+                float(convert(volume[0], volume[1], "L")), float(convert(volume_uncertainty, volume[1], "L"))
+            ),
+        )
+        made_up = amounts.stock_concentrations(recipe)
+        content = stock_content(
+            code=code, recipe=recipe, made_up=made_up, portions=portions, resolved=resolved,
+            solvent=solvent, made_on=made_on, temperature=temperature,
+        )
+        parents = [part for pair in resolved for part in pair if part is not None]
+        revision = _next_revision(
+            StockRevision(stock=stock),
+            StockRevision.objects.filter(stock=stock),
+            user=user, content=content, project_id=project_id, label=code, reason=reason, parents=parents,
+        )
+        if not revision.components.exists():
+            by_name = {of.compound.name: (of, lot) for of, lot in resolved}
+            StockComponent.objects.bulk_create(
+                StockComponent(
+                    revision=revision,
+                    compound_revision=by_name[part.compound][0],
+                    lot_revision=by_name[part.compound][1],
+                    concentration=part.concentration,
+                )
+                for part in made_up.components
+            )
+    return revision
+
+
+def _resolve(project_id: int, portion: Portion) -> tuple[CompoundRevision, LotRevision | None]:
+    if (portion.lot is None) == (portion.compound is None):
+        raise InvalidInput("a portion needs a lot or a compound", field="portions", cure="exactly one of both")
+    try:
+        if portion.lot is not None:
+            lot = lot_named(project_id=project_id, code=portion.lot)
+            return lot.compound_revision, lot
+        return compound_named(project_id=project_id, name=str(portion.compound)), None
+    except NotFound as error:
+        raise InvalidInput(str(error), field="portions") from error
+
+
+def _next_revision(  # type: ignore[no-untyped-def]
+    revision, earlier, *, user, content, project_id, label, reason, parents=()
+):
+    """Store the next revision of a material, or give back the newest one when nothing has changed."""
+    latest: MaterialRevision | None = earlier.order_by("-number").first()
+    if latest is not None and latest.digest == digest(content):
+        return latest
+    revision.number = (latest.number if latest else 0) + 1
+    revision.reason = reason
+    return save_record(
+        revision,
+        user=user,
+        content=content,
+        parents=[*parents, *([latest] if latest else [])],
+        project_id=project_id,
+        label=f"{label} r{revision.number}",
+        verb="revised" if latest else "entered",
+        reason=reason,
+        digest_before=latest.digest if latest else "",
+    )
+
+
+def _note_if(made: bool, kind: str, pk: int, project_id: int, label: str) -> None:
+    if made:
+        note_write(verb="made", record_kind=kind, record_id=pk, project_id=project_id, label=label)
+
+
+def _name(text: str, field: str, what: str) -> str:
+    name = text.strip()
+    if not name or len(name) > 80:
+        raise InvalidInput(f"{what} needs a {field}", field=field, cure="1 to 80 characters")
+    return name
+
+
+def _positive(value: float | None, field: str, unit: str) -> None:
+    if value is not None and not (math.isfinite(value) and value > 0):
+        raise InvalidInput(f"{field.replace('_', ' ')} {value}", field=field, cure=f"above 0 {unit}")

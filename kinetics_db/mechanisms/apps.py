@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class MechanismsConfig(AppConfig):
+    name = "kinetics_db.mechanisms"

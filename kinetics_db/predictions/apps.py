@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class PredictionsConfig(AppConfig):
+    name = "kinetics_db.predictions"

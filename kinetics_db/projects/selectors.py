@@ -1,0 +1,53 @@
+"""Which projects a person sees, and what they may do there; the one rule for browser, REST and workers."""
+
+from __future__ import annotations
+
+from django.db.models import QuerySet
+
+from kinetics_db.accounts.models import User
+from kinetics_db.errors import NotFound, NotPermitted
+from kinetics_db.projects.models import Membership, Project
+
+RANK = {Membership.Role.READER: 1, Membership.Role.CONTRIBUTOR: 2, Membership.Role.OWNER: 3}
+
+
+def projects_visible_to(user: User) -> QuerySet[Project]:
+    """Projects that the person is a member of."""
+    return Project.objects.filter(memberships__user=user).order_by("slug")
+
+
+def project_named(*, user: User, slug: str) -> Project:
+    """A project that the person may see; NotFound otherwise, so that names leak nothing."""
+    project = projects_visible_to(user).filter(slug=slug).first()
+    if project is None:
+        raise NotFound(f"there is no project '{slug}' that you may see")
+    return project
+
+
+def role_in(*, user: User, project_id: int) -> str | None:
+    """The person's role, or None when not a member."""
+    return Membership.objects.filter(user=user, project_id=project_id).values_list("role", flat=True).first()
+
+
+def require_reader(*, user: User, project_id: int) -> None:
+    """NotFound unless the person is a member."""
+    if role_in(user=user, project_id=project_id) is None:
+        raise NotFound("there is no such record that you may see")
+
+
+def require_contributor(*, user: User, project_id: int) -> None:
+    """NotFound for strangers, NotPermitted for readers."""
+    _require(user, project_id, Membership.Role.CONTRIBUTOR)
+
+
+def require_owner(*, user: User, project_id: int) -> None:
+    """NotFound for strangers, NotPermitted for all but owners."""
+    _require(user, project_id, Membership.Role.OWNER)
+
+
+def _require(user: User, project_id: int, needed: Membership.Role) -> None:
+    role = role_in(user=user, project_id=project_id)
+    if role is None:
+        raise NotFound("there is no such record that you may see")
+    if RANK[Membership.Role(role)] < RANK[needed]:
+        raise NotPermitted(f"this needs the role '{needed}' in the project; yours is '{role}'")

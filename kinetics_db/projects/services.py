@@ -1,0 +1,54 @@
+"""Making projects and giving roles."""
+
+from __future__ import annotations
+
+import re
+
+from kinetics_db.accounts.models import User
+from kinetics_db.errors import Conflict, InvalidInput
+from kinetics_db.projects.models import Membership, Project
+from kinetics_db.projects.selectors import require_owner
+from kinetics_db.provenance.services import note_write, recording
+
+SLUG = re.compile(r"[a-z0-9]+(?:-[a-z0-9]+)*\Z")
+
+
+def create_project(*, user: User, slug: str, name: str, description: str = "", invented: bool = False) -> Project:
+    """Make a project; its maker becomes its first owner."""
+    if not SLUG.match(slug) or len(slug) > 60:
+        raise InvalidInput(
+            f"'{slug[:80]}' cannot be a project's short name", field="slug", cure="small letters, digits and single hyphens"
+        )
+    if not name.strip():
+        raise InvalidInput("the project has no name", field="name", cure="any text")
+    with recording(user=user):
+        if Project.objects.filter(slug=slug).exists():
+            raise Conflict(f"there is a project '{slug}' already")
+        project = Project.objects.create(
+            slug=slug, name=name.strip(), description=description, invented=invented, created_by=user
+        )
+        Membership.objects.create(project=project, user=user, role=Membership.Role.OWNER)
+        note_write(verb="made", record_kind="project", record_id=project.pk, project_id=project.pk, label=slug)
+    return project
+
+
+def set_member(*, user: User, project: Project, member: User, role: str) -> Membership:
+    """Give a person a role; a project always keeps an owner."""
+    require_owner(user=user, project_id=project.pk)
+    if role not in Membership.Role.values:
+        raise InvalidInput(f"'{role}' is not a role", field="role", cure=", ".join(Membership.Role.values))
+    with recording(user=user):
+        others = Membership.objects.select_for_update().filter(project=project, role=Membership.Role.OWNER)
+        if role != Membership.Role.OWNER and not others.exclude(user=member).exists():
+            raise Conflict("a project keeps at least one owner; make somebody else an owner first")
+        membership, _ = Membership.objects.update_or_create(
+            project=project, user=member, defaults={"role": role}
+        )
+        note_write(
+            verb=f"gave role {role}",
+            record_kind="membership",
+            record_id=membership.pk,
+            project_id=project.pk,
+            label=member.get_username(),
+        )
+    return membership

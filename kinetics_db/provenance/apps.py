@@ -1,0 +1,5 @@
+from django.apps import AppConfig
+
+
+class ProvenanceConfig(AppConfig):
+    name = "kinetics_db.provenance"

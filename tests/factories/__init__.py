@@ -1,0 +1,1 @@
+"""Records for tests, made through the same services that people use."""
