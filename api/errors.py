@@ -44,7 +44,9 @@ def problem_details(error: Exception, context: dict[str, Any]) -> Response | Non
             return Response(body, status=status, content_type="application/problem+json")
     response = exception_handler(error, context)
     if response is not None:
-        title = "Not found" if isinstance(error, Http404) else str(getattr(error, "default_detail", "Refused"))
+        title = (
+            "Not found" if isinstance(error, Http404) else str(getattr(error, "default_detail", "Refused"))
+        )
         if isinstance(error, PermissionDenied | exceptions.PermissionDenied):
             title = "Not permitted"
         detail = response.data.get("detail", title) if isinstance(response.data, dict) else response.data

@@ -45,7 +45,9 @@ class RatewrightError(Exception):
 class InvalidInput(RatewrightError):
     """What was given cannot be used; holds every problem found, not only the first."""
 
-    def __init__(self, problems: str | Problem | Sequence[Problem], *, field: str | None = None, cure: str = ""):
+    def __init__(
+        self, problems: str | Problem | Sequence[Problem], *, field: str | None = None, cure: str = ""
+    ):
         if isinstance(problems, str):
             problems = [Problem(problems, field=field, cure=cure)]
         elif isinstance(problems, Problem):

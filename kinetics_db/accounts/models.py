@@ -7,7 +7,9 @@ from django.db import models
 class User(AbstractUser):
     """A person. Our own model from the start, since it cannot be swapped in later."""
 
-    time_zone = models.CharField(max_length=64, default="UTC", help_text="IANA name; dates are shown in this zone")
+    time_zone = models.CharField(
+        max_length=64, default="UTC", help_text="IANA name; dates are shown in this zone"
+    )
 
     class Meta(AbstractUser.Meta):
         constraints = [

@@ -15,7 +15,9 @@ def configure() -> Celery:
 
     url = settings.BROKER_URL
     if not url:
-        raise RuntimeError("no broker: set RATEWRIGHT_BROKER_URL, or start everything with `make demo` or `make serve`")
+        raise RuntimeError(
+            "no broker: set RATEWRIGHT_BROKER_URL, or start everything with `make demo` or `make serve`"
+        )
     app.conf.update(
         broker_url=url,
         task_ignore_result=True,
@@ -32,4 +34,3 @@ def configure() -> Celery:
         enable_utc=True,
     )
     return app
-

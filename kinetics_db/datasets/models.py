@@ -25,7 +25,9 @@ class Dataset(ImmutableRecord):
             models.UniqueConstraint(fields=["project", "name", "number"], name="dataset_number"),
             models.UniqueConstraint(fields=["project", "name", "digest"], name="dataset_once"),
             models.CheckConstraint(condition=~Q(name=""), name="dataset_has_a_name"),
-            models.CheckConstraint(condition=Q(basis__in=["mol/L", "relative"]), name="dataset_basis_is_known"),
+            models.CheckConstraint(
+                condition=Q(basis__in=["mol/L", "relative"]), name="dataset_basis_is_known"
+            ),
         ]
 
     def __str__(self) -> str:
@@ -43,7 +45,9 @@ class DatasetItem(models.Model):
     dataset = models.ForeignKey(Dataset, on_delete=models.PROTECT, related_name="items")
     order = models.PositiveIntegerField()
     run_revision = models.ForeignKey("runs.RunRevision", on_delete=models.PROTECT, related_name="+")
-    table = models.ForeignKey("measurements.ConcentrationTable", on_delete=models.PROTECT, related_name="dataset_items")
+    table = models.ForeignKey(
+        "measurements.ConcentrationTable", on_delete=models.PROTECT, related_name="dataset_items"
+    )
 
     class Meta:
         constraints = [

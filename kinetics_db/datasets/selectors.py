@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from django.db.models import F, Q, QuerySet
+
 from kinetics_db.accounts.models import User
 from kinetics_db.datasets.models import Dataset, DatasetItem
 from kinetics_db.errors import NotFound
@@ -22,7 +24,9 @@ def dataset_by_id(*, user: User, dataset_id: int) -> Dataset:
 def items_of(dataset: Dataset) -> list[DatasetItem]:
     """The runs and tables of a dataset in order, with what fits need of them, in one query."""
     return list(
-        dataset.items.select_related("run_revision__run", "table__reduction", "table__signal_table").order_by("order")
+        dataset.items.select_related("run_revision__run", "table__reduction", "table__signal_table").order_by(
+            "order"
+        )
     )
 
 
@@ -49,5 +53,21 @@ def staleness_of(dataset_ids: list[int]) -> dict[int, Staleness]:
                 f"run {run.code} has been revised (r{item.run_revision.number} used, r{run.latest_number} is newest)"
             )
         if hasattr(item.table, "superseded_by"):
-            reasons[item.dataset_id].append(f"table {item.table.number} of run {run.code} has been superseded")
+            reasons[item.dataset_id].append(
+                f"table {item.table.number} of run {run.code} has been superseded"
+            )
     return {dataset_id: Staleness(tuple(found)) for dataset_id, found in reasons.items()}
+
+
+def stale_dataset_ids() -> QuerySet:
+    """Ids of the datasets whose data have changed since, to stand inside another query."""
+    revised = Q(run_revision__number__lt=F("run_revision__run__latest_number"))
+    superseded = Q(table__superseded_by__isnull=False)
+    return DatasetItem.objects.filter(revised | superseded).values("dataset_id")
+
+
+def table_ids_of(dataset_id: int) -> list[int]:
+    """Ids of a dataset's concentration tables, in its order."""
+    return list(
+        DatasetItem.objects.filter(dataset_id=dataset_id).order_by("order").values_list("table_id", flat=True)
+    )

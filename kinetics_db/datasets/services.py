@@ -9,6 +9,7 @@ from kinetics_db.accounts.models import User
 from kinetics_db.datasets.models import Dataset, DatasetItem
 from kinetics_db.engine.canonical import digest
 from kinetics_db.errors import InvalidInput, Problem
+from kinetics_db.measurements.models import ConcentrationTable
 from kinetics_db.measurements.selectors import tables_by_id
 from kinetics_db.projects.selectors import require_contributor
 from kinetics_db.provenance.services import recording, save_record
@@ -46,7 +47,9 @@ def freeze_dataset(
     if not name or len(name) > 120:
         raise InvalidInput("a dataset needs a name", field="name", cure="1 to 120 characters")
     if not table_ids:
-        raise InvalidInput("the dataset has no tables", field="tables", cure="at least one concentration table")
+        raise InvalidInput(
+            "the dataset has no tables", field="tables", cure="at least one concentration table"
+        )
     windows = windows or {}
     with recording(user=user):
         tables = tables_by_id(user=user, table_ids=table_ids)
@@ -73,7 +76,10 @@ def freeze_dataset(
             return existing
         latest = Dataset.objects.filter(project_id=project_id, name=name).order_by("-number").first()
         dataset = Dataset(
-            project_id=project_id, name=name, number=(latest.number if latest else 0) + 1, basis=ordered[0].basis
+            project_id=project_id,
+            name=name,
+            number=(latest.number if latest else 0) + 1,
+            basis=ordered[0].basis,
         )
         save_record(
             dataset,
@@ -100,7 +106,12 @@ def _plain(window: Window) -> dict[str, object]:
     }
 
 
-def _problems(project_id, table_ids, tables, windows) -> list[Problem]:  # type: ignore[no-untyped-def]
+def _problems(
+    project_id: int,
+    table_ids: Sequence[int],
+    tables: Mapping[int, ConcentrationTable],
+    windows: Mapping[int, Window],
+) -> list[Problem]:
     found: list[Problem] = []
     for table_id in table_ids:
         if table_id not in tables or tables[table_id].run.project_id != project_id:
@@ -120,7 +131,9 @@ def _problems(project_id, table_ids, tables, windows) -> list[Problem]:  # type:
         )
     for table_id, window in windows.items():
         if table_id not in table_ids:
-            found.append(Problem(f"a window is given for table {table_id}, which is not chosen", field="windows"))
+            found.append(
+                Problem(f"a window is given for table {table_id}, which is not chosen", field="windows")
+            )
             continue
         table = tables[table_id]
         names = table.table.names("concentration")
@@ -133,7 +146,9 @@ def _problems(project_id, table_ids, tables, windows) -> list[Problem]:  # type:
             column, _, row = place.rpartition("@")
             good_row = row == "*" or (row.isdigit() and int(row) < table.rows)
             if (column not in names and column != "*") or not good_row:
-                found.append(Problem(f"'{place}' is no point of table {table}", field="windows", cure="column@row"))
+                found.append(
+                    Problem(f"'{place}' is no point of table {table}", field="windows", cure="column@row")
+                )
             if not reason.strip():
                 found.append(Problem(f"point '{place}' is left out without a reason", field="windows"))
     return found

@@ -38,7 +38,7 @@ def runs_test(residuals: ArrayLike) -> float | None:
 
 
 def probability_of_runs(runs: int, positive: int, negative: int) -> float:
-    """P(number of runs <= runs) among all orders of so many positives and negatives (Swed & Eisenhart 1943)."""
+    """P(number of runs <= runs) when every order of the signs is equally likely (Swed & Eisenhart 1943)."""
     ways = 0
     for r in range(2, runs + 1):
         half = r // 2
@@ -66,7 +66,7 @@ def durbin_watson(residuals: ArrayLike) -> float | None:
 
 
 def holm(probabilities: list[float | None]) -> list[float | None]:
-    """p-values adjusted for being looked at together (Holm, Scand. J. Statist. 6 (1979) 65); None stays None."""
+    """p-values adjusted for being many (Holm, Scand. J. Statist. 6 (1979) 65); None stays None."""
     known = sorted((p, i) for i, p in enumerate(probabilities) if p is not None)
     adjusted: list[float | None] = [None] * len(probabilities)
     highest = 0.0

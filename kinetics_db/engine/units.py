@@ -372,6 +372,8 @@ def parse_quantity(text: str) -> Quantity:
     rest = stripped[match.end() :]
     if re.match(r"[,.]\s*\d", rest):
         raise InvalidInput(f"{text!r} has more than one decimal sign", field="value", cure="write 12.3 mg")
+    if re.match(r"\s*\d", rest):
+        raise InvalidInput(f"{text!r} holds two numbers", field="value", cure="for example 12.3 mg")
     value = float(match.group())
     if not math.isfinite(value):
         raise InvalidInput(f"{match.group()} is too large for a number", field="value")

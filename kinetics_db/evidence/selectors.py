@@ -59,15 +59,21 @@ def grid_of(*, user: User, project_id: int) -> Grid:
         ModelEvidence.objects.filter(result__fit__project_id=project_id)
         .select_related("result__fit__mechanism_version__mechanism", "result__fit__dataset")
         .defer("result__canonical", "result__fit__dataset__canonical", "canonical")
-        .order_by("result__fit__mechanism_version__mechanism__name", "result__fit__mechanism_version__number", "pk")
+        .order_by(
+            "result__fit__mechanism_version__mechanism__name", "result__fit__mechanism_version__number", "pk"
+        )
     )
     newest = {(e.result.fit.mechanism_version_id, e.result.fit.dataset_id): e for e in found}
     chosen = list(newest.values())
     stale = staleness_of(sorted({e.result.fit.dataset_id for e in chosen}))
     columns = tuple(_column(e, chosen, stale) for e in chosen)
     cells = {}
-    rows = RunEvidence.objects.filter(evidence__in=chosen).select_related("run_revision__run", "table__run", "evidence__result")
-    for row in rows.defer("run_revision__canonical", "table__canonical", "evidence__canonical", "evidence__result__canonical"):
+    rows = RunEvidence.objects.filter(evidence__in=chosen).select_related(
+        "run_revision__run", "table__run", "evidence__result"
+    )
+    for row in rows.defer(
+        "run_revision__canonical", "table__canonical", "evidence__canonical", "evidence__result__canonical"
+    ):
         fit_id = row.evidence.result.fit_id
         cells[row.run_revision.run.code, fit_id] = Cell(
             row.verdict, row.p_value, row.nrmse, fit_id, str(row.table)
@@ -76,12 +82,12 @@ def grid_of(*, user: User, project_id: int) -> Grid:
     return Grid(codes, columns, cells)
 
 
-def _column(evidence: ModelEvidence, chosen: Sequence[ModelEvidence], stale: Mapping[int, Staleness]) -> GridColumn:
+def _column(
+    evidence: ModelEvidence, chosen: Sequence[ModelEvidence], stale: Mapping[int, Staleness]
+) -> GridColumn:
     fit = evidence.result.fit
     comparable = [
-        other.aicc
-        for other in chosen
-        if other.aicc is not None and other.data_key == evidence.data_key
+        other.aicc for other in chosen if other.aicc is not None and other.data_key == evidence.data_key
     ]
     delta = evidence.aicc - min(comparable) if evidence.aicc is not None and len(comparable) > 1 else None
     return GridColumn(

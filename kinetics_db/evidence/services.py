@@ -122,7 +122,9 @@ def data_key(computed: Computed) -> str:
     return digest(
         {
             "dataset": computed.fit.dataset.digest,
-            "columns": sorted(column for column, target in request.casting.columns.items() if target is not None),
+            "columns": sorted(
+                column for column, target in request.casting.columns.items() if target is not None
+            ),
             "error model": request.settings.error_model,
         }
     )

@@ -7,9 +7,12 @@ import io
 import math
 from collections.abc import Iterator
 from dataclasses import astuple, dataclass, fields
+from typing import TYPE_CHECKING
 
-from kinetics_db.accounts.models import User
 from kinetics_db.datasets.selectors import dataset_by_id, items_of
+
+if TYPE_CHECKING:
+    from kinetics_db.accounts.models import User
 
 FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 

@@ -49,7 +49,11 @@ def complete_casting(
     taken = [target for target in by_column.values() if target is not None]
     for target in sorted({t for t in taken if taken.count(t) > 1}):
         problems.append(
-            Problem(f"two columns are cast as '{target}'", field="casting.columns", cure="one column an observable")
+            Problem(
+                f"two columns are cast as '{target}'",
+                field="casting.columns",
+                cure="one column an observable",
+            )
         )
     for observable in network.observables:
         if observable.name not in taken:
@@ -61,7 +65,9 @@ def complete_casting(
                 )
             )
     if not taken:
-        problems.append(Problem("no column is cast as anything", field="casting.columns", cure="at least one"))
+        problems.append(
+            Problem("no column is cast as anything", field="casting.columns", cure="at least one")
+        )
     if problems:
         raise InvalidInput(problems)
     return Casting(

@@ -74,7 +74,9 @@ def experiments_of(
 
     experiments = []
     names = unique_names([item.run_revision.run.code for item in data.items])
-    for item, name, run, table, window in zip(data.items, names, data.runs, data.tables, data.windows, strict=True):
+    for item, name, run, table, window in zip(
+        data.items, names, data.runs, data.tables, data.windows, strict=True
+    ):
         charges = []
         for part in run["start"]:
             species = casting.compounds[part["compound"]]
@@ -144,7 +146,11 @@ def _points(
         keep &= times >= window["start"]
     if window["end"] is not None:
         keep &= times <= window["end"]
-    values = np.stack([table.column(c, "concentration") for c in columns], axis=1) if columns else np.empty((times.size, 0))
+    values = (
+        np.stack([table.column(c, "concentration") for c in columns], axis=1)
+        if columns
+        else np.empty((times.size, 0))
+    )
     values = values.copy()
     for place in window["left_out"]:
         column, _, row = place.rpartition("@")
@@ -156,5 +162,13 @@ def _points(
     tabulated = table.names("standard uncertainty")
     sigma = None
     if columns and all(c in tabulated for c in columns):
-        sigma = np.stack([table.column(c, "standard uncertainty") for c in columns], axis=1)[keep]
-    return keep, values[keep], sigma
+        sigma = np.stack([table.column(c, "standard uncertainty") for c in columns], axis=1)
+        if not np.isfinite(sigma[np.isfinite(values)]).any():
+            sigma = None  # none is stated: the fit has to estimate it
+    in_percent = np.array([100.0 if _unit(table, c) == "1" else 1.0 for c in columns])
+    return keep, values[keep] * in_percent, None if sigma is None else sigma[keep] * in_percent
+
+
+def _unit(table: Table, column: str) -> str:
+    """Fractions are fitted as percent, as charges of relative runs are kept."""
+    return table.columns[table.index(column, "concentration")].unit

@@ -67,7 +67,9 @@ class FitResult(ImmutableRecord):
                 condition=Q(status__in=["converged", "stopped", "not converged", "cannot start"]),
                 name="fit_status_is_known",
             ),
-            models.CheckConstraint(condition=Q(seconds__gte=0.0, seconds__lte=1e9), name="fit_seconds_are_finite"),
+            models.CheckConstraint(
+                condition=Q(seconds__gte=0.0, seconds__lte=1e9), name="fit_seconds_are_finite"
+            ),
         ]
 
     def __str__(self) -> str:
@@ -85,7 +87,9 @@ class FittedConstant(models.Model):
     result = models.ForeignKey(FitResult, on_delete=models.PROTECT, related_name="constants")
     name = models.CharField(max_length=200)
     constant = models.CharField(max_length=120)
-    where = models.CharField(max_length=120, blank=True, default="", help_text="group or run; blank: all runs")
+    where = models.CharField(
+        max_length=120, blank=True, default="", help_text="group or run; blank: all runs"
+    )
     value = models.FloatField()
     standard_error = models.FloatField(null=True)
     low = models.FloatField(null=True)

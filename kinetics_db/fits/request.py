@@ -32,7 +32,9 @@ class FitRequest:
         return {
             "casting": self.casting.to_plain(),
             "constants": [asdict(c) for c in sorted(self.constants, key=lambda c: c.name)],
-            "start_concentrations": [asdict(s) for s in sorted(self.start_concentrations, key=lambda s: s.species)],
+            "start_concentrations": [
+                asdict(s) for s in sorted(self.start_concentrations, key=lambda s: s.species)
+            ],
             "settings": asdict(self.settings),
             "without_owners": sorted(set(self.without_owners)),
         }
@@ -62,7 +64,10 @@ def _made(kind: type[Made], entry: Mapping[str, Any], where: str) -> Made:
     unknown = sorted(set(entry) - known)
     if unknown:
         raise InvalidInput(
-            [Problem(f"unknown entry '{name}'", field=f"{where}.{name}", cure=", ".join(sorted(known))) for name in unknown]
+            [
+                Problem(f"unknown entry '{name}'", field=f"{where}.{name}", cure=", ".join(sorted(known)))
+                for name in unknown
+            ]
         )
     values = dict(entry)
     if values.get("prior") is not None and not isinstance(values["prior"], Prior):

@@ -25,7 +25,9 @@ class Job(models.Model):
     kind = models.CharField(max_length=40)
     subject_id = models.BigIntegerField(help_text="id of the request that this job computes")
     state = models.CharField(max_length=10, choices=State, default=State.WAITING)
-    attempts = models.PositiveSmallIntegerField(default=0, help_text="attempts begun; the current fencing token")
+    attempts = models.PositiveSmallIntegerField(
+        default=0, help_text="attempts begun; the current fencing token"
+    )
     attempts_allowed = models.PositiveSmallIntegerField(default=3)
     lease_until = models.DateTimeField(null=True, blank=True)
     progress = models.FloatField(default=0.0)
@@ -39,7 +41,9 @@ class Job(models.Model):
     class Meta:
         constraints = [
             models.UniqueConstraint(fields=["kind", "subject_id"], name="one_job_a_request"),
-            models.CheckConstraint(condition=Q(progress__gte=0.0, progress__lte=1.0), name="job_progress_is_a_share"),
+            models.CheckConstraint(
+                condition=Q(progress__gte=0.0, progress__lte=1.0), name="job_progress_is_a_share"
+            ),
             models.CheckConstraint(
                 condition=~Q(state="running") | Q(lease_until__isnull=False), name="running_job_has_a_lease"
             ),

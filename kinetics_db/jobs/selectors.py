@@ -26,6 +26,11 @@ def jobs_for(*, kind: str, subject_ids: Sequence[int]) -> dict[int, Job]:
     return {job.subject_id: job for job in Job.objects.filter(kind=kind, subject_id__in=subject_ids)}
 
 
+def open_subjects(*, kind: str) -> list[int]:
+    """Ids of the requests of that kind whose work is waiting or running."""
+    return list(Job.objects.filter(kind=kind, state__in=Job.OPEN).values_list("subject_id", flat=True))
+
+
 def attempts_of(job: Job) -> list[Attempt]:
     """Attempts at a job in order."""
     return list(job.attempt_set.order_by("number"))

@@ -15,7 +15,7 @@ from datetime import timedelta
 
 from django.conf import settings
 from django.db import transaction
-from django.db.models import F
+from django.db.models import F, QuerySet
 from django.db.models.functions import Now
 
 from kinetics_db.accounts.models import User
@@ -48,7 +48,9 @@ class Claim:
 def request_job(*, user: User, kind: str, subject_id: int) -> Job:
     """The job of a request, made (and its bell rung on commit) if there is none yet."""
     job, made = Job.objects.get_or_create(
-        kind=kind, subject_id=subject_id, defaults={"requested_by": user, "attempts_allowed": settings.JOB_MAX_ATTEMPTS}
+        kind=kind,
+        subject_id=subject_id,
+        defaults={"requested_by": user, "attempts_allowed": settings.JOB_MAX_ATTEMPTS},
     )
     if made:
         _ring(job.pk)
@@ -127,7 +129,7 @@ def finishing(claim: Claim, *, state: str = Job.State.DONE, message: str = "") -
         yield
 
 
-def _held(claim: Claim):  # type: ignore[no-untyped-def]
+def _held(claim: Claim) -> QuerySet[Job]:
     return Job.objects.filter(pk=claim.job_id, state=Job.State.RUNNING, attempts=claim.token)
 
 
@@ -146,7 +148,9 @@ def give_back(claim: Claim, *, reason: str) -> None:
                 state=Job.State.CRASHED, lease_until=None, finished=Now(), message=reason[:500]
             )
         else:
-            ended = _held(claim).update(state=Job.State.WAITING, lease_until=None, rung=None, message=reason[:500])
+            ended = _held(claim).update(
+                state=Job.State.WAITING, lease_until=None, rung=None, message=reason[:500]
+            )
             if ended:
                 _ring(claim.job_id)
         if ended:
@@ -161,7 +165,9 @@ def request_stop(*, job: Job) -> Job:
         stopped = Job.objects.filter(pk=job.pk, state=Job.State.WAITING).update(
             state=Job.State.STOPPED, stop_requested=True, finished=Now(), message="stopped before it began"
         )
-        if not stopped and not Job.objects.filter(pk=job.pk, state=Job.State.RUNNING).update(stop_requested=True):
+        if not stopped and not Job.objects.filter(pk=job.pk, state=Job.State.RUNNING).update(
+            stop_requested=True
+        ):
             job.refresh_from_db()
             raise Conflict(f"the work has already ended: {job.state}")
     job.refresh_from_db()
@@ -173,12 +179,20 @@ def retry_job(*, job: Job) -> Job:
     with transaction.atomic():
         again = Job.objects.filter(
             pk=job.pk, state__in=[Job.State.STOPPED, Job.State.FAILED, Job.State.CRASHED]
-        ).update(state=Job.State.WAITING, stop_requested=False, finished=None, progress=0.0, message="", rung=None,
+        ).update(
+            state=Job.State.WAITING,
+            stop_requested=False,
+            finished=None,
+            progress=0.0,
+            message="",
+            rung=None,
             attempts_allowed=F("attempts") + settings.JOB_MAX_ATTEMPTS,
         )
         if not again:
             job.refresh_from_db()
-            raise Conflict(f"only work that stopped, failed or crashed can be tried again; this is {job.state}")
+            raise Conflict(
+                f"only work that stopped, failed or crashed can be tried again; this is {job.state}"
+            )
         _ring(job.pk)
     job.refresh_from_db()
     return job
@@ -209,7 +223,10 @@ def sweep() -> Swept:
                 crashed += count
             elif job.stop_requested:
                 count = taken.update(
-                    state=Job.State.STOPPED, lease_until=None, finished=Now(), message="stopped; its worker was lost"
+                    state=Job.State.STOPPED,
+                    lease_until=None,
+                    finished=Now(),
+                    message="stopped; its worker was lost",
                 )
             else:
                 count = taken.update(state=Job.State.WAITING, lease_until=None, rung=None)

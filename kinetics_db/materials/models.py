@@ -129,7 +129,8 @@ class StockComponent(models.Model):
         constraints = [
             models.UniqueConstraint(fields=["revision", "compound_revision"], name="compound_once_a_stock"),
             models.CheckConstraint(
-                condition=Q(concentration__gte=0.0, concentration__lte=1e3), name="stock_concentration_is_finite"
+                condition=Q(concentration__gte=0.0, concentration__lte=1e3),
+                name="stock_concentration_is_finite",
             ),
         ]
 

@@ -64,7 +64,5 @@ def stock_named(*, project_id: int, code: str) -> StockRevision:
 def components_of(revision: StockRevision) -> list[StockComponent]:
     """Compounds in a stock, in the order of its recipe."""
     return list(
-        revision.components.select_related(
-            "compound_revision__compound", "lot_revision__lot"
-        ).order_by("pk")
+        revision.components.select_related("compound_revision__compound", "lot_revision__lot").order_by("pk")
     )

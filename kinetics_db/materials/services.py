@@ -5,6 +5,9 @@ from __future__ import annotations
 import math
 from collections.abc import Sequence
 from dataclasses import dataclass
+from typing import Any, TypeVar
+
+from django.db.models import QuerySet
 
 from kinetics_db.accounts.models import User
 from kinetics_db.engine import amounts
@@ -25,6 +28,8 @@ from kinetics_db.materials.selectors import compound_named, lot_named
 from kinetics_db.materials.sources import engine_lot, stock_content
 from kinetics_db.projects.selectors import require_contributor
 from kinetics_db.provenance.services import note_write, recording, save_record
+
+Revision = TypeVar("Revision", bound=MaterialRevision)
 
 
 @dataclass(frozen=True)
@@ -69,7 +74,11 @@ def enter_compound(
         return _next_revision(
             CompoundRevision(compound=compound),
             CompoundRevision.objects.filter(compound=compound),
-            user=user, content=content, project_id=project_id, label=name, reason=reason,
+            user=user,
+            content=content,
+            project_id=project_id,
+            label=name,
+            reason=reason,
         )
 
 
@@ -90,10 +99,14 @@ def enter_lot(
     with recording(user=user):
         of = compound_named(project_id=project_id, name=compound)
         amounts.Lot(code, compound, purity=purity, purity_u=purity_uncertainty)  # checks the numbers
-        lot, made = Lot.objects.get_or_create(project_id=project_id, code=code, defaults={"compound": of.compound})
+        lot, made = Lot.objects.get_or_create(
+            project_id=project_id, code=code, defaults={"compound": of.compound}
+        )
         if lot.compound_id != of.compound_id:
             raise InvalidInput(
-                f"lot '{code}' is of '{lot.compound}'", field="compound", cure="another code for another compound"
+                f"lot '{code}' is of '{lot.compound}'",
+                field="compound",
+                cure="another code for another compound",
             )
         _note_if(made, "lot", lot.pk, project_id, code)
         Lot.objects.select_for_update().get(pk=lot.pk)
@@ -108,7 +121,12 @@ def enter_lot(
         return _next_revision(
             LotRevision(lot=lot, compound_revision=of),
             LotRevision.objects.filter(lot=lot),
-            user=user, content=content, project_id=project_id, label=code, reason=reason, parents=[of],
+            user=user,
+            content=content,
+            project_id=project_id,
+            label=code,
+            reason=reason,
+            parents=[of],
         )
 
 
@@ -150,14 +168,25 @@ def make_up_stock(
         )
         made_up = amounts.stock_concentrations(recipe)
         content = stock_content(
-            code=code, recipe=recipe, made_up=made_up, portions=portions, resolved=resolved,
-            solvent=solvent, made_on=made_on, temperature=temperature,
+            code=code,
+            recipe=recipe,
+            made_up=made_up,
+            portions=portions,
+            resolved=resolved,
+            solvent=solvent,
+            made_on=made_on,
+            temperature=temperature,
         )
         parents = [part for pair in resolved for part in pair if part is not None]
         revision = _next_revision(
             StockRevision(stock=stock),
             StockRevision.objects.filter(stock=stock),
-            user=user, content=content, project_id=project_id, label=code, reason=reason, parents=parents,
+            user=user,
+            content=content,
+            project_id=project_id,
+            label=code,
+            reason=reason,
+            parents=parents,
         )
         if not revision.components.exists():
             by_name = {of.compound.name: (of, lot) for of, lot in resolved}
@@ -175,7 +204,9 @@ def make_up_stock(
 
 def _resolve(project_id: int, portion: Portion) -> tuple[CompoundRevision, LotRevision | None]:
     if (portion.lot is None) == (portion.compound is None):
-        raise InvalidInput("a portion needs a lot or a compound", field="portions", cure="exactly one of both")
+        raise InvalidInput(
+            "a portion needs a lot or a compound", field="portions", cure="exactly one of both"
+        )
     try:
         if portion.lot is not None:
             lot = lot_named(project_id=project_id, code=portion.lot)
@@ -185,11 +216,19 @@ def _resolve(project_id: int, portion: Portion) -> tuple[CompoundRevision, LotRe
         raise InvalidInput(str(error), field="portions") from error
 
 
-def _next_revision(  # type: ignore[no-untyped-def]
-    revision, earlier, *, user, content, project_id, label, reason, parents=()
-):
+def _next_revision(
+    revision: Revision,
+    earlier: QuerySet[Revision],
+    *,
+    user: User,
+    content: dict[str, Any],
+    project_id: int,
+    label: str,
+    reason: str,
+    parents: Sequence[MaterialRevision] = (),
+) -> Revision:
     """Store the next revision of a material, or give back the newest one when nothing has changed."""
-    latest: MaterialRevision | None = earlier.order_by("-number").first()
+    latest = earlier.order_by("-number").first()
     if latest is not None and latest.digest == digest(content):
         return latest
     revision.number = (latest.number if latest else 0) + 1

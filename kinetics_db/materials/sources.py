@@ -3,10 +3,32 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import dataclass
 from typing import Any
 
 from kinetics_db.engine import amounts
-from kinetics_db.materials.models import CompoundRevision, LotRevision, StockRevision
+from kinetics_db.materials.models import CompoundRevision, LotRevision, MaterialRevision, StockRevision
+
+
+@dataclass(frozen=True)
+class Source:
+    """Where a charge came from: a compound (with its lot, where one is named) or a stock."""
+
+    compound: CompoundRevision | None = None
+    lot: LotRevision | None = None
+    stock: StockRevision | None = None
+
+    @property
+    def records(self) -> list[MaterialRevision]:
+        """The records behind it."""
+        return [part for part in (self.compound, self.lot, self.stock) if part is not None]
+
+    def for_engine(self) -> amounts.Lot | amounts.Stock:
+        """As the engine reads it."""
+        if self.stock is not None:
+            return engine_stock(self.stock)
+        assert self.compound is not None, "a source is a compound or a stock"
+        return engine_lot(self.compound, self.lot)
 
 
 def engine_lot(of: CompoundRevision, lot: LotRevision | None) -> amounts.Lot:

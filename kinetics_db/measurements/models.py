@@ -99,7 +99,9 @@ class ConcentrationTable(StoredTable):
         RELATIVE = "relative"
 
     run = models.ForeignKey("runs.Run", on_delete=models.PROTECT, related_name="concentration_tables")
-    signal_table = models.ForeignKey(SignalTable, on_delete=models.PROTECT, related_name="concentration_tables")
+    signal_table = models.ForeignKey(
+        SignalTable, on_delete=models.PROTECT, related_name="concentration_tables"
+    )
     reduction = models.ForeignKey(Reduction, on_delete=models.PROTECT, related_name="concentration_tables")
     number = models.PositiveIntegerField()
     basis = models.CharField(max_length=10, choices=Basis)

@@ -31,7 +31,12 @@ NAME = re.compile(r"[^\x00-\x1f/\\]{1,255}\Z")
 
 
 def preview_file(
-    *, user: User, run: Run, data: bytes, reader: str = "delimited text", options: Mapping[str, Any] | None = None
+    *,
+    user: User,
+    run: Run,
+    data: bytes,
+    reader: str = "delimited text",
+    options: Mapping[str, Any] | None = None,
 ) -> reading.ReadResult:
     """What would be understood of a file; stores nothing. InvalidInput says what is wrong on which line."""
     require_contributor(user=user, project_id=run.project_id)
@@ -55,7 +60,9 @@ def store_file(
     require_contributor(user=user, project_id=run.project_id)
     name = name.strip()
     if not NAME.match(name):
-        raise InvalidInput("the file has no usable name", field="name", cure="1 to 255 characters without / or \\")
+        raise InvalidInput(
+            "the file has no usable name", field="name", cure="1 to 255 characters without / or \\"
+        )
     result = _read(data, reader, options)
     with recording(user=user):
         Run.objects.select_for_update().get(pk=run.pk)
@@ -150,7 +157,9 @@ def reduce_signals(
     return table
 
 
-def supersede_table(*, user: User, older: ConcentrationTable, newer: ConcentrationTable, reason: str) -> TableSupersession:
+def supersede_table(
+    *, user: User, older: ConcentrationTable, newer: ConcentrationTable, reason: str
+) -> TableSupersession:
     """Declare that a newer table of the same run replaces an older one; fits on the older one become stale."""
     require_contributor(user=user, project_id=older.run.project_id)
     if older.run_id != newer.run_id:

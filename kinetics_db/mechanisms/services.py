@@ -26,7 +26,11 @@ def write_version(*, user: User, project_id: int, name: str, text: str, note: st
         mechanism, made = Mechanism.objects.get_or_create(project_id=project_id, name=name)
         if made:
             note_write(
-                verb="made", record_kind="mechanism", record_id=mechanism.pk, project_id=project_id, label=name
+                verb="made",
+                record_kind="mechanism",
+                record_id=mechanism.pk,
+                project_id=project_id,
+                label=name,
             )
         # The lock makes numbering safe when two people save at once.
         mechanism = Mechanism.objects.select_for_update().get(pk=mechanism.pk)

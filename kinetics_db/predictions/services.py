@@ -11,7 +11,7 @@ from kinetics_db.engine.canonical import digest
 from kinetics_db.engine.prediction import predict_curves
 from kinetics_db.errors import InvalidInput
 from kinetics_db.fits.experiments import data_of
-from kinetics_db.fits.models import FitResult
+from kinetics_db.fits.models import Fit, FitResult
 from kinetics_db.fits.request import FitRequest
 from kinetics_db.mechanisms.selectors import network_of
 from kinetics_db.predictions.models import Prediction
@@ -60,7 +60,10 @@ def predict_run(
         )
     rows = [i for i, _ in chosen]
     covariance = np.array(
-        [[np.nan if content["covariance"][i][j] is None else content["covariance"][i][j] for j in rows] for i in rows]
+        [
+            [np.nan if content["covariance"][i][j] is None else content["covariance"][i][j] for j in rows]
+            for i in rows
+        ]
     ).reshape(len(rows), len(rows))
     predicted = predict_curves(
         network,
@@ -101,7 +104,9 @@ def predict_run(
         )
 
 
-def _outside(fit, request: FitRequest, start: Mapping[str, float], temperature: float | None) -> list[str]:  # type: ignore[no-untyped-def]
+def _outside(
+    fit: Fit, request: FitRequest, start: Mapping[str, float], temperature: float | None
+) -> list[str]:
     """In words, which conditions lie outside what the fitted runs covered."""
     data = data_of(fit.dataset)
     found = []

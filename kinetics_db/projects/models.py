@@ -12,7 +12,9 @@ class Project(models.Model):
     name = models.CharField(max_length=200)
     description = models.TextField(blank=True, default="")
     invented = models.BooleanField(default=False, help_text="the data are invented, for demonstration")
-    verdict_thresholds = models.JSONField(default=dict, blank=True, help_text="only what differs from the defaults")
+    verdict_thresholds = models.JSONField(
+        default=dict, blank=True, help_text="only what differs from the defaults"
+    )
     created = models.DateTimeField(auto_now_add=True)
     created_by = models.ForeignKey(settings.AUTH_USER_MODEL, on_delete=models.PROTECT, related_name="+")
 

@@ -2,6 +2,10 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
+from contextlib import contextmanager
+from contextvars import ContextVar
+
 from django.db.models import QuerySet
 
 from kinetics_db.accounts.models import User
@@ -24,9 +28,31 @@ def project_named(*, user: User, slug: str) -> Project:
     return project
 
 
+_remembered: ContextVar[dict[tuple[int | None, int], str | None] | None] = ContextVar("roles", default=None)
+
+
+@contextmanager
+def roles_remembered() -> Iterator[None]:
+    """Look each role up once inside this block; for a page, which reads many things at one moment.
+
+    Never around writes: a role that is taken away meanwhile would still count until the block ends.
+    """
+    token = _remembered.set({})
+    try:
+        yield
+    finally:
+        _remembered.reset(token)
+
+
 def role_in(*, user: User, project_id: int) -> str | None:
     """The person's role, or None when not a member."""
-    return Membership.objects.filter(user=user, project_id=project_id).values_list("role", flat=True).first()
+    known, key = _remembered.get(), (user.pk, project_id)
+    if known is not None and key in known:
+        return known[key]
+    role = Membership.objects.filter(user=user, project_id=project_id).values_list("role", flat=True).first()
+    if known is not None:
+        known[key] = role
+    return role
 
 
 def require_reader(*, user: User, project_id: int) -> None:

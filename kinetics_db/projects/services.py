@@ -13,11 +13,15 @@ from kinetics_db.provenance.services import note_write, recording
 SLUG = re.compile(r"[a-z0-9]+(?:-[a-z0-9]+)*\Z")
 
 
-def create_project(*, user: User, slug: str, name: str, description: str = "", invented: bool = False) -> Project:
+def create_project(
+    *, user: User, slug: str, name: str, description: str = "", invented: bool = False
+) -> Project:
     """Make a project; its maker becomes its first owner."""
     if not SLUG.match(slug) or len(slug) > 60:
         raise InvalidInput(
-            f"'{slug[:80]}' cannot be a project's short name", field="slug", cure="small letters, digits and single hyphens"
+            f"'{slug[:80]}' cannot be a project's short name",
+            field="slug",
+            cure="small letters, digits and single hyphens",
         )
     if not name.strip():
         raise InvalidInput("the project has no name", field="name", cure="any text")
@@ -28,7 +32,9 @@ def create_project(*, user: User, slug: str, name: str, description: str = "", i
             slug=slug, name=name.strip(), description=description, invented=invented, created_by=user
         )
         Membership.objects.create(project=project, user=user, role=Membership.Role.OWNER)
-        note_write(verb="made", record_kind="project", record_id=project.pk, project_id=project.pk, label=slug)
+        note_write(
+            verb="made", record_kind="project", record_id=project.pk, project_id=project.pk, label=slug
+        )
     return project
 
 

@@ -118,7 +118,9 @@ class AuditEntry(models.Model):
     actor = models.CharField(max_length=150, help_text="user or token name, as it was then")
     user = models.ForeignKey(settings.AUTH_USER_MODEL, null=True, on_delete=models.PROTECT, related_name="+")
     verb = models.CharField(max_length=40)
-    project_id = models.BigIntegerField(null=True, db_index=True, help_text="no foreign key: projects stand above")
+    project_id = models.BigIntegerField(
+        null=True, db_index=True, help_text="no foreign key: projects stand above"
+    )
     record_kind = models.CharField(max_length=40)
     record_id = models.BigIntegerField(null=True)
     record_label = models.CharField(max_length=200, blank=True, default="")

@@ -87,7 +87,9 @@ def keep_bytes(data: bytes) -> StoredBytes:
         try:
             _write_durably(path, data)
         except OSError as error:
-            raise Unavailable(f"the file store {settings.BYTE_STORE_DIR} cannot be written: {error}") from error
+            raise Unavailable(
+                f"the file store {settings.BYTE_STORE_DIR} cannot be written: {error}"
+            ) from error
     return StoredBytes.objects.get_or_create(sha256=sha256, defaults={"size": len(data)})[0]
 
 

@@ -105,8 +105,6 @@ def _append(pending: _Pending) -> None:
             "previous": head.digest,
         }
         head.digest = entry_digest(content)
-        rows.append(
-            AuditEntry(**{**content, "at": now}, user=pending.user, digest=head.digest)
-        )
+        rows.append(AuditEntry(**{**content, "at": now}, user=pending.user, digest=head.digest))
     AuditEntry.objects.bulk_create(rows)
     head.save(update_fields=["sequence", "digest"])

@@ -37,12 +37,24 @@ class ChargeEntry:
 SECTIONS: Mapping[str, Mapping[str, str]] = {
     "vessel": {"name": "text", "material": "text", "stirring": "text", "path": "length"},
     "solvent": {"mixture": "text", "water content": "text", "degassing": "text", "expansion": "text"},
-    "headspace": {"gas": "text", "volume": "volume", "pressure": "pressure", "henry": "text", "k_L a": "text"},
+    "headspace": {
+        "gas": "text",
+        "volume": "volume",
+        "pressure": "pressure",
+        "henry": "text",
+        "k_L a": "text",
+    },
     "catalyst": {"batch": "text", "preactivation": "text"},
     "sampling": {"mode": "text", "quench": "text", "work-up": "text", "sample volume": "volume"},
     "clock": {"zero": "text", "first contact": "time", "instrument offset": "time", "lamp offset": "time"},
     "thermometer": {"name": "text", "calibration": "text", "lag": "time"},
-    "lamp": {"serial": "text", "hours": "text", "warm-up": "time", "distance": "length", "actinometry": "text"},
+    "lamp": {
+        "serial": "text",
+        "hours": "text",
+        "warm-up": "time",
+        "distance": "length",
+        "actinometry": "text",
+    },
     "evaporation": {"note": "text"},
 }
 

@@ -64,8 +64,12 @@ class RunCharge(models.Model):
     compound_revision = models.ForeignKey(
         "materials.CompoundRevision", null=True, on_delete=models.PROTECT, related_name="+"
     )
-    lot_revision = models.ForeignKey("materials.LotRevision", null=True, on_delete=models.PROTECT, related_name="+")
-    stock_revision = models.ForeignKey("materials.StockRevision", null=True, on_delete=models.PROTECT, related_name="+")
+    lot_revision = models.ForeignKey(
+        "materials.LotRevision", null=True, on_delete=models.PROTECT, related_name="+"
+    )
+    stock_revision = models.ForeignKey(
+        "materials.StockRevision", null=True, on_delete=models.PROTECT, related_name="+"
+    )
 
     class Meta:
         constraints = [
@@ -91,7 +95,9 @@ class RunCondition(models.Model):
     class Meta:
         constraints = [
             models.UniqueConstraint(fields=["run", "key"], name="one_value_a_condition"),
-            models.CheckConstraint(condition=Q(value__gte=-1e300, value__lte=1e300), name="condition_is_finite"),
+            models.CheckConstraint(
+                condition=Q(value__gte=-1e300, value__lte=1e300), name="condition_is_finite"
+            ),
         ]
         indexes = [models.Index(fields=["key", "value"], name="condition_search")]
 

@@ -29,7 +29,9 @@ def domain_of(model: type[models.Model]) -> str:
 
 
 @pytest.mark.parametrize(("model", "field"), KEYS, ids=lambda x: getattr(x, "name", None) or x.__name__)
-def test_a_foreign_key_protects_what_it_points_to(model: type[models.Model], field: models.ForeignKey) -> None:
+def test_a_foreign_key_protects_what_it_points_to(
+    model: type[models.Model], field: models.ForeignKey
+) -> None:
     assert field.remote_field.on_delete is models.PROTECT
 
 
@@ -38,7 +40,9 @@ def test_a_foreign_key_points_down_the_layers(model: type[models.Model], field: 
     target = field.related_model
     if not target.__module__.startswith("kinetics_db."):
         return
-    assert ORDER[domain_of(target)] >= ORDER[domain_of(model)], f"{model.__name__}.{field.name} points upwards"
+    assert ORDER[domain_of(target)] >= ORDER[domain_of(model)], (
+        f"{model.__name__}.{field.name} points upwards"
+    )
 
 
 def test_declared_task_names_are_the_registered_ones() -> None:
@@ -66,7 +70,10 @@ def test_every_address_leads_to_a_view() -> None:
 def tracked(suffix: str) -> list[Path]:
     listed = subprocess.run(
         ["git", "ls-files", "--cached", "--others", "--exclude-standard", f"*{suffix}"],
-        cwd=ROOT, capture_output=True, text=True, check=True,
+        cwd=ROOT,
+        capture_output=True,
+        text=True,
+        check=True,
     )
     return [ROOT / line for line in listed.stdout.split("\n") if line and (ROOT / line).exists()]
 

@@ -21,9 +21,7 @@ def siblings(layer: str) -> list[str]:
 
 
 def as_grimp(layers: list[str]) -> list[object]:
-    return [
-        grimp.Layer(*siblings(layer), independent=True) if "|" in layer else layer for layer in layers
-    ]
+    return [grimp.Layer(*siblings(layer), independent=True) if "|" in layer else layer for layer in layers]
 
 
 @pytest.fixture(scope="module")
@@ -36,7 +34,8 @@ def test_every_folder_of_the_house_has_its_place_in_the_layers() -> None:
     here = {
         path.stem
         for path in (ROOT / "kinetics_db").iterdir()
-        if (path.is_dir() and (path / "__init__.py").exists()) or (path.suffix == ".py" and path.stem != "__init__")
+        if (path.is_dir() and (path / "__init__.py").exists())
+        or (path.suffix == ".py" and path.stem != "__init__")
     }
     assert here == named
 
@@ -74,7 +73,11 @@ def test_models_that_import_services_are_found(graph: grimp.ImportGraph, domain:
 
 def test_the_contracts_are_kept() -> None:
     done = subprocess.run(
-        [str(Path(sys.executable).parent / "lint-imports"), "--no-cache"], cwd=ROOT, capture_output=True, text=True, check=False
+        [str(Path(sys.executable).parent / "lint-imports"), "--no-cache"],
+        cwd=ROOT,
+        capture_output=True,
+        text=True,
+        check=False,
     )
     assert done.returncode == 0, done.stdout
 
@@ -92,5 +95,7 @@ def test_the_engine_imports_without_any_framework() -> None:
         "curves = simulate(parse_mechanism('A --k--> B'), constants={'k': 1.0}, start={'A': 1.0}, times=[0.0, 1.0])\n"
         "print(round(float(curves.of('B')[-1]), 6))\n"
     )
-    done = subprocess.run([sys.executable, "-c", program], cwd=ROOT, capture_output=True, text=True, check=False)
+    done = subprocess.run(
+        [sys.executable, "-c", program], cwd=ROOT, capture_output=True, text=True, check=False
+    )
     assert done.stdout.strip() == "0.632121", done.stderr

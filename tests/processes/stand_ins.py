@@ -18,7 +18,10 @@ def child(name: str, code: str, **options: object) -> Child:
 RUNS_FOR_LONG = "print('running', flush=True); import time; time.sleep(300)"
 
 IGNORES_SIGTERM = (
-    "import signal, time; signal.signal(signal.SIGTERM, signal.SIG_IGN); print('deaf', flush=True); time.sleep(300)"
+    "import signal, time\n"
+    "signal.signal(signal.SIGTERM, signal.SIG_IGN)\n"
+    "print('deaf', flush=True)\n"
+    "time.sleep(300)\n"
 )
 
 HAS_A_GRANDCHILD = (

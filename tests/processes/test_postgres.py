@@ -84,7 +84,7 @@ def test_it_starts_runs_and_leaves_nothing(source: str) -> None:
             ).fetchone()
         assert answer == ("UTF8", "off", "60", "", "ratewright")
         if os.geteuid() == 0:
-            assert os.stat(f"/proc/{pid}").st_uid != 0
+            assert Path(f"/proc/{pid}").stat().st_uid != 0
     assert not is_running(pid)
     assert not server.folder.exists()
 
@@ -107,7 +107,9 @@ def test_binaries_that_the_servers_user_cannot_reach_are_copied(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     # As in a checkout below /root: only the folder of the throw-away server itself can be reached.
-    monkeypatch.setattr(postgres, "_reachable_by_all", lambda path: "/rw-pg-" in str(path) or path == Path("/tmp"))
+    monkeypatch.setattr(
+        postgres, "_reachable_by_all", lambda path: "/rw-pg-" in str(path) or path == Path("/tmp")
+    )
     server = ThrowAwayPostgres(find_binaries("", []))
     monkeypatch.setattr(server, "user", server.user or (os.getuid(), os.getgid()))
     if os.geteuid() != 0:
@@ -118,7 +120,9 @@ def test_binaries_that_the_servers_user_cannot_reach_are_copied(
             assert connection.execute("SELECT 1").fetchone() == (1,)
 
 
-def test_a_server_that_cannot_be_made_is_reported_with_its_own_words_and_leaves_nothing(tmp_path: Path) -> None:
+def test_a_server_that_cannot_be_made_is_reported_with_its_own_words_and_leaves_nothing(
+    tmp_path: Path,
+) -> None:
     tools = installation(tmp_path / "bin", "16.1")
     (tools / "initdb").write_text("#!/bin/sh\necho 'initdb: error: no space left' >&2; exit 1\n")
     server = ThrowAwayPostgres(Binaries(tools, 16))
@@ -133,7 +137,8 @@ def test_a_server_that_cannot_be_made_is_reported_with_its_own_words_and_leaves_
 def test_a_killed_owner_leaves_neither_server_nor_files() -> None:
     code = (
         "import time\nfrom kinetics_db.config.processes.postgres import ThrowAwayPostgres\n"
-        "server = ThrowAwayPostgres(); server.start(); print(server.pid, server.folder, flush=True); time.sleep(300)\n"
+        "server = ThrowAwayPostgres(); server.start()\n"
+        "print(server.pid, server.folder, flush=True); time.sleep(300)\n"
     )
     with subprocess.Popen(
         [sys.executable, "-c", code],

@@ -33,7 +33,9 @@ def checkout(tmp_path: Path) -> Path:
 
 def run(checkout: Path, purpose: str = "demo", **environment: str) -> subprocess.CompletedProcess[str]:
     """Run the script as make does, on the Python that runs the suite, with more environment variables."""
-    inherited = {key: value for key, value in os.environ.items() if not key.startswith(("RATEWRIGHT_", "PORT"))}
+    inherited = {
+        key: value for key, value in os.environ.items() if not key.startswith(("RATEWRIGHT_", "PORT"))
+    }
     return subprocess.run(
         [sys.executable, SCRIPT.relative_to(SCRIPT.parents[3]), purpose],
         cwd=checkout,
@@ -63,8 +65,9 @@ def test_it_is_written_in_a_language_that_python_3_6_can_read() -> None:
     tree = ast.parse(SCRIPT.read_text(), feature_version=(3, 7))
     assert not [node for node in ast.walk(tree) if isinstance(node, (ast.NamedExpr, ast.Match))]
     imported = {name.name for node in ast.walk(tree) if isinstance(node, ast.Import) for name in node.names}
-    assert not [node for node in ast.walk(tree) if isinstance(node, ast.ImportFrom)]
-    assert imported <= {"os", "shutil", "sys", "socket", "fcntl", "sqlite3", "platform"}
+    from_modules = {node.module for node in ast.walk(tree) if isinstance(node, ast.ImportFrom)}
+    assert from_modules == {"pathlib"}  # in particular no `from __future__ import annotations`
+    assert imported == {"os", "shutil", "sys", "socket", "fcntl", "sqlite3", "platform"}
 
 
 @pytest.mark.parametrize("version", [(3, 6), (3, 10), (3, 15)])
@@ -108,8 +111,9 @@ def test_a_data_folder_that_cannot_be_made_is_named(checkout: Path, tmp_path: Pa
     done = run(checkout, RATEWRIGHT_VAR=str(folder))
     assert done.returncode == 1
     assert done.stderr == (
-        f"* Cannot write to {folder} (Not a directory), where the data are kept. Make it writable (chown or chmod), "
-        "or work in a copy of your own; RATEWRIGHT_VAR=/some/folder puts it elsewhere.\n"
+        f"* Cannot write to {folder} (Not a directory), where the data are kept. "
+        "Make it writable (chown or chmod), or work in a copy of your own; "
+        "RATEWRIGHT_VAR=/some/folder puts it elsewhere.\n"
     )
 
 
@@ -117,7 +121,7 @@ def test_a_checkout_without_write_permission_is_named(monkeypatch: pytest.Monkey
     def refuse(*_: object) -> None:
         raise PermissionError(13, "Permission denied")
 
-    monkeypatch.setattr("builtins.open", refuse)
+    monkeypatch.setattr(Path, "write_text", refuse)
     line = preflight.not_writable(preflight.checkout(), "the programs are installed")
     assert line is not None
     assert line.startswith(f"Cannot write to {preflight.checkout()} (Permission denied)")
@@ -128,7 +132,7 @@ def test_a_full_disk_is_told_with_what_is_free_and_what_is_needed(
 ) -> None:
     usage = namedtuple("usage", "total used free")
     monkeypatch.setattr(shutil, "disk_usage", lambda _: usage(10**12, 10**12 - 10**8, 10**8))
-    line = preflight.disk_full(str(checkout))
+    line = preflight.disk_full(checkout)
     assert line == f"Only 100 MB are free on the disk of {checkout}; 1000 MB are needed. Free some space."
 
 
@@ -139,7 +143,9 @@ def test_a_busy_port_is_named_with_another_choice(checkout: Path) -> None:
         port = listener.getsockname()[1]
         done = run(checkout, PORT=str(port))
         assert done.returncode == 1
-        assert done.stderr.startswith(f"* Port {port} is taken by another program. Choose another one: make demo PORT=")
+        assert done.stderr.startswith(
+            f"* Port {port} is taken by another program. Choose another one: make demo PORT="
+        )
         assert run(checkout, "test", PORT=str(port)).returncode == 0
 
 
@@ -155,7 +161,8 @@ def test_an_installation_that_runs_already_is_named_with_its_process(checkout: P
     with Supervisor(var / "log", lock=var / "supervisor.lock"):
         done = run(checkout, RATEWRIGHT_VAR=str(var))
     assert done.stderr == (
-        f"* Ratewright already runs from {var} as process {os.getpid()}. Use that one, or stop it: kill {os.getpid()}\n"
+        f"* Ratewright already runs from {var} as process {os.getpid()}. "
+        f"Use that one, or stop it: kill {os.getpid()}\n"
     )
     assert run(checkout, RATEWRIGHT_VAR=str(var)).returncode == 0
 
@@ -164,7 +171,7 @@ def test_asking_does_not_take_the_lock_away(tmp_path: Path) -> None:
     var = tmp_path / "var"
     with Supervisor(var / "log", lock=var / "supervisor.lock"):
         for _ in range(2):
-            assert preflight.already_running(str(var)) is not None
+            assert preflight.already_running(var) is not None
 
 
 MOUNTS = """\
@@ -200,16 +207,18 @@ def test_a_network_file_system_is_refused_with_the_way_out(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr(preflight, "file_system_of", lambda folder: "nfs4")
-    line = preflight.unfit_sqlite(str(tmp_path))
+    line = preflight.unfit_sqlite(tmp_path)
     assert line is not None
     assert "network file system (nfs4)" in line
     assert "RATEWRIGHT_VAR=/local/folder" in line
 
 
-def test_an_old_sqlite_is_named_with_the_version_needed(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_an_old_sqlite_is_named_with_the_version_needed(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
     monkeypatch.setattr(sqlite3, "sqlite_version_info", (3, 22, 0))
     monkeypatch.setattr(sqlite3, "sqlite_version", "3.22.0")
-    assert preflight.unfit_sqlite(str(tmp_path)) == (
+    assert preflight.unfit_sqlite(tmp_path) == (
         "SQLite 3.22.0 is too old: 3.31.0 or newer is needed. A newer Python brings one."
     )
 

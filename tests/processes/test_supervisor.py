@@ -8,6 +8,7 @@ import subprocess
 import sys
 import threading
 import time
+from functools import partial
 from pathlib import Path
 
 import pytest
@@ -95,6 +96,19 @@ def test_the_death_of_another_child_ends_the_wait_for_a_slow_one(tmp_path: Path)
         assert time.monotonic() - begun < 10
 
 
+def test_children_started_together_do_not_wait_for_one_another(tmp_path: Path) -> None:
+    slow = "import time; time.sleep(0.7); print('ready', flush=True); time.sleep(300)"
+    with Supervisor(tmp_path) as supervisor:
+        begun = time.monotonic()
+        names = ("sweeper", "worker", "web", "one", "two", "three")
+        pids = supervisor.start_together(
+            *(child(name, slow, is_ready=partial(says, supervisor.log(name), "ready")) for name in names)
+        )
+        assert all(says(supervisor.log(name), "ready") for name in names)
+        assert time.monotonic() - begun < 0.7 * len(names)
+        assert pids == [supervisor.pid(name) for name in names]
+
+
 def test_children_are_stopped_in_the_reverse_order_of_their_start(tmp_path: Path) -> None:
     order = tmp_path / "order"
     code = (
@@ -122,9 +136,7 @@ def test_children_are_stopped_in_the_reverse_order_of_their_start(tmp_path: Path
 def test_a_child_deaf_to_sigterm_is_killed_after_its_grace(tmp_path: Path) -> None:
     with Supervisor(tmp_path) as supervisor:
         log = supervisor.log("deaf")
-        pid = supervisor.start(
-            child("deaf", IGNORES_SIGTERM, is_ready=lambda: says(log, "deaf"), grace=0.5)
-        )
+        pid = supervisor.start(child("deaf", IGNORES_SIGTERM, is_ready=lambda: says(log, "deaf"), grace=0.5))
         begun = time.monotonic()
     assert not is_running(pid)
     assert 0.5 <= time.monotonic() - begun < 5
@@ -149,16 +161,18 @@ def test_a_step_that_fails_is_reported_with_its_last_words(tmp_path: Path) -> No
 
 def test_a_step_that_takes_too_long_is_stopped(tmp_path: Path) -> None:
     with Supervisor(tmp_path) as supervisor:
-        with pytest.raises(NotReady, match="The step 'migrate' did not end within 0.3 s"):
+        with pytest.raises(NotReady, match=r"The step 'migrate' did not end within 0\.3 s"):
             supervisor.run(child("migrate", RUNS_FOR_LONG), timeout=0.3)
         assert supervisor.names() == []
 
 
-def test_a_second_supervisor_of_the_same_folder_is_refused_with_the_process_of_the_first(tmp_path: Path) -> None:
+def test_a_second_supervisor_of_the_same_folder_is_refused_with_the_process_of_the_first(
+    tmp_path: Path,
+) -> None:
     lock = tmp_path / "supervisor.lock"
-    with Supervisor(tmp_path / "log", lock=lock):
-        with pytest.raises(AlreadyRunning, match=f"already runs from {tmp_path} as process {os.getpid()};"):
-            Supervisor(tmp_path / "log", lock=lock)
+    refused = pytest.raises(AlreadyRunning, match=f"already runs from {tmp_path} as process {os.getpid()};")
+    with Supervisor(tmp_path / "log", lock=lock), refused:
+        Supervisor(tmp_path / "log", lock=lock)
     with Supervisor(tmp_path / "log", lock=lock):
         pass
 
@@ -221,7 +235,8 @@ folder = Path(sys.argv[1])
 supervisor = Supervisor(folder / "log", lock=folder / "supervisor.lock")
 try:
     with interruptible():
-        for name, code in (("valkey", HAS_A_GRANDCHILD), ("worker", HAS_A_GRANDCHILD), ("web", IGNORES_SIGTERM)):
+        programs = {"valkey": HAS_A_GRANDCHILD, "worker": HAS_A_GRANDCHILD, "web": IGNORES_SIGTERM}
+        for name, code in programs.items():
             supervisor.start(child(name, code, grace=1.0))
         print(supervisor.guard.pid, *(supervisor.pid(name) for name in supervisor.names()), flush=True)
         supervisor.wait()
@@ -256,7 +271,9 @@ def test_nothing_is_left_running_however_the_supervisor_ends(tmp_path: Path, num
         os.kill(process.pid, number)
         process.wait(20)
         wait_until(
-            lambda: not any(is_running(pid) for pid in pids), within=20, what="all children and the guard have ended"
+            lambda: not any(is_running(pid) for pid in pids),
+            within=20,
+            what="all children and the guard have ended",
         )
 
 

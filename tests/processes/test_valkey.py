@@ -160,4 +160,6 @@ def test_a_killed_owner_leaves_neither_server_nor_socket(tmp_path: Path) -> None
         assert is_running(pid)
         owner.kill()
     folder = socket_path(tmp_path).parent
-    wait_until(lambda: not is_running(pid) and not folder.exists(), within=20, what="server and socket are gone")
+    wait_until(
+        lambda: not is_running(pid) and not folder.exists(), within=20, what="server and socket are gone"
+    )

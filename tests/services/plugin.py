@@ -23,7 +23,13 @@ from kinetics_db.config.processes.postgres import ThrowAwayPostgres, find_binari
 from kinetics_db.config.processes.valkey import Valkey, find_server
 
 DATABASE_NAME = "ratewright"
-DATABASE_FIXTURES = {"db", "transactional_db", "live_server", "django_db_setup", "django_db_serialized_rollback"}
+DATABASE_FIXTURES = {
+    "db",
+    "transactional_db",
+    "live_server",
+    "django_db_setup",
+    "django_db_serialized_rollback",
+}
 SERVICE_FIXTURES = DATABASE_FIXTURES | {"broker", "own_processes"}
 
 
@@ -33,18 +39,19 @@ class Services:
     def __init__(self) -> None:
         self.on_sqlite = os.environ.get("RATEWRIGHT_TEST_DB") == "sqlite"
         self.is_xdist_worker = "PYTEST_XDIST_WORKER" in os.environ
-        self.folder = Path(tempfile.mkdtemp(prefix="rw-suite-"))
         self.postgres: ThrowAwayPostgres | None = None
-        find_server()
+        find_server()  # what is missing is told before anything is made
+        binaries = None if self.on_sqlite or self.is_xdist_worker else find_binaries()
+        self.folder = Path(tempfile.mkdtemp(prefix="rw-suite-"))
         self.broker = Valkey(self.folder / "valkey")
         os.environ["RATEWRIGHT_BROKER_URL"] = self.broker.url()
         os.environ["RATEWRIGHT_VAR"] = str(self.folder / "var")
         if self.on_sqlite:
             # Each test process its own file; worker processes of a test are told the same one.
             os.environ["RATEWRIGHT_SQLITE_FILE"] = str(self.folder / "test.sqlite3")
-        elif not self.is_xdist_worker:
+        elif binaries is not None:
             # The workers of pytest-xdist inherit the address and share the server.
-            self.postgres = ThrowAwayPostgres(find_binaries())
+            self.postgres = ThrowAwayPostgres(binaries)
             os.environ["RATEWRIGHT_DATABASE_URL"] = self.postgres.url(DATABASE_NAME)
 
     def start(self) -> None:
@@ -142,5 +149,7 @@ def pytest_report_header(config: pytest.Config) -> list[str]:
         return []
     database = "SQLite" if services.on_sqlite else None
     if services.postgres is not None:
-        database = f"PostgreSQL {services.postgres.binaries.major_version} ({services.postgres.binaries.folder})"
+        database = (
+            f"PostgreSQL {services.postgres.binaries.major_version} ({services.postgres.binaries.folder})"
+        )
     return [f"services: {database or 'PostgreSQL of the session'}, {find_server().name} ({find_server()})"]

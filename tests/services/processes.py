@@ -111,7 +111,7 @@ class TestProcesses:
     def start_web_server(
         self, *, port: int | None = None, environment: Mapping[str, str] | None = None
     ) -> tuple[RunningProcess, str]:
-        """The web server on a free port; answers it and the address of its root, without a slash at the end."""
+        """The web server on a free port; answers it and its address, without a slash at the end."""
         port = port or free_port()
         command = [sys.executable, "-m", "gunicorn", "kinetics_db.config.wsgi:application"]
         command += ["--bind", f"127.0.0.1:{port}", "--worker-class", "gthread", "--threads", "4"]
@@ -144,7 +144,7 @@ class TestProcesses:
             environment={**self.environment, **environment},
             folder=CHECKOUT,
             is_ready=is_ready,
-            ready_timeout=60.0,
+            ready_timeout=120.0,
             grace=10.0,
         )
         return RunningProcess(self._supervisor, child)

@@ -160,8 +160,8 @@ def _watch(reading: int) -> int:
         for line in lines:
             kind, rest = line[:1], line[1:].rstrip(b"\n")
             if kind == b"+":  # a child starts: its process id and how to stop it
-                pid, stop_signal = rest.split()
-                children[int(pid)] = int(stop_signal)
+                words = rest.split()
+                children[int(words[0])] = int(words[1])
             elif kind == b"-":  # a child has been stopped
                 children.pop(int(rest), None)
             elif kind == b"f":  # a folder to remove

@@ -20,7 +20,7 @@ LOCK_FILES = {"runtime": "requirements.lock", "development": "requirements-dev.l
 ALSO_INSTALLED = {"runtime": ("runtime",), "development": ("runtime", "development")}
 
 
-class InstallationFailed(Exception):
+class InstallationError(Exception):
     """pip or venv failed; the message holds its last words."""
 
 
@@ -29,7 +29,7 @@ def install(what: str, checkout: Path, *, out: TextIO) -> bool:
 
     Raises
     ------
-    InstallationFailed
+    InstallationError
         With the last lines of pip's own output and the file that holds them all.
     """
     lock = checkout / LOCK_FILES[what]
@@ -64,7 +64,7 @@ def _make_environment(folder: Path, out: TextIO) -> bool:
     done = subprocess.run(command, capture_output=True, text=True, check=False)  # noqa: S603
     if done.returncode != 0:
         words = (done.stdout + done.stderr).strip().splitlines()[-15:]
-        raise InstallationFailed("The private environment could not be made:\n" + "\n".join(words))
+        raise InstallationError("The private environment could not be made:\n" + "\n".join(words))
     return True
 
 
@@ -117,7 +117,7 @@ def _run_pip(folder: Path, lock: Path, out: TextIO) -> None:
     _show(out, "")
     if process.returncode != 0:
         words = log.read_text().strip().splitlines()[-15:]
-        raise InstallationFailed(
+        raise InstallationError(
             f"pip could not install {lock.name}. Its last words (all of them: {log}):\n"
             + "\n".join(f"    {line}" for line in words)
         )
@@ -136,7 +136,7 @@ def main(arguments: list[str]) -> int:
         return 2
     try:
         install(arguments[0], Path(__file__).resolve().parents[3], out=sys.stdout)
-    except InstallationFailed as error:
+    except InstallationError as error:
         sys.stderr.write(f"{error}\n")
         return 1
     except KeyboardInterrupt:

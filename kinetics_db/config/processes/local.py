@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import http.client
 import os
+import shutil
 import socket
 import sys
 from collections.abc import Callable
@@ -15,7 +16,7 @@ from types import TracebackType
 
 from .failures import PortBusy
 from .supervisor import Child, Supervisor
-from .valkey import broker_url, valkey_child
+from .valkey import broker_url, socket_path, valkey_child
 
 HOST = "127.0.0.1"
 DEFAULT_PORT = 8765
@@ -106,7 +107,10 @@ class LocalInstallation:
             When a child ends, or does not answer in time.
         """
         self.var.mkdir(mode=0o700, parents=True, exist_ok=True)
-        self._supervisor = Supervisor(self.var / "log", lock=self.var / "supervisor.lock")
+        lock = self.var / "supervisor.lock"
+        if not lock.exists():
+            self.var.chmod(0o700)  # the first start: whoever made the folder, the data are this user's only
+        self._supervisor = Supervisor(self.var / "log", lock=lock)
         try:
             self._bring_up(self._supervisor)
         except BaseException:
@@ -130,6 +134,7 @@ class LocalInstallation:
         if self._supervisor is not None:
             self._supervisor.stop()
             self._supervisor = None
+            shutil.rmtree(socket_path(self.var / "valkey").parent, ignore_errors=True)
 
     def __enter__(self) -> LocalInstallation:
         self.start()
@@ -150,14 +155,15 @@ class LocalInstallation:
         self._say("Bringing the database up to date ...")
         supervisor.run(self._child("migrate", *self._manage("migrate", "--no-input")), timeout=300)
         self._say("Starting the queue ...")
+        supervisor.guard.remove_when_orphaned(socket_path(self.var / "valkey").parent)
         supervisor.start(valkey_child(self.var / "valkey"))
         self._say("Starting the sweeper, the worker and the web server ...")
-        # Started in the reverse of the order in which they have to stop.
-        supervisor.start(self._child("sweeper", *self._manage("sweep")))
-        worker = self.worker_child(supervisor.log("worker"))
-        web = self.web_child()
-        supervisor.start(worker)
-        supervisor.start(web)
+        # Named in the reverse of the order in which they have to stop.
+        supervisor.start_together(
+            self._child("sweeper", *self._manage("sweep")),
+            self.worker_child(supervisor.log("worker")),
+            self.web_child(),
+        )
 
     def worker_child(self, log: Path) -> Child:
         command = [sys.executable, "-m", "celery", "-A", "workers.celery_app:app", "worker"]
@@ -170,7 +176,7 @@ class LocalInstallation:
             environment={**self.environment, "REMAP_SIGTERM": "SIGQUIT", "RATEWRIGHT_ROLE": "worker"},
             folder=self.checkout,
             is_ready=lambda: says(log, " ready."),
-            ready_timeout=60.0,
+            ready_timeout=120.0,
             grace=15.0,
         )
 
@@ -179,7 +185,7 @@ class LocalInstallation:
         command += ["--bind", f"{HOST}:{self.port}", "--worker-class", "gthread", "--workers", "1"]
         command += ["--threads", "8", "--graceful-timeout", "5", "--no-control-socket"]
         return self._child(
-            "web", *command, is_ready=lambda: is_healthy(self.port), ready_timeout=60.0, role="web"
+            "web", *command, is_ready=lambda: is_healthy(self.port), ready_timeout=120.0, role="web"
         )
 
     def _manage(self, *arguments: str) -> list[str]:

@@ -162,7 +162,7 @@ class ThrowAwayPostgres:
         return self._supervisor.pid("postgresql")
 
     def start(self) -> None:
-        """Make the data folder if there is none yet, start the server, and wait until it takes connections."""
+        """Start the server, first making its data folder if need be; returns when it takes connections."""
         self._supervisor = Supervisor(self.folder / "log")
         try:
             self._supervisor.guard.remove_when_orphaned(self.folder)
@@ -204,9 +204,7 @@ class ThrowAwayPostgres:
         tools = self._tools()
         command = [str(tools / "initdb"), "-D", str(self.folder / "data"), "-U", ROLE, "--auth=trust"]
         command += ["-E", "UTF8", f"--locale={_utf8_locale()}", "--no-sync"]
-        supervisor.run(
-            Child(name="initdb", command=command, folder=self.folder, user=self.user), timeout=120
-        )
+        supervisor.run(Child(name="initdb", command=command, folder=self.folder, user=self.user), timeout=120)
 
     def _server(self) -> Child:
         command = [str(self._tools() / "postgres"), "-D", str(self.folder / "data")]

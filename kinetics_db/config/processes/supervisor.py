@@ -22,6 +22,7 @@ from .failures import AlreadyRunning, ChildDied, ChildFailed, NotReady
 from .guard import Guard, group_is_running, is_running, kill_group
 
 LINES_SHOWN = 15
+ENDING_SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
 
 @dataclass(frozen=True)
@@ -50,6 +51,9 @@ class _Running:
     child: Child
     process: Popen[bytes]
     log: Path
+
+    def is_ready(self) -> bool:
+        return self.child.is_ready is None or self.child.is_ready()
 
 
 class Supervisor:
@@ -102,21 +106,23 @@ class Supervisor:
         NotReady
             When it does not answer within its time. It is stopped with the others.
         """
-        running = self._spawn(child)
-        if child.is_ready is not None:
-            deadline = time.monotonic() + child.ready_timeout
-            while not child.is_ready():
-                self.check()
-                if time.monotonic() > deadline:
-                    raise NotReady(
-                        f"The {child.name} did not become ready within {child.ready_timeout:g} s."
-                        + _evidence(running.log, child.hint),
-                        name=child.name,
-                        log=running.log,
-                    )
+        return self.start_together(child)[0]
+
+    def start_together(self, *children: Child) -> list[int]:
+        """Start children at the same time and wait until each is ready; they are stopped in reverse order."""
+        begun = time.monotonic()
+        started = [self._spawn(child) for child in children]
+        waiting = started
+        while waiting:
+            waiting = [running for running in waiting if not running.is_ready()]
+            self.check()
+            for running in waiting:
+                if time.monotonic() - begun > running.child.ready_timeout:
+                    raise self._not_ready(running)
+            if waiting:
                 time.sleep(0.05)
         self.check()
-        return running.process.pid
+        return [running.process.pid for running in started]
 
     def run(self, child: Child, *, timeout: float) -> None:
         """Run a child that should end by itself with status 0 within ``timeout`` seconds."""
@@ -187,6 +193,15 @@ class Supervisor:
             if self._lock is not None:
                 os.close(self._lock)
                 self._lock = None
+
+    def _not_ready(self, running: _Running) -> NotReady:
+        child = running.child
+        return NotReady(
+            f"The {child.name} did not become ready within {child.ready_timeout:g} s."
+            + _evidence(running.log, child.hint),
+            name=child.name,
+            log=running.log,
+        )
 
     def _spawn(self, child: Child) -> _Running:
         log = self.log(child.name)
@@ -275,14 +290,14 @@ def interruptible() -> Iterator[None]:
     def interrupt(number: int, frame: FrameType | None) -> None:
         raise KeyboardInterrupt
 
-    with _handlers({number: interrupt for number in (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)}):
+    with _handlers(dict.fromkeys(ENDING_SIGNALS, interrupt)):
         yield
 
 
 @contextmanager
 def ignoring_interrupts() -> Iterator[None]:
     """Within this block a second Ctrl-C cannot break off what must be finished."""
-    with _handlers(dict.fromkeys((signal.SIGINT, signal.SIGTERM, signal.SIGHUP), signal.SIG_IGN)):
+    with _handlers(dict.fromkeys(ENDING_SIGNALS, signal.SIG_IGN)):
         yield
 
 

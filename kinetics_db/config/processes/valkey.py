@@ -41,7 +41,10 @@ def find_server(search_path: str | None = None) -> Path:
     ServerMissing
         When there is none; the message names the ways to get one.
     """
-    for binary in (_binary_of_the_wheel(), *(_on_path(name, search_path) for name in ("valkey-server", "redis-server"))):
+    for binary in (
+        _binary_of_the_wheel(),
+        *(_on_path(name, search_path) for name in ("valkey-server", "redis-server")),
+    ):
         if binary is not None:
             return binary
     raise ServerMissing(f"No Valkey or Redis server was found. {HOW_TO_GET_IT}")
@@ -105,7 +108,9 @@ def make_private_folder(folder: Path) -> None:
     folder.mkdir(mode=0o700, exist_ok=True)
     found = folder.lstat()
     if not stat.S_ISDIR(found.st_mode) or found.st_uid != os.getuid() or found.st_mode & 0o077:
-        raise ServerMissing(f"{folder} exists but is not this user's private folder; remove it or set TMPDIR.")
+        raise ServerMissing(
+            f"{folder} exists but is not this user's private folder; remove it or set TMPDIR."
+        )
 
 
 def answers(path: Path, *, timeout: float = 1.0) -> bool:

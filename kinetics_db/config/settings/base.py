@@ -1,4 +1,4 @@
-"""What every installation shares. Installations differ by environment variables only; see docs/reference/settings.md."""
+"""What every installation shares; installations differ by environment variables only (docs/reference/settings.md)."""
 
 import os
 from pathlib import Path

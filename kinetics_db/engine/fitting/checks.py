@@ -21,6 +21,8 @@ from kinetics_db.engine.network.model import Network
 from kinetics_db.engine.simulation.equations import equations_of
 from kinetics_db.errors import InvalidInput, Problem
 
+LARGEST_JACOBIAN = 30_000_000  # values times parameters; keeps a fit below about 1 GB
+
 
 def check_fit(
     network: Network,
@@ -85,7 +87,7 @@ def _constants(
         if constant.scope == "in a group":
             missing = [e.name for e in experiments if (constant.group_by or "") not in e.groups]
             if missing:
-                what = f"{constant.name} is grouped by {constant.group_by!r}, which these experiments do not have: "
+                what = f"{constant.name} is grouped by {constant.group_by!r}, which these experiments lack: "
                 yield Problem(what + ", ".join(missing), field=constant.name)
                 continue
         free = constant.scope != "held"
@@ -262,6 +264,10 @@ def _counts(
     for name in clash:
         yield Problem(f"nuisance parameter {name} has the name of another parameter", field=name)
     n = sum(int(valid_points(e, settings).sum()) for e in experiments)
+    size = sum(e.values.size for e in experiments) * len(parameters)
+    if size > LARGEST_JACOBIAN:
+        what = f"{len(parameters)} parameters times {size // len(parameters)} values are too many for one fit"
+        yield Problem(what, cure=f"at most {LARGEST_JACOBIAN:.0e} together; thin out the tables")
     without_prior = sum(p.prior_sd is None for p in parameters)
     if without_prior > n:
         what = f"{without_prior} parameters without a prior are to be found from {n} values"

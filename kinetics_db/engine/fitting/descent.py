@@ -1,7 +1,7 @@
 """One descent from one start: trust-region least squares, and the profiled sigmas around it.
 
-SciPy's trust-region reflective method (Branch, Coleman & Li, SIAM J. Sci. Comput. 21 (1999) 1) on exact Jacobians.
-It ends when a full Gauss-Newton step would no longer lower -2 ln L noticeably (in the spirit of the
+SciPy's trust-region reflective method (Branch, Coleman & Li, SIAM J. Sci. Comput. 21 (1999) 1) on exact
+Jacobians. It ends when a full Gauss-Newton step would no longer lower -2 ln L noticeably (in the spirit of the
 relative offset, Bates & Watts, Technometrics 23 (1981) 179).
 """
 
@@ -23,7 +23,7 @@ from kinetics_db.engine.fitting.uncertainty import curvature, pushed_against_bou
 Floats = NDArray[np.float64]
 DescentStatus = Literal["converged", "stopped", "not converged", "cannot start"]
 
-TIGHT = 1e-12  # further fall of -2 ln L that counts as none
+TIGHT = 1e-13  # further fall of -2 ln L, per point, that counts as none
 LOOSE = 1e-5  # fall that integration noise may leave undone
 MOST_FAILURES_IN_A_ROW = 16
 MOST_SIGMA_ROUNDS = 60
@@ -64,6 +64,7 @@ class Descender:
         self.objective = objective
         self.best: Point | None = None
         self.iterations = 0
+        self.negligible = TIGHT * max(objective.data.n, 1)
         self._settings = settings
         self._on_progress = on_progress
         parameters = objective.parameters
@@ -91,7 +92,7 @@ class Descender:
         """Alternate the parameters and the profiled sigmas to their fixed point."""
         message = ""
         for _ in range(MOST_SIGMA_ROUNDS):
-            assert self.best is not None  # noqa: S101  met before the first round
+            assert self.best is not None
             sigmas = self.best.sigmas
             converged, message = self._minimise(sigmas, begun)
             if not converged:
@@ -108,8 +109,8 @@ class Descender:
         return point
 
     def _minimise(self, sigmas: Floats, begun: int) -> tuple[bool, str]:
-        assert self.best is not None  # noqa: S101
-        if self.decrease(self.best, sigmas) < TIGHT:
+        assert self.best is not None
+        if self.decrease(self.best, sigmas) < self.negligible:
             return True, "a full step would not lower the cost any further"
         search = _Search(self, self.best, sigmas, begun)
         ending = search.run()
@@ -229,7 +230,7 @@ class _Search:
         self._owner.accepted(self._accepted)
         if self._owner.iterations >= self._last_iteration:
             raise StopIteration
-        if self._owner.decrease(self._accepted, self._sigmas) < TIGHT:
+        if self._owner.decrease(self._accepted, self._sigmas) < self._owner.negligible:
             raise StopIteration
 
 

@@ -1,4 +1,4 @@
-"""The question put to a global fit, as plain values: experiments, constants, nuisance parameters, settings."""
+"""The question put to a global fit, as plain values: experiments, constants, nuisances, settings."""
 
 from __future__ import annotations
 
@@ -88,7 +88,11 @@ class Constant:
 
 @dataclass(frozen=True)
 class StartConcentration:
-    """A start concentration to be fitted instead of taken from the charges ('same in all runs' or 'own per run')."""
+    """A start concentration to be fitted instead of taken from the charges.
+
+    It is fitted in every experiment that charges the species, or in all of them when none does, and replaces
+    all charges of that species there.
+    """
 
     species: str
     start: float
@@ -117,7 +121,7 @@ ErrorModel = Literal["as tabulated", "one sigma", "one sigma per observable"]
 
 @dataclass(frozen=True)
 class Settings:
-    """How to fit. Tolerances are relative; `max_seconds` bounds the whole fit, `max_steps` one integration."""
+    """How to fit. Tolerances are relative; `max_seconds` bounds the fit, `max_steps` one integration."""
 
     error_model: ErrorModel = "as tabulated"
     rtol: float = 1e-8

@@ -31,6 +31,7 @@ from kinetics_db.engine.fitting.uncertainty import (
 )
 
 Floats = NDArray[np.float64]
+PARTNERS = 0.99  # correlation of parameters of which only a combination is determined
 SET_BY_PRIOR = 0.8  # of the width of the prior's interval
 
 
@@ -175,7 +176,7 @@ def _parameter(
     if any(e.value is None for e in spread.estimates):
         why = "no degree of freedom is left to estimate the scatter"
     elif not determined:
-        partners = [] if wide or found.inert[i] or spread.at_bound[i] else _partners(i, objective, found)
+        partners = [] if found.inert[i] or spread.at_bound[i] else _partners(i, objective, found)
         why = why_not_determined(parameter.name, bool(found.inert[i]), bool(spread.at_bound[i]), partners)
     prior_width = None
     if parameter.prior_sd is not None:
@@ -205,12 +206,15 @@ def _normal(settings: Settings) -> float:
 
 
 def _partners(i: int, objective: Objective, found: Curvature) -> list[str]:
-    """Other parameters that the data do not determine either."""
-    return [
-        p.name
-        for j, p in enumerate(objective.parameters.parameters)
-        if j != i and not found.determined[j] and not found.inert[j]
-    ][:5]
+    """Other parameters that only act together with this one, at most five."""
+    names = [p.name for p in objective.parameters.parameters]
+    others = [j for j in range(len(names)) if j != i and not found.inert[j]]
+    if not found.determined[i]:
+        return [names[j] for j in others if not found.determined[j]][:5]
+    errors = np.sqrt(np.diag(found.covariance))
+    with np.errstate(invalid="ignore"):
+        correlation = found.covariance[i] / (errors[i] * errors)
+    return [names[j] for j in others if abs(correlation[j]) > PARTNERS][:5]
 
 
 def _experiments(

@@ -17,8 +17,8 @@ from numpy.typing import NDArray
 
 Floats = NDArray[np.float64]
 
-# Exact sensitivities carry about this relative error; directions flatter than it are not determined.
-SMALLEST_SINGULAR_VALUE = 1e-6
+# Exact sensitivities carry a tenth of this relative error; flatter directions are not determined.
+SMALLEST_SINGULAR_VALUE = 1e-5
 LARGEST_SHARE_OF_FLAT_DIRECTION = 1e-4
 WIDEST_INTERVAL = math.log(100.0)  # on a logarithmic scale, to each side
 

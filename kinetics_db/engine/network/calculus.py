@@ -11,6 +11,7 @@ from kinetics_db.engine.network.syntax import (
     Expression,
     Negation,
     Number,
+    Operator,
     Parameter,
     Temperature,
     Variable,
@@ -18,6 +19,7 @@ from kinetics_db.engine.network.syntax import (
 
 ZERO = Number(0.0)
 ONE = Number(1.0)
+MINUS_ONE = Number(-1.0)
 
 
 def derivative(expression: Expression, variable: Variable) -> Expression:
@@ -71,8 +73,25 @@ def _derivative_of_function(call: Call) -> Expression:
     return _quotient(ONE, call.argument)
 
 
-def _folded(value: float) -> Number | None:
-    return Number(value) if math.isfinite(value) else None
+def _number(node: Expression) -> float | None:
+    """Value of a number with or without a minus sign, else None."""
+    match node:
+        case Number(value):
+            return value
+        case Negation(Number(value)):
+            return -value
+        case _:
+            return None
+
+
+def _joined(operator: Operator, left: Expression, right: Expression) -> Expression:
+    """Two operands joined, folded to one number where both are numbers and the result is finite."""
+    a, b = _number(left), _number(right)
+    if a is not None and b is not None and not (operator == "/" and b == 0):
+        value = {"+": a + b, "-": a - b, "*": a * b}[operator] if operator != "/" else a / b
+        if math.isfinite(value):
+            return Number(value + 0.0)
+    return Binary(operator, left, right)
 
 
 def _sum(left: Expression, right: Expression) -> Expression:
@@ -80,11 +99,9 @@ def _sum(left: Expression, right: Expression) -> Expression:
         return right
     if right == ZERO:
         return left
-    if isinstance(left, Number) and isinstance(right, Number):
-        return _folded(left.value + right.value) or Binary("+", left, right)
     if isinstance(right, Negation):
         return _difference(left, right.operand)
-    return Binary("+", left, right)
+    return _joined("+", left, right)
 
 
 def _difference(left: Expression, right: Expression) -> Expression:
@@ -92,11 +109,9 @@ def _difference(left: Expression, right: Expression) -> Expression:
         return left
     if left == ZERO:
         return _negative(right)
-    if isinstance(left, Number) and isinstance(right, Number):
-        return _folded(left.value - right.value) or Binary("-", left, right)
     if isinstance(right, Negation):
         return _sum(left, right.operand)
-    return Binary("-", left, right)
+    return _joined("-", left, right)
 
 
 def _negative(operand: Expression) -> Expression:
@@ -114,13 +129,15 @@ def _product(left: Expression, right: Expression) -> Expression:
         return right
     if right == ONE:
         return left
-    if isinstance(left, Number) and isinstance(right, Number):
-        return _folded(left.value * right.value) or Binary("*", left, right)
+    if right == MINUS_ONE:
+        return _negative(left)
+    if left == MINUS_ONE:
+        return _negative(right)
     if isinstance(left, Negation):
         return _negative(_product(left.operand, right))
     if isinstance(right, Negation):
         return _negative(_product(left, right.operand))
-    return Binary("*", left, right)
+    return _joined("*", left, right)
 
 
 def _quotient(left: Expression, right: Expression) -> Expression:
@@ -128,11 +145,9 @@ def _quotient(left: Expression, right: Expression) -> Expression:
         return ZERO
     if right == ONE:
         return left
-    if isinstance(left, Number) and isinstance(right, Number) and right.value != 0:
-        return _folded(left.value / right.value) or Binary("/", left, right)
     if isinstance(left, Negation):
         return _negative(_quotient(left.operand, right))
-    return Binary("/", left, right)
+    return _joined("/", left, right)
 
 
 def _power(base: Expression, exponent: Expression) -> Expression:

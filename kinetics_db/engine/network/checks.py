@@ -69,7 +69,7 @@ def _species_are_known(statements: Statements) -> Iterator[Problem]:
             ]
     uses += [(o.observable.line, place, "") for o in statements.observables for place in o.species]
     uses += [(hold.line, place, "") for hold in statements.holds for place in hold.species]
-    unread = statements.unread_names()  # a line that could not be read may be the one that names it
+    unread = statements.unread_names(of_steps=True)  # one of them may be the step that names it
     nearest: dict[str, str] = {}
     for line, place, also in uses:
         if place.name in known_set or place.name in unread:

@@ -52,12 +52,13 @@ class LawTrials:
         net = {name: number for name, number in net_numbers(step).items() if number and name not in held}
         used_up: list[str] = []
         undefined: list[str] = []
-        for name, present, gone in self._rates(step.law, tuple(net)):
-            tried = np.isfinite(present)
-            if np.any(tried & ~np.isfinite(gone)):
-                undefined.append(name)
-            elif np.any(tried & (gone * net[name] < -RELATIVE * np.abs(present * net[name]))):
-                used_up.append(name)
+        with np.errstate(all="ignore"):  # what overflows is not finite and is not tried
+            for name, present, gone in self._rates(step.law, tuple(net)):
+                tried = np.isfinite(present)
+                if np.any(tried & ~np.isfinite(gone)):
+                    undefined.append(name)
+                elif np.any(tried & (gone * net[name] < -RELATIVE * np.abs(present * net[name]))):
+                    used_up.append(name)
         effects = (
             (used_up, ", so that concentrations can fall below zero"),
             (undefined, ": it has no value there"),

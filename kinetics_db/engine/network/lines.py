@@ -24,8 +24,16 @@ class Line(NamedTuple):
     masked: str
 
 
-def split_lines(text: str) -> tuple[list[Line], list[Problem]]:
-    """Lines that hold a statement, and what is wrong with single characters.
+class Split(NamedTuple):
+    """Lines that hold a statement, those that cannot be taken for one, and why not."""
+
+    lines: list[Line]
+    refused: list[str]
+    problems: list[Problem]
+
+
+def split_lines(text: str) -> Split:
+    """Lines of a text without comments; control characters and open quotes are told.
 
     Raises
     ------
@@ -35,19 +43,19 @@ def split_lines(text: str) -> tuple[list[Line], list[Problem]]:
     size = len(text.encode("utf-8", "surrogatepass"))
     if size > MAX_BYTES:
         raise InvalidInput(f"a mechanism of {size} bytes", field="text", cure=f"at most {MAX_BYTES} bytes")
-    lines: list[Line] = []
-    problems: list[Problem] = []
+    split = Split([], [], [])
     text = text.removeprefix("\ufeff").replace("\r\n", "\n").replace("\r", "\n")
     for number, raw in enumerate(text.split("\n"), start=1):
         try:
             _check_characters(raw, number)
             line = _without_comment(raw, number)
         except InvalidInput as error:
-            problems.extend(error.problems)
+            split.problems.extend(error.problems)
+            split.refused.append(raw)
             continue
         if line.text.strip():
-            lines.append(line)
-    return lines, problems
+            split.lines.append(line)
+    return split
 
 
 def _check_characters(raw: str, number: int) -> None:

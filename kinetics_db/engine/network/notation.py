@@ -30,9 +30,9 @@ def parse_mechanism(text: str) -> Network:
         Holds every problem found, each with line, column and what would mend it, in the order of the text;
         warnings too.
     """
-    lines, problems = split_lines(text)
-    statements = Statements(problems=problems)
-    for line in lines:
+    split = split_lines(text)
+    statements = Statements(problems=split.problems, unread=split.refused)
+    for line in split.lines:
         read_statement(line, statements)
     found = sorted([*statements.problems, *check(statements)], key=_place)
     if any(problem.severity == "error" for problem in found):

@@ -9,8 +9,11 @@ from typing import NamedTuple
 from kinetics_db.engine.network.grammar import Place
 from kinetics_db.engine.network.model import Side
 from kinetics_db.engine.network.tokens import MEANT, end_of_species, quoted, read_species, refuse, skip_spaces
+from kinetics_db.errors import InvalidInput
 
 COEFFICIENT = re.compile(r"(?P<top>[0-9]+(?:\.[0-9]*)?|\.[0-9]+)(?:/(?P<bottom>[0-9]+(?:\.[0-9]+)?))?")
+LARGEST = 1_000_000  # of a stoichiometric number
+WORD = re.compile(r"\S+")
 PHOTON = ("hv", "hν")
 
 
@@ -70,9 +73,12 @@ def _coefficient(text: str, at: int, line: int, column: int) -> tuple[float, int
         return 1.0, at
     bottom = float(found["bottom"] or 1)
     value = float(found["top"]) / bottom if bottom else math.inf
-    if not (math.isfinite(value) and value > 0):
+    if not 0 < value <= LARGEST:
         raise refuse(
-            f"{found.group()} as a stoichiometric number", line, column + at, "a positive number, as in 2 A"
+            f"{found.group()} as a stoichiometric number",
+            line,
+            column + at,
+            f"a positive number up to {LARGEST:,}, as in 2 A",
         )
     after = found.end()
     begin = skip_spaces(text, after)
@@ -134,8 +140,9 @@ def _species(text: str, at: int, line: int, column: int) -> tuple[str, int]:
 
 
 def _chunk(text: str, at: int) -> str:
-    """What stands from ``at`` to the next space, at least one character."""
-    return text[at:].split(maxsplit=1)[0] if text[at:].strip() else " "
+    """What stands from ``at`` to the next space."""
+    found = WORD.match(text, at)
+    return found.group() if found else " "
 
 
 def _after_plus(text: str, end: int, at: int, line: int, column: int) -> int:
@@ -147,20 +154,24 @@ def _after_plus(text: str, end: int, at: int, line: int, column: int) -> int:
     begin = skip_spaces(text, at + 1)
     if begin == len(text) and at > end:
         raise refuse("a species is missing after +", line, column + at, "a species, as in A + B")
+    if at == end or begin == at + 1:
+        raise _crowded_plus(text, end, at, line, column)
+    return begin
+
+
+def _crowded_plus(text: str, end: int, at: int, line: int, column: int) -> InvalidInput:
+    """The + at ``at`` touches a name: a missing space, or a + that belongs to the name."""
     before = text[:end].split()[-1]
+    begin = skip_spaces(text, at + 1)
     if at == end and begin > at + 1:
-        raise refuse(
+        return refuse(
             f"'+' stands right after '{before}'",
             line,
             column + at,
             f'a space before it, or quotes: "{before}+"',
         )
-    if at == end or begin == at + 1:
-        after = text[begin:].split()[0] if begin < len(text) else "B"
-        raise refuse(
-            "'+' without a space on each side", line, column + at, f"{before} + {after.lstrip('+') or 'B'}"
-        )
-    return begin
+    after = _chunk(text, begin).strip().lstrip("+") or "B"
+    return refuse("'+' without a space on each side", line, column + at, f"{before} + {after}")
 
 
 def split_names(text: str, line: int, column: int) -> tuple[Place, ...]:

@@ -82,10 +82,12 @@ class Statements:
     problems: list[Problem] = field(default_factory=list)
     unread: list[str] = field(default_factory=list)  # lines that a problem kept from being read
 
-    def unread_names(self) -> frozenset[str]:
-        """Words of the lines that could not be read: names that they may have declared or used."""
-        words = (NAME_LIKE.findall(text) for text in self.unread)
-        return frozenset(normal_name(inside or bare) for line in words for inside, bare in line)
+    def unread_names(self, *, of_steps: bool = False) -> frozenset[str]:
+        """Names that the lines that could not be read, or the steps among them, may have declared or used."""
+        lines = (text for text in self.unread if not of_steps or has_arrow(text))
+        return frozenset(
+            normal_name(inside or bare) for text in lines for inside, bare in NAME_LIKE.findall(text)
+        )
 
 
 def read_statement(line: Line, into: Statements) -> None:

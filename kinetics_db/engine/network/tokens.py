@@ -21,6 +21,7 @@ RESERVED = {
     "T": "the temperature in K",
 }
 MAX_NAME_LENGTH = 100
+LONGEST_MESSAGE = 400
 
 MEANT = {  # characters that word processors put in the place of the notation's own
     "−": "-", "–": "-", "—": "-", "×": "*", "·": "*", "∙": "*", "⋅": "*", "÷": "/", "＋": "+",
@@ -96,8 +97,12 @@ def normal_name(name: str) -> str:
 
 
 def refuse(message: str, line: int, column: int, cure: str = "") -> InvalidInput:
-    """The error for one thing wrong at a place."""
-    return InvalidInput(Problem(message, line=line, column=column, cure=cure))
+    """The error for one thing wrong at a place; what it quotes from the text is kept short."""
+    return InvalidInput(Problem(_short(message), line=line, column=column, cure=_short(cure)))
+
+
+def _short(text: str) -> str:
+    return text if len(text) <= LONGEST_MESSAGE else f"{text[: LONGEST_MESSAGE // 2]} ... {text[-60:]}"
 
 
 def check_name(name: str, line: int, column: int) -> str:

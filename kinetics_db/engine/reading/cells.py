@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 import re
+from functools import lru_cache
 from typing import NamedTuple
 
 from kinetics_db.engine.units import convert, is_unit, kind_of_unit
@@ -84,7 +85,8 @@ def time_cell(text: str, decimal: str, clock: Clock) -> Cell:
     plain = number_cell(text, decimal)
     if plain.kind == "number":
         if clock.unit:
-            return Cell("number", convert(plain.value, clock.unit, "s"))
+            times, over = _seconds(clock.unit)
+            return Cell("number", plain.value * times / over)
         if plain.value == 0:
             return plain  # zero is zero in every unit
         return Cell("wrong", why="has no unit, and the header states none for time")
@@ -96,8 +98,16 @@ def time_cell(text: str, decimal: str, clock: Clock) -> Cell:
     number = re.match(_NUMBER[decimal].pattern, text)
     unit = text[number.end() :].strip() if number else ""
     if number and is_unit(unit) and kind_of_unit(unit) == "time":
-        return Cell("number", convert(float(number.group().replace(",", ".")), unit, "s"))
+        times, over = _seconds(unit)
+        return Cell("number", float(number.group().replace(",", ".")) * times / over)
     return plain
+
+
+@lru_cache(maxsize=64)
+def _seconds(unit: str) -> tuple[float, float]:
+    """Factor and divisor to s, found once per unit; dividing by 1000 rounds once, as `convert` does."""
+    factor = convert(1.0, unit, "s")
+    return (factor, 1.0) if factor >= 1 else (1.0, float(round(1 / factor)))
 
 
 def _clock_cell(match: re.Match[str], clock: Clock) -> Cell:

@@ -266,6 +266,6 @@ def _metadata(lines: Sequence[tuple[int, str]], options: ReadingOptions) -> tupl
         match = _ENTRY.fullmatch(text)
         if match:
             entries.append((match[1].strip(), match[2].strip()))
-        elif text:
+        elif any(sign.isalnum() for sign in text):
             entries.append((f"line {number}", text))
     return tuple(entries)

@@ -22,6 +22,9 @@ _BRACKETED = re.compile(
 )
 
 
+_CAPITALS = frozenset("ACJNSTVW")  # units that are likelier to be names of species
+
+
 class Header(NamedTuple):
     """A column's name and unit (None when none is stated); ``clock`` is a form such as 'mm:ss'."""
 
@@ -45,7 +48,7 @@ def parse_header(text: str) -> Header:
         name, unit = split
         if unit.lower() in _CLOCK_FORMS:
             return Header(name, None, _CLOCK_FORMS[unit.lower()])
-        if is_unit(unit):
+        if _is_written_unit(unit):
             return Header(name, unit)
     words = re.fullmatch(r"(.*[^\s_,])(?:[ _]|, ?)([^\s_]{1,20})", text)
     if words and is_unit(words[2]) and kind_of_unit(words[2]) == "time" and _TIME_WORDS.fullmatch(words[1]):
@@ -59,24 +62,39 @@ def _splits(text: str) -> list[tuple[str, str]]:
     """Ways to split a header into name and unit, the likeliest first."""
     found = []
     bracketed = _BRACKETED.fullmatch(text)
-    if bracketed:
+    if bracketed and not _is_label(text, bracketed):
         found.append((bracketed["name"].rstrip(" /,;:"), bracketed["unit"].strip()))
-    for sign in ("/", " in ", ","):
+    for sign in (" in ", "/", ","):
         start = text.find(sign)
         while start > 0:
             name, unit = text[:start].strip(), text[start + len(sign) :].strip()
             # A/C is a ratio of two signals rather than A in coulombs; A / C with blanks is a unit.
-            ratio = len(unit) == 1 and unit in "ACJNSTVW" and not (sign == "/" and text[start - 1] == " ")
+            ratio = unit in _CAPITALS and not (sign == "/" and text[start - 1] == " ")
             if name and 0 < len(unit) <= MAX_LENGTH and not ratio:
                 found.append((name, unit.strip("()[] ") if unit[0] in "([" else unit))
             start = text.find(sign, start + 1) if len(found) < 20 else -1
     return found
 
 
+def _is_written_unit(unit: str) -> bool:
+    """A unit that can stand in a header; '2' and '90 s' are values, though arithmetic could take them."""
+    return is_unit(unit) and (not unit[0].isdigit() or unit == "1" or unit.startswith(("1/", "10^", "10*")))
+
+
+def _is_label(text: str, bracketed: re.Match[str]) -> bool:
+    """Whether a bracket names a species or a peak, as in c(A), I(S) or peak (1), rather than a unit."""
+    unit, name = bracketed["unit"].strip(), bracketed["name"].lower()
+    if unit == "1" or unit in _CAPITALS:
+        return True
+    attached = text[bracketed.end("name")] != " "
+    usual = (unit == "K" and name.startswith("t")) or (unit == "M" and name.startswith("conc"))
+    return attached and unit in ("K", "M") and not usual
+
+
 def is_units_row(cells: list[str]) -> bool:
-    """Whether every cell is a unit, a clock form or empty, and at least one is a unit."""
-    stripped = [unit_of_cell(cell) for cell in cells]
-    return any(stripped) and all(unit is not None for unit in stripped)
+    """Whether every cell is a unit, a clock form or empty, and at least one is a unit with a name."""
+    units = [unit_of_cell(cell) for cell in cells]
+    return all(unit is not None for unit in units) and any(unit not in ("", "1") for unit in units)
 
 
 def unit_of_cell(cell: str) -> str | None:
@@ -84,7 +102,7 @@ def unit_of_cell(cell: str) -> str | None:
     unit = cell.strip().strip("()[]").strip()
     if unit in ("", "-"):
         return ""
-    return unit if is_unit(unit) or unit.lower() in _CLOCK_FORMS else None
+    return unit if _is_written_unit(unit) or unit.lower() in _CLOCK_FORMS else None
 
 
 def with_unit(header: Header, unit: str) -> Header:

@@ -242,7 +242,7 @@ class _Search:
                     named = named or (number, cells)
                 elif self._is_data(number):
                     break
-                elif not _RULE.fullmatch(line) and not is_units_row(cells):
+                elif not _RULE.fullmatch(line) and not (fallback and is_units_row(cells)):
                     fallback = (number, cells)
             elif self._is_header(cells) and self._is_data(self._next(number)):
                 return self._below(number, cells)  # a header behind a comment sign
@@ -286,6 +286,8 @@ class _Search:
         if header and self.delimiter == " " and len(cells) != self.width:
             # 't / min   A / mM': names hold single blanks, columns stand two or more apart
             cells = re.split(r" {2,}|\t", line.strip())
+            if len(cells) != self.width:  # 't / s A (mM)': the unit belongs to the name before it
+                cells = re.sub(r" +(?=[(\[/])|(?<=/) +", "", line.strip()).split()
         return cells
 
     def _fits(self, cells: list[str]) -> bool:

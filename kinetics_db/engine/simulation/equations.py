@@ -219,35 +219,33 @@ class Bound:
         flat_jacobian = jacobian_t.reshape(s * s, total)
         self._to_rates = _product(np.hstack([rates[:, :n_c], rates[:, at_l:at_y]]))
         self._to_jacobian = _product(flat_jacobian)
-        self._to_all = _product(np.concatenate([rates, flat_jacobian, parameters.reshape(p * s, total)]))
+        self._to_all = _product(np.concatenate([flat_jacobian, parameters.reshape(p * s, total), rates]))
         self._monomials = np.zeros(total)
         self._few = np.zeros(n_c + n_l)
         self._x = np.ones(s + 1 + len(equations.power_slots))
         self._index = equations.factor_index
         self._index_few = np.ascontiguousarray(equations.factor_index[:, :n_c])
         self._gathered = np.zeros(self._index.shape)
+        self._pair = (self._gathered[0], self._gathered[1]) if len(self._gathered) == 2 else None
+        self._products = self._monomials[: self._n_m]
+        self._x_species = self._x[:s]
         self._gathered_few = np.zeros(self._index_few.shape)
-        self._flat = np.zeros(s + s * s + p * s)
         self._jac = np.zeros(s * s)
         self._out = np.zeros(s)
         self._powers = equations.power_slots
         self._tail: list[float] = [*values.tolist(), math.nan if temperature is None else temperature]
         self._tape = tape if n_l else None
-        # views into the flat result
-        self.f = self._flat[:s]
-        self.jt = self._flat[s : s + s * s].reshape(s, s)
-        self.dfdp = self._flat[s + s * s :].reshape(p, s)
 
-    def _load(self, y: Floats) -> None:
-        x = self._x
-        x[: self.s] = y
-        for slot, (i, order) in enumerate(self._powers):
-            x[self.s + 1 + slot] = power(float(y[i]), order)
+    def _load_powers(self, y: Floats) -> None:
+        for slot, (i, order) in enumerate(self._powers, start=self.s + 1):
+            self._x[slot] = power(float(y[i]), order)
 
     def rates(self, y: Floats) -> Floats:
         """d[X]/dt at y, shape (s,); the array is overwritten by the next call. Raises ArithmeticError or
         ValueError where a written-out law is not defined."""
-        self._load(y)
+        self._x_species[:] = y
+        if self._powers:
+            self._load_powers(y)
         g, few, n_c = self._gathered_few, self._few, self._n_c
         self._x.take(self._index_few, out=g, mode="clip")
         np.multiply.reduce(g, axis=0, out=few[:n_c])
@@ -257,20 +255,43 @@ class Bound:
         return self._out
 
     def _fill_monomials(self, y: Floats) -> Floats:
-        self._load(y)
-        g, m, n = self._gathered, self._monomials, self._n_m
-        self._x.take(self._index, out=g, mode="clip")
-        if len(g) == 2:
-            np.multiply(g[0], g[1], out=m[:n])
+        self._x_species[:] = y
+        if self._powers:
+            self._load_powers(y)
+        self._x.take(self._index, out=self._gathered, mode="clip")
+        if self._pair is not None:
+            np.multiply(self._pair[0], self._pair[1], self._products)
         else:
-            np.multiply.reduce(g, axis=0, out=m[:n])
+            np.multiply.reduce(self._gathered, axis=0, out=self._products)
         if self._tape is not None:
-            m[n:] = self._tape.run(y.tolist() + self._tail, derivatives=True)
-        return m
+            derivatives = self._tape.run(y.tolist() + self._tail, derivatives=True)
+            self._monomials[self._n_m :] = derivatives
+        return self._monomials
 
-    def evaluate(self, y: Floats) -> None:
-        """Fill `f` (s,), `jt` (s, s; transposed Jacobian) and `dfdp` (p, s; scaled) at y."""
-        self._to_all(self._fill_monomials(y), self._flat)
+    def augmented(self, starts: int) -> Callable[[Floats], Floats]:
+        """The right-hand side of y joined with its sensitivities, as a function of the joined state.
+
+        The state holds y (s,), then a block of s for each wanted constant (scaled), then `starts` blocks for
+        start concentrations. The array that the function gives is overwritten by its next call. It raises
+        ArithmeticError or ValueError where a written-out law is not defined.
+        """
+        s, p = self.s, self.p
+        blocks = p + starts
+        # [transposed Jacobian, df/dp, f] and right behind it J S, so that the last two are the answer
+        memory = np.zeros(s * s + p * s + s + blocks * s)
+        flat, answer = memory[: s * s + p * s + s], memory[s * s + p * s :]
+        jacobian_t, slopes = memory[: s * s].reshape(s, s), memory[s * s : s * s + p * s].reshape(p, s)
+        moved = answer[s:].reshape(blocks, s)
+        moved_by_constants = moved[:p]
+        monomials, product, dot, add = self._fill_monomials, self._to_all, np.dot, np.add
+
+        def evaluate(u: Floats) -> Floats:
+            product(monomials(u[:s]), flat)
+            dot(u[s:].reshape(blocks, s), jacobian_t, moved)
+            add(moved_by_constants, slopes, moved_by_constants)
+            return answer
+
+        return evaluate
 
     def jacobian_transposed(self, y: Floats) -> Floats:
         """[j, i] = d f_i / d y_j, shape (s, s); overwritten by the next call."""

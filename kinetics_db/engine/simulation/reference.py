@@ -121,37 +121,25 @@ class _AbandonedError(Exception):
 class _Run:
     """The callbacks of one integration, their limits and counts."""
 
-    def __init__(self, bound: Bound, max_evaluations: int, deadline: float) -> None:
-        s, p = bound.s, bound.p
+    def __init__(self, bound: Bound, starts: int, max_evaluations: int, deadline: float) -> None:
+        s = bound.s
         self.bound = bound
+        self.blocks = 1 + bound.p + starts
         self.evaluations = 0
         self.jacobians = 0
         self.reason: Status | None = None
         self.message = ""
         self.max_evaluations = max_evaluations
         self.deadline = deadline
-        self.n_starts = 0
+        self._compute = bound.rates if self.blocks == 1 else bound.augmented(starts)
         self._excess = 0
-        self._out = np.zeros(0)
+        self._band = np.zeros((2 * s - 1, s))
         i, j = np.meshgrid(np.arange(s), np.arange(s), indexing="ij")
         self._band_rows, self._band_columns = (i - j + s - 1).ravel(), j.ravel()
-        self._p = p
 
-    def prepare(self, n_starts: int) -> None:
-        """Say how many blocks of start-concentration sensitivities follow those of the constants."""
-        s, p = self.bound.s, self._p
-        blocks = 1 + p + n_starts
-        self.n_starts = n_starts
-        self._out = np.zeros(s * blocks)
-        self._out_y = self._out[:s]
-        self._out_s = self._out[s:].reshape(p + n_starts, s)
-        self._out_p = self._out_s[:p]
-        self._blocks = blocks
-        self._band = np.zeros((2 * s - 1, s))
-
-    def _within_limits(self) -> bool:
-        self.evaluations += 1
-        if self.evaluations % _CLOCK_EVERY == 0:
+    def _beyond_limits(self) -> bool:
+        """Look at the clock and the count now and then; NaN from here on makes LSODA end soon."""
+        if self.reason is None:
             if time.monotonic() > self.deadline:
                 self.reason, self.message = "out of time", "the integration took longer than allowed"
             elif self.evaluations > self.max_evaluations:
@@ -160,34 +148,20 @@ class _Run:
             self._excess += 1
             if self._excess > 200:
                 raise _AbandonedError
-            return False
-        return True
+        return self.reason is not None
 
     def rates(self, t: float, u: Floats) -> Floats:
-        if not self._within_limits():
+        """d u/dt for LSODA, with or without sensitivities."""
+        self.evaluations += 1
+        look = self.evaluations % _CLOCK_EVERY == 0 or self.reason is not None
+        if look and self._beyond_limits():
             return np.full(u.shape, np.nan)
         try:
-            return self.bound.rates(u)
+            return self._compute(u)
         except (ArithmeticError, ValueError) as error:
-            return self._undefined(t, u, error)
-
-    def augmented(self, t: float, u: Floats) -> Floats:
-        if not self._within_limits():
+            self.reason = "failed"
+            self.message = f"a rate law is not defined at t = {t:.6g} s: {error}"
             return np.full(u.shape, np.nan)
-        b, s = self.bound, self.bound.s
-        try:
-            b.evaluate(u[:s])
-        except (ArithmeticError, ValueError) as error:
-            return self._undefined(t, u, error)
-        self._out_y[:] = b.f
-        np.dot(u[s:].reshape(-1, s), b.jt, out=self._out_s)
-        self._out_p += b.dfdp
-        return self._out
-
-    def _undefined(self, t: float, u: Floats, error: Exception) -> Floats:
-        self.reason = "failed"
-        self.message = f"a rate law is not defined at t = {t:.6g} s: {error}"
-        return np.full(u.shape, np.nan)
 
     def jacobian(self, t: float, u: Floats) -> Floats:
         """Transposed Jacobian for col_deriv, without sensitivities."""
@@ -204,9 +178,9 @@ class _Run:
         try:
             jt = self.bound.jacobian_transposed(u[:s])
         except (ArithmeticError, ValueError):
-            return np.full((2 * s - 1, s * self._blocks), np.nan)
+            return np.full((2 * s - 1, s * self.blocks), np.nan)
         self._band[self._band_rows, self._band_columns] = jt.T.ravel()
-        return np.tile(self._band, (1, self._blocks))
+        return np.tile(self._band, (1, self.blocks))
 
 
 def integrate(
@@ -260,8 +234,8 @@ def integrate(
     u0[:s] = start
     for block, species in enumerate(wanted_starts):
         u0[s * (1 + len(wanted) + block) + species] = largest
-    run = _Run(bound, _EVALUATIONS_PER_STEP * max_steps + 2 * len(stations), time.monotonic() + max_seconds)
-    run.prepare(len(wanted_starts))
+    most = _EVALUATIONS_PER_STEP * max_steps + 2 * len(stations)
+    run = _Run(bound, len(wanted_starts), most, time.monotonic() + max_seconds)
     table, outcome = _drive(run, u0, stations, p, rtol, atol, max_steps)
     rows = table[where[1:]]
     values[:] = rows[:, :s]
@@ -288,16 +262,14 @@ def _drive(
         return table, Outcome("done", reached=float(stations[0]))
     options: dict[str, Any] = {"tfirst": True, "full_output": True, "rtol": rtol, "mxstep": max_steps}
     if p == 0:
-        options.update(func=run.rates, Dfun=run.jacobian, col_deriv=True, atol=atol)
+        options.update(Dfun=run.jacobian, col_deriv=True, atol=atol)
     else:
         trace = np.tile(atol * (SENSITIVITY_TRACE / TRACE), p)
-        options.update(
-            func=run.augmented, Dfun=run.band, ml=s - 1, mu=s - 1, atol=np.concatenate([atol, trace])
-        )
+        options.update(Dfun=run.band, ml=s - 1, mu=s - 1, atol=np.concatenate([atol, trace]))
     try:
         with np.errstate(all="ignore"), warnings.catch_warnings():
             warnings.simplefilter("ignore", ODEintWarning)
-            found, info = odeint(y0=u0, t=stations, **options)
+            found, info = odeint(run.rates, u0, stations, **options)
     except _AbandonedError:
         return table, _outcome(run, run.reason or "failed", run.message, 0, float(stations[0]))
     status, message = run.reason, run.message

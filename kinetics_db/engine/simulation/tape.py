@@ -28,6 +28,9 @@ from kinetics_db.engine.network.syntax import (
 SMALLEST_BASE = 1e-30
 """Below this a concentration is treated as this in a power that would be infinite at zero."""
 
+SMALLEST_ROOT = 1e-15
+"""Stands for a zero denominator in a derivative, such as that of sqrt([A]) at [A] = 0, which is infinite."""
+
 Operation = tuple[Callable[[float, float], float], int, int]
 
 
@@ -62,6 +65,10 @@ def _log_or_zero(a: float, _: float) -> float:
 
 def _sqrt(a: float, _: float) -> float:
     return power(a, 0.5)
+
+
+def _divide_in_derivative(a: float, b: float) -> float:
+    return a / (b if b != 0.0 else SMALLEST_ROOT)
 
 
 _BINARY: dict[str, Callable[[float, float], float]] = {
@@ -104,6 +111,7 @@ class Tape:
         writer = _Writer(at_species, at_names)
         self._values = [writer.place(e) for e in expressions]
         self._short = len(writer.operations)  # values need no more than these
+        writer.in_derivatives = True
         derivatives = [derivative(expressions[n], Concentration(species[i])) for n, i in by_species]
         derivatives += [derivative(expressions[n], Parameter(names[i])) for n, i in by_names]
         self._all = self._values + [writer.place(e) for e in derivatives]
@@ -161,6 +169,7 @@ class _Writer:
         self._names = names
         self.numbers: list[float] = []
         self.operations: list[tuple[Callable[[float, float], float], Address, Address]] = []
+        self.in_derivatives = False
         self._known: dict[tuple[str, Address, Address], Address] = {}
 
     def place(self, expression: Expression) -> Address:
@@ -192,6 +201,8 @@ class _Writer:
     def _operation(self, key: str, f: Callable[[float, float], float], a: Address, b: Address) -> Address:
         known = self._known.get((key, a, b))
         if known is None:
+            if self.in_derivatives and key == "/":
+                f = _divide_in_derivative
             known = ("result", len(self.operations))
             self.operations.append((f, a, b))
             self._known[key, a, b] = known

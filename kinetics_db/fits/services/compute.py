@@ -5,7 +5,6 @@ from __future__ import annotations
 import math
 import platform
 import time
-from collections.abc import Callable
 from dataclasses import asdict, dataclass
 from importlib.metadata import version
 from typing import Any
@@ -60,7 +59,9 @@ class _Pulse:
             try:
                 # How many iterations a fit will take nobody knows: the bar nears its end without claiming it.
                 jobs.heartbeat(
-                    self.claim, progress=1.0 - 0.9**self.iteration, message=f"iteration {self.iteration}{cost}"
+                    self.claim,
+                    progress=1.0 - 0.9**self.iteration,
+                    message=f"iteration {self.iteration}{cost}",
                 )
             except jobs.StopAsked:
                 self.stop = True
@@ -152,7 +153,13 @@ def result_content(computed: Computed) -> dict[str, Any]:
         "parameters": [_parameter(p, units) for p in outcome.parameters],
         "covariance": numbers(outcome.covariance),
         "pulls": [
-            {"name": p.name, "owner": p.owner, "value": p.value, "pull": p.pull, "experiments": list(p.experiments)}
+            {
+                "name": p.name,
+                "owner": p.owner,
+                "value": p.value,
+                "pull": p.pull,
+                "experiments": list(p.experiments),
+            }
             for p in outcome.pulls
         ],
         "experiments": [_experiment(e) for e in outcome.experiments],

@@ -103,7 +103,11 @@ def _known_owners(data: DataOfFit, request: FitRequest) -> None:
     if unknown:
         raise InvalidInput(
             [
-                Problem(f"no error of the data is owned by '{owner}'", field="without_owners", cure=", ".join(owners))
+                Problem(
+                    f"no error of the data is owned by '{owner}'",
+                    field="without_owners",
+                    cure=", ".join(owners),
+                )
                 for owner in unknown
             ]
         )

@@ -27,9 +27,7 @@ def log_run(*, user: User, project_id: int, entry: RunEntry) -> RunRevision:
         return _next_revision(run, resolved, user=user, reason="", latest=None)
 
 
-def revise_run(
-    *, user: User, run: Run, entry: RunEntry, based_on: int, reason: str = ""
-) -> RunRevision:
+def revise_run(*, user: User, run: Run, entry: RunEntry, based_on: int, reason: str = "") -> RunRevision:
     """Write the next revision of a run.
 
     ``based_on`` is the number of the revision that the editor saw: Conflict when somebody else was first.
@@ -60,7 +58,9 @@ def seal_run(*, user: User, run: Run) -> Run:
     with recording(user=user):
         if not Run.objects.filter(pk=run.pk, sealed__isnull=True).update(sealed=Now()):
             raise Conflict(f"run {run.code} is sealed already")
-        note_write(verb="sealed", record_kind="run", record_id=run.pk, project_id=run.project_id, label=run.code)
+        note_write(
+            verb="sealed", record_kind="run", record_id=run.pk, project_id=run.project_id, label=run.code
+        )
     run.refresh_from_db()
     return run
 
@@ -69,7 +69,7 @@ def _next_revision(
     run: Run, resolved: Resolved, *, user: User, reason: str, latest: RunRevision | None
 ) -> RunRevision:
     number = (latest.number if latest else 0) + 1
-    parents = [part for source in resolved.sources for part in source if part is not None]
+    parents = [record for source in resolved.sources for record in source.records]
     revision = save_record(
         RunRevision(run=run, number=number, reason=reason),
         user=user,
@@ -85,11 +85,11 @@ def _next_revision(
         RunCharge(
             revision=revision,
             order=order,
-            compound_revision=compound if stock is None else None,
-            lot_revision=lot,
-            stock_revision=stock,
+            compound_revision=source.compound,
+            lot_revision=source.lot,
+            stock_revision=source.stock,
         )
-        for order, (compound, lot, stock) in enumerate(resolved.sources, start=1)
+        for order, source in enumerate(resolved.sources, start=1)
     )
     RunCondition.objects.filter(run=run).delete()
     RunCondition.objects.bulk_create(

@@ -14,9 +14,8 @@ from typing import Any
 from kinetics_db.engine import amounts
 from kinetics_db.engine.units import convert, kind_of_unit, to_stored
 from kinetics_db.errors import InvalidInput, NotFound, Problem
-from kinetics_db.materials.models import CompoundRevision, LotRevision, StockRevision
 from kinetics_db.materials.selectors import compound_named, lot_named, stock_named
-from kinetics_db.materials.sources import engine_lot, engine_stock
+from kinetics_db.materials.sources import Source
 from kinetics_db.runs.entry import CONTROL_KINDS, SECTIONS, Amount, ChargeEntry, RunEntry
 
 FORMAT = "ratewright/run/1"
@@ -27,9 +26,7 @@ class Resolved:
     """A snapshot, and the records that it was resolved from, charge by charge."""
 
     content: dict[str, Any]
-    sources: list[tuple[CompoundRevision | None, LotRevision | None, StockRevision | None]] = field(
-        default_factory=list
-    )
+    sources: list[Source] = field(default_factory=list)
 
     @property
     def conditions(self) -> dict[str, float]:
@@ -60,7 +57,9 @@ def resolve(entry: RunEntry, *, project_id: int, known_codes: Sequence[str]) -> 
     relative = [_kind(charge.amount.unit) == "relative" for charge in entry.charges]
     if any(relative) and not all(relative):
         problems.append(
-            Problem("relative and absolute charges are mixed", field="charges", cure="all in percent, or none")
+            Problem(
+                "relative and absolute charges are mixed", field="charges", cure="all in percent, or none"
+            )
         )
     for i, (charge, source) in enumerate(zip(entry.charges, sources, strict=True), start=1):
         start += _start(charge, source, i, volume, problems)
@@ -73,7 +72,9 @@ def resolve(entry: RunEntry, *, project_id: int, known_codes: Sequence[str]) -> 
         "code": entry.code,
         "basis": "relative" if any(relative) else "mol/L",
         "entered": {
-            "charges": [_entered(charge, source) for charge, source in zip(entry.charges, sources, strict=True)],
+            "charges": [
+                _entered(charge, source) for charge, source in zip(entry.charges, sources, strict=True)
+            ],
             "total_volume": _plain(entry.total_volume),
             "temperature": _plain(entry.temperature),
         },
@@ -111,7 +112,9 @@ def _plain_problems(entry: RunEntry, known_codes: Sequence[str]) -> list[Problem
     if entry.replicate_of and (entry.replicate_of not in known_codes or entry.replicate_of == entry.code):
         found.append(
             Problem(
-                f"'{entry.replicate_of}' is no other run of this project", field="replicate_of", cure="a run's code"
+                f"'{entry.replicate_of}' is no other run of this project",
+                field="replicate_of",
+                cure="a run's code",
             )
         )
     if entry.started:
@@ -129,24 +132,24 @@ def _plain_problems(entry: RunEntry, known_codes: Sequence[str]) -> list[Problem
     return found
 
 
-def _source(charge: ChargeEntry, position: int, project_id: int, problems: list[Problem]):  # type: ignore[no-untyped-def]
+def _source(charge: ChargeEntry, position: int, project_id: int, problems: list[Problem]) -> Source:
     given = [name for name in (charge.compound, charge.lot, charge.stock) if name]
     where = f"charges.{position}"
     if len(given) != 1:
         problems.append(
             Problem("a charge is of one compound, lot or stock", field=where, cure="exactly one of the three")
         )
-        return (None, None, None)
+        return Source()
     try:
         if charge.stock:
-            return (None, None, stock_named(project_id=project_id, code=charge.stock))
+            return Source(stock=stock_named(project_id=project_id, code=charge.stock))
         if charge.lot:
             lot = lot_named(project_id=project_id, code=charge.lot)
-            return (lot.compound_revision, lot, None)
-        return (compound_named(project_id=project_id, name=str(charge.compound)), None, None)
+            return Source(compound=lot.compound_revision, lot=lot)
+        return Source(compound=compound_named(project_id=project_id, name=str(charge.compound)))
     except NotFound as error:
         problems.append(Problem(str(error), field=where, cure="enter it first, or correct the name"))
-        return (None, None, None)
+        return Source()
 
 
 def _kind(unit: str) -> str:
@@ -168,7 +171,9 @@ def _volume(entry: RunEntry, problems: list[Problem]) -> tuple[amounts.TotalVolu
     volumes = [charge.amount for charge, kind in zip(entry.charges, kinds, strict=True) if kind == "volume"]
     if not volumes:
         problems.append(
-            Problem("the total volume is not known", field="total_volume", cure="a volume, for example 10.0 mL")
+            Problem(
+                "the total volume is not known", field="total_volume", cure="a volume, for example 10.0 mL"
+            )
         )
         return None, False
     parts = [_total(volume) for volume in volumes if volume.value > 0]
@@ -189,32 +194,42 @@ def _temperature(amount: Amount | None, problems: list[Problem]) -> dict[str, fl
     with _collected(problems, "temperature"):
         value = float(convert(amount.value, amount.unit, "K"))
         if not 1.0 < value < 5000.0:
-            raise InvalidInput(f"{amount.value} {amount.unit} is no reaction temperature", cure="for example 25 degC")
+            raise InvalidInput(
+                f"{amount.value} {amount.unit} is no reaction temperature", cure="for example 25 degC"
+            )
         if not 0.0 <= amount.uncertainty < 1000.0:
             raise InvalidInput(f"uncertainty {amount.uncertainty}", cure="0 or more")
         return {"value": value, "u": float(convert(amount.uncertainty, amount.unit, "K", difference=True))}
     return None
 
 
-def _start(charge, source, position, volume, problems) -> list[dict[str, Any]]:  # type: ignore[no-untyped-def]
-    compound, lot, stock = source
+def _start(
+    charge: ChargeEntry,
+    source: Source,
+    position: int,
+    volume: amounts.TotalVolume | None,
+    problems: list[Problem],
+) -> list[dict[str, Any]]:
     label = f"charge {position}"
     with _collected(problems, f"charges.{position}"):
         entered = amounts.Charge(
-            engine_stock(stock) if stock is not None else engine_lot(compound, lot),
+            source.for_engine(),
             charge.amount.value,
             charge.amount.unit,
             charge.amount.uncertainty,
         )
         if _kind(charge.amount.unit) == "relative":
-            if stock is not None:
-                raise InvalidInput("a stock cannot be charged in percent", cure="a volume or mass of the stock")
+            if source.compound is None:
+                raise InvalidInput(
+                    "a stock cannot be charged in percent", cure="a volume or mass of the stock"
+                )
             return [
                 {
                     "label": label,
-                    "compound": compound.compound.name,
+                    "compound": source.compound.compound.name,
                     "amount": None,
-                    "concentration": 100.0 * float(to_stored(charge.amount.value, charge.amount.unit, "relative")),
+                    "concentration": 100.0
+                    * float(to_stored(charge.amount.value, charge.amount.unit, "relative")),
                     "own_relative_u": entered.relative_u,
                     "shared": [],
                     "run_shared": [],
@@ -259,7 +274,9 @@ def _sections(entry: RunEntry, problems: list[Problem]) -> dict[str, Any]:
                 with _collected(problems, where):
                     if kind_of_unit(value.unit) != kind:
                         raise InvalidInput(f"'{value.unit}' is no unit of {kind}")
-                    stored = value.value if kind == "pressure" else float(to_stored(value.value, value.unit, kind))
+                    stored = (
+                        value.value if kind == "pressure" else float(to_stored(value.value, value.unit, kind))
+                    )
                     kept.setdefault(name, {})[key] = {"value": stored, "entered": _plain(value)}
     return kept
 
@@ -286,12 +303,11 @@ def _plain(amount: Amount | None) -> dict[str, Any] | None:
     return None if amount is None else {"value": amount.value, "unit": amount.unit, "u": amount.uncertainty}
 
 
-def _entered(charge: ChargeEntry, source) -> dict[str, Any]:  # type: ignore[no-untyped-def]
-    compound, lot, stock = source
+def _entered(charge: ChargeEntry, source: Source) -> dict[str, Any]:
     return {
-        "compound": compound.digest if compound is not None else None,
-        "lot": lot.digest if lot is not None else None,
-        "stock": stock.digest if stock is not None else None,
+        "compound": source.compound.digest if source.compound is not None else None,
+        "lot": source.lot.digest if source.lot is not None else None,
+        "stock": source.stock.digest if source.stock is not None else None,
         "name": charge.stock or charge.lot or charge.compound,
         "amount": _plain(charge.amount),
         "note": charge.note,

@@ -125,6 +125,8 @@ def test_names_typed_with_combining_marks_are_the_same_names() -> None:
         ("+k", 1, "nothing before it", "without"),
         ("(k", 1, "not closed", ")"),
         ("k)", 2, "not opened", "("),
+        ("(k q)", 4, "no operator before 'q'", "*"),
+        ('["A]*k', 2, "quote is not closed", '"'),
         ("k]", 2, "not opened", "["),
         ("[A", 1, "not closed", "]"),
         ("[]", 1, "no species", "[A]"),
@@ -312,3 +314,34 @@ def test_the_derivative_by_an_order_is_zero_where_the_species_is_absent() -> Non
     assert evaluate(slope, parameters={"k": 2.0, "n": 0.5}, concentrations={"A": 0.0}) == 0.0
     value = evaluate(slope, parameters={"k": 2.0, "n": 0.5}, concentrations={"A": 0.25})
     assert value == pytest.approx(2.0 * 0.5 * math.log(0.25), rel=1e-14)
+
+
+@pytest.mark.parametrize(
+    ("text", "written"),
+    [
+        ("-[A]", "-1"),
+        ("-k*[A]", "-k"),
+        ("k - -[A]", "1"),
+        ("[A] - -k*[A]", "1 + k"),
+        ("3*(2*[A])", "6"),
+        ("[A]/1", "1"),
+        ("[A]/4", "0.25"),
+        ("-[A]/k", "-1/k"),
+        ("k*-[A]", "-k"),
+        ("[A]^1", "1"),
+        ("[A]^-1", "-[A]^-2"),
+        ("k/[A]", "-(k/[A]^2)"),
+        ("sqrt([A])", "0.5/sqrt([A])"),
+        ("exp(-k*[A])", "-(exp(-k*[A])*k)"),
+        ("-exp(-[A])", "exp(-[A])"),
+        ("[A]/0", "1/0"),
+        ("1e300*(1e300*[A])", "1e+300*1e+300"),
+    ],
+)
+def test_signs_and_numbers_are_folded_in_derivatives(text: str, written: str) -> None:
+    assert write_expression(derivative(parse_expression(text), Concentration("A"))) == written
+
+
+def test_the_inner_function_of_a_derivative_by_an_exponent_cannot_be_written() -> None:
+    with pytest.raises(InvalidInput, match="log or zero"):
+        write_expression(derivative(parse_expression("a^b"), b))

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import pickle
+
 import pytest
 
 from kinetics_db.engine import parse_mechanism
@@ -113,6 +115,10 @@ def test_names_typed_with_combining_marks_are_the_same_names() -> None:
         ("-2*3*[A]", (("A", -6.0),)),
         ("[A] - -[B]", (("A", 1.0), ("B", 1.0))),
         ("(1 + 2)*[A]", (("A", 3.0),)),
+        ("(5 - 1)*[A]", (("A", 4.0),)),
+        ("(2*3)*[A]", (("A", 6.0),)),
+        ("(3/4)*[A]", (("A", 0.75),)),
+        ("[A]*-(1 + 1)", (("A", -2.0),)),
     ],
 )
 def test_an_observable_is_a_linear_combination(text: str, terms: Side) -> None:
@@ -145,6 +151,12 @@ def test_species_and_constants_are_ordered_by_the_steps_wherever_other_statement
     assert above.species == below.species == ("A", "B", "C")
     assert above.constants == below.constants == ("k_1", "K")
     assert same_network(above, below)
+
+
+def test_a_network_travels_between_processes() -> None:
+    network = parse_mechanism(CATALYSIS)
+    assert pickle.loads(pickle.dumps(network)) == network
+    assert hash(network) == hash(parse_mechanism(CATALYSIS))
 
 
 def test_networks_that_differ_are_not_the_same() -> None:

@@ -41,7 +41,7 @@ ARROWS = [
     ("A --1.5--> B", 5, "a number, 1.5", "a name"),
     ("A --2*k--> B", 5, "'2*k'", "where"),
     ("A --k 1--> B", 5, "not one name", "k_1"),
-    ("A --k'--> B", 5, '"k\'"'.strip('"'), "letters, digits and _"),
+    ("A --k'--> B", 5, "k'", "letters, digits and _"),
     ("A --T--> B", 5, "'T' is reserved", "T_1"),
     ("A --exp--> B", 5, "'exp' is reserved", "exp_1"),
     ("A --" + "k" * 101 + "--> B", 5, "101 characters", "100"),
@@ -62,6 +62,7 @@ SIDES = [
     ("0 A --k--> C", 1, "0 as a stoichiometric number", "positive"),
     ("1/0 A --k--> C", 1, "1/0 as a stoichiometric number", "positive"),
     ("9" * 400 + " A --k--> C", 1, "as a stoichiometric number", "positive"),
+    ("1000001 A --k--> C", 1, "as a stoichiometric number", "up to 1,000,000"),
     ("2 --k--> C", 3, "missing after the number", "2 A"),
     ("2 nothing --k--> C", 3, "'nothing' stands alone", "without it"),
     ("A + nothing --k--> C", 5, "'nothing' stands alone", "without it"),
@@ -203,6 +204,16 @@ def test_an_unknown_species_is_not_blamed_when_the_line_that_names_it_could_not_
     assert problem.line == 1
 
 
+def test_a_line_with_an_open_quote_may_name_a_species_too() -> None:
+    (problem,) = problems_of('A --k--> "Int\nB --q--> C\nobserve x = [A]')
+    assert problem.line == 1
+
+
+def test_a_species_of_an_unreadable_observable_is_still_unknown_elsewhere() -> None:
+    found = problems_of("A --k--> B\nobserve x = k*[Q]\nhold Q")
+    assert [p.line for p in found] == [2, 3]
+
+
 def test_warnings_are_told_beside_errors() -> None:
     found = problems_of("A --k--> A\nB --> C")
     assert [p.severity for p in found] == ["warning", "error"]
@@ -263,10 +274,18 @@ def test_what_is_odd_but_possible_is_warned_about(text: str, line: int, column: 
         "nothing --{ k }--> B",
         "A --{ k }--> B\nhold A",
         "A --{ (k_1 - k_2)*(1 + [A]) + k*[A] }--> B\nwhere k_1 = 1*k_2",
+        "1000000 A --{ 1e308*k*[A] }--> B",
         "A --{ k*exp(-Ea/(8.314*T))*[A] }--> B",
         "A --k--> B\nB --k--> C",
-        "A --{ k*[A]*A }--> B".replace("*A ", "*a "),
+        "A --{ k*[A]*a }--> B",
     ],
 )
 def test_what_is_right_is_not_warned_about(text: str) -> None:
     assert parse_mechanism(text).warnings == ()
+
+
+def test_a_message_quotes_only_the_ends_of_a_very_long_mistake() -> None:
+    (problem,) = problems_of("A --" + "k " * 20_000 + "x--> B")
+    assert len(problem.message) < 500
+    assert problem.message.endswith("is not one name")
+    assert len(problem.cure) < 500

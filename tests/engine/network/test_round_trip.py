@@ -50,7 +50,7 @@ SPECIES = (
     "[x]",
 )
 numbers = st.one_of(
-    st.just(1.0), st.sampled_from([2.0, 0.5, 3.0, 1 / 3]), st.floats(1e-12, 1e18, allow_nan=False)
+    st.just(1.0), st.sampled_from([2.0, 0.5, 3.0, 1 / 3]), st.floats(1e-300, 1e6, allow_nan=False)
 )
 
 
@@ -126,7 +126,7 @@ def _nodes(tree: Expression) -> list[Expression]:
             return [tree]
 
 
-slow = settings(suppress_health_check=[HealthCheck.too_slow], deadline=None, max_examples=200)
+slow = settings(suppress_health_check=[HealthCheck.too_slow], deadline=None, max_examples=80)
 
 
 @slow

@@ -5,6 +5,7 @@ from __future__ import annotations
 import pytest
 
 from kinetics_db.engine.network import constant_units, parse_mechanism, unit_of_order
+from kinetics_db.engine.units import convert
 from kinetics_db.errors import InvalidInput
 
 
@@ -63,3 +64,11 @@ def test_other_units_of_concentration_and_time_can_be_given(
 def test_what_is_no_unit_of_concentration_is_refused(unit: str) -> None:
     with pytest.raises(InvalidInput, match="unit of concentrations"):
         unit_of_order(2, concentration=unit)
+
+
+@pytest.mark.parametrize("order", [0, 0.5, 1, 1.5, 2, 3, 4])
+def test_every_unit_of_a_constant_can_be_read_and_converts_with_its_order(order: float) -> None:
+    """1 mmol/L is 1e-3 mol/L, so a constant per mmol/L is larger by 1000^(order - 1) per mol/L."""
+    in_millimolar = unit_of_order(order, concentration="mmol/L", time="min")
+    value = convert(1.0, in_millimolar, unit_of_order(order))
+    assert value == pytest.approx(1000.0 ** (order - 1) / 60.0, rel=1e-12)

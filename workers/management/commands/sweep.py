@@ -22,7 +22,9 @@ class Command(BaseCommand):
     help = "Take background work back from lost workers, and send again what no worker heard of."
 
     def add_arguments(self, parser: ArgumentParser) -> None:
-        parser.add_argument("--every", type=float, default=2.0, metavar="SECONDS", help="pause between sweeps")
+        parser.add_argument(
+            "--every", type=float, default=2.0, metavar="SECONDS", help="pause between sweeps"
+        )
         parser.add_argument("--once", action="store_true", help="sweep once and end")
 
     def handle(self, *args: Any, **options: Any) -> None:
@@ -41,7 +43,9 @@ class Command(BaseCommand):
                 connection.close()
             else:
                 if swept.lost or swept.crashed or swept.rung:
-                    log.info("taken back %d, given up %d, rung again %d", swept.lost, swept.crashed, swept.rung)
+                    log.info(
+                        "taken back %d, given up %d, rung again %d", swept.lost, swept.crashed, swept.rung
+                    )
             if options["once"] or ended.wait(options["every"]):
                 return
             close_old_connections()

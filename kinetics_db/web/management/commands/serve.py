@@ -19,7 +19,7 @@ FIRST_USERNAME = "admin"
 
 class Command(BaseCommand):
     help = "Run database, queue, worker, sweeper and web server on this machine until Ctrl-C."
-    requires_system_checks = []
+    requires_system_checks = ()
 
     def add_arguments(self, parser: ArgumentParser) -> None:
         parser.add_argument("--port", type=int, default=DEFAULT_PORT, help="port on 127.0.0.1 (%(default)s)")
@@ -28,7 +28,8 @@ class Command(BaseCommand):
     def handle(self, *args: Any, **options: Any) -> None:
         if settings.SETTINGS_MODULE != "kinetics_db.config.settings.local":
             raise CommandError(
-                "serve runs the installation on one machine, whose settings are kinetics_db.config.settings.local, "
+                "serve runs the installation on one machine, "
+                "whose settings are kinetics_db.config.settings.local, "
                 f"not {settings.SETTINGS_MODULE}: unset DJANGO_SETTINGS_MODULE"
             )
         installation = LocalInstallation(
@@ -72,4 +73,5 @@ def account_line(installation: LocalInstallation) -> str:
         return f"Log in as {user.username} with the password {password} (kept in {file})."
     if file.exists():
         return f"Log in as {user.username}; the first password is in {file}."
-    return f"Log in as {user.username}; a new password: .venv/bin/python manage.py changepassword {user.username}"
+    how = f".venv/bin/python manage.py changepassword {user.username}"
+    return f"Log in as {user.username}; if you forgot the password, set another one: {how}"

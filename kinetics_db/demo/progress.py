@@ -1,0 +1,81 @@
+"""Follows background fits by their job rows and shows how far they are."""
+
+from __future__ import annotations
+
+import sys
+import time
+from collections.abc import Callable, Sequence
+from typing import TYPE_CHECKING, TextIO
+
+from tqdm import tqdm
+
+from kinetics_db.fits.services import retry_fit
+from kinetics_db.jobs.selectors import job_for, jobs_for
+
+if TYPE_CHECKING:
+    from kinetics_db.accounts.models import User
+    from kinetics_db.fits.models import Fit
+
+OPEN = ("waiting", "running")
+ENDED_BADLY = ("stopped", "failed", "crashed")
+SECONDS_BETWEEN_LOOKS = 0.3
+NAME_WIDTH = 40
+
+
+def try_again(fits: Sequence[Fit], *, user: User) -> None:
+    """Put fits of an earlier start that stopped, failed or crashed back in the queue."""
+    for fit in fits:
+        if job_for(kind="fit", subject_id=fit.pk).state in ENDED_BADLY:
+            retry_fit(user=user, fit=fit)
+
+
+def follow(
+    fits: Sequence[Fit],
+    *,
+    check: Callable[[], None],
+    say: Callable[[str], None],
+    stream: TextIO | None = None,
+    sleep: Callable[[float], None] = time.sleep,
+) -> None:
+    """Show a bar for each fit until every job has ended; a line for each end.
+
+    ``check`` is called between looks and may raise, for instance when a worker has died. Bars are drawn only
+    where ``stream`` (the terminal) is one.
+    """
+    stream = stream or sys.stderr
+    names = {fit.pk: _name(fit) for fit in fits}
+    bars = {
+        fit.pk: tqdm(
+            total=100,
+            desc=f"{names[fit.pk]:<{NAME_WIDTH}}",
+            position=i,
+            leave=False,
+            file=stream,
+            disable=not stream.isatty(),
+            bar_format="  {desc} {percentage:3.0f} % |{bar:20}| {postfix}",
+        )
+        for i, fit in enumerate(fits)
+    }
+    waiting = list(names)
+    try:
+        while waiting:
+            check()
+            jobs = jobs_for(kind="fit", subject_ids=waiting)
+            for fit_id in list(waiting):
+                job, bar = jobs[fit_id], bars[fit_id]
+                bar.n = round(100 * job.progress)
+                bar.set_postfix_str(f"{job.state} {job.message}"[:30], refresh=True)
+                if job.state not in OPEN:
+                    waiting.remove(fit_id)
+                    with tqdm.external_write_mode(file=stream):
+                        say(f"fit of '{names[fit_id]}': {job.message or job.state}")
+            if waiting:
+                sleep(SECONDS_BETWEEN_LOOKS)
+    finally:
+        for bar in bars.values():
+            bar.close()
+
+
+def _name(fit: Fit) -> str:
+    name = str(fit.mechanism_version)
+    return name if len(name) <= NAME_WIDTH else name[: NAME_WIDTH - 3] + "..."

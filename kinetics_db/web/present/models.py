@@ -1,0 +1,182 @@
+"""Mechanism versions as the project page shows them: text, fits, constants with intervals."""
+
+from __future__ import annotations
+
+import math
+import re
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from kinetics_db.fits.selectors import result_of
+from kinetics_db.web.names import name_html
+from kinetics_db.web.numbers import Shown, interval, plain, shown
+from kinetics_db.web.present.runs import Curve
+
+if TYPE_CHECKING:
+    from django.utils.safestring import SafeString
+
+    from kinetics_db.fits.models import Fit, FitResult
+    from kinetics_db.jobs.models import Job
+    from kinetics_db.mechanisms.models import MechanismVersion
+
+_LEADING_NUMBER = re.compile(r"\d+(?:\.\d+)?")
+ENDED_WITHOUT_RESULT = ("failed", "crashed")
+
+
+@dataclass(frozen=True)
+class ConstantSheet:
+    """One fitted constant or start concentration."""
+
+    name: SafeString
+    where: str
+    value: Shown
+    interval: str
+    remark: str
+
+
+@dataclass(frozen=True)
+class FitSheet:
+    """One fit: how far it is, or what came out."""
+
+    fit: Fit
+    state: str
+    message: str
+    is_open: bool
+    progress: float
+    confidence: str
+    constants: Sequence[ConstantSheet]
+    points: int | None
+    seconds: str
+
+
+@dataclass(frozen=True)
+class ModelSheet:
+    """One mechanism version; ``fits`` holds the newest of each dataset, ``earlier`` counts the others."""
+
+    version: MechanismVersion
+    title: str
+    fits: Sequence[FitSheet]
+    earlier: int
+
+
+@dataclass(frozen=True)
+class FitsOfPage:
+    """The fits that a page needs, chosen once: newest first, with what is known of them."""
+
+    newest: Sequence[Fit]
+    earlier: Mapping[int, int]
+    """mechanism version id -> fits that a newer one on the same dataset replaces"""
+    results: Mapping[int, FitResult]
+    """fit id -> its result"""
+
+    @property
+    def curve_choices(self) -> list[Fit]:
+        """Fits that have curves, newest first."""
+        return [fit for fit in self.newest if fit.pk in self.results]
+
+
+def fits_of_page(fits: Sequence[Fit]) -> FitsOfPage:
+    """From all fits, newest first: the newest of each mechanism version on each dataset."""
+    newest: dict[tuple[int, int], Fit] = {}
+    earlier: dict[int, int] = {}
+    for fit in fits:
+        key = (fit.mechanism_version_id, fit.dataset_id)
+        if key in newest:
+            earlier[fit.mechanism_version_id] = earlier.get(fit.mechanism_version_id, 0) + 1
+        else:
+            newest[key] = fit
+    chosen = list(newest.values())
+    results = {fit.pk: result for fit in chosen if (result := result_of(fit)) is not None}
+    return FitsOfPage(chosen, earlier, results)
+
+
+def model_sheets(
+    versions: Sequence[MechanismVersion],
+    fits: FitsOfPage,
+    jobs: Mapping[int, Job],
+    contents: Mapping[int, dict[str, Any]],
+) -> list[ModelSheet]:
+    """Every mechanism version with its fits; jobs by fit id, contents by result id."""
+    found = []
+    for version in versions:
+        sheets = [
+            _fit_sheet(fit, jobs.get(fit.pk), fits.results.get(fit.pk), contents)
+            for fit in fits.newest
+            if fit.mechanism_version_id == version.pk
+        ]
+        found.append(ModelSheet(version, str(version), sheets, fits.earlier.get(version.pk, 0)))
+    return found
+
+
+def curves_of(content: Mapping[str, Any], casting: Mapping[str, str | None], table_ids: Sequence[int]) -> dict[int, Curve]:
+    """A result's model values by table id; ``casting`` says which observable each column was fitted as."""
+    curves = {}
+    for table_id, experiment in zip(table_ids, content.get("experiments", ()), strict=False):
+        model = np.array(experiment["model"], dtype=float)
+        names = experiment["observed_names"]
+        curves[table_id] = Curve(
+            np.array(experiment["times"], dtype=float),
+            {
+                column: model[:, names.index(observable)]
+                for column, observable in casting.items()
+                if observable in names and model.ndim == 2
+            },
+        )
+    return curves
+
+
+def _fit_sheet(
+    fit: Fit, job: Job | None, result: FitResult | None, contents: Mapping[int, dict[str, Any]]
+) -> FitSheet:
+    content = contents.get(result.pk, {}) if result is not None else {}
+    is_open = job is not None and job.state in job.OPEN
+    if is_open or (job is not None and (result is None or job.state in ENDED_WITHOUT_RESULT)):
+        state, message = str(job.state), job.message
+    elif result is not None:
+        state, message = str(result.status), content.get("message", "")
+    else:
+        state, message = "not asked for", ""
+    parameters = [p for p in content.get("parameters", ()) if p["kind"] in ("constant", "start concentration")]
+    confidence = content.get("confidence")
+    return FitSheet(
+        fit=fit,
+        state=state,
+        message=message,
+        is_open=is_open,
+        progress=job.progress if job is not None else 0.0,
+        confidence=f"{100 * confidence:.4g} %" if confidence else "",
+        constants=[_constant(p) for p in in_order(parameters)],
+        points=content.get("points"),
+        seconds=plain(result.seconds, "s", digits=3) if result is not None else "",
+    )
+
+
+def in_order(parameters: Sequence[Mapping[str, Any]]) -> list[Mapping[str, Any]]:
+    """Constants in the order of the mechanism, each with its places by number ('288.15 K' before '298.15 K')."""
+    bases = list(dict.fromkeys(p["base"] for p in parameters))
+
+    def key(p: Mapping[str, Any]) -> tuple[int, float, str]:
+        place = p["place"] or ""
+        number = _LEADING_NUMBER.match(place)
+        return bases.index(p["base"]), float(number[0]) if number else math.inf, place
+
+    return sorted(parameters, key=key)
+
+
+def _constant(p: Mapping[str, Any]) -> ConstantSheet:
+    unit = p["unit"]
+    if p["determined"]:
+        value, limits = shown(p["value"], p["standard_error"], unit), interval(p["lower"], p["upper"], unit)
+    else:
+        value, limits = Shown("not determined", f"{p['value']!r} {unit}, where the fit ended", repr(p["value"])), interval(None, None)
+    remarks = []
+    if not p["determined"] and p["why_not"]:
+        remarks.append(p["why_not"])
+    if p["at_bound"]:
+        remarks.append("pushed against its bound")
+    if p["set_by_prior"]:
+        remarks.append("set by its prior")
+    return ConstantSheet(name_html(p["base"]), p["place"] or "", value, limits, "; ".join(remarks))

@@ -1,0 +1,33 @@
+"""How dates and hashes are written on pages."""
+
+from __future__ import annotations
+
+from datetime import datetime
+
+from django import template
+from django.utils import timezone
+from django.utils.html import format_html
+from django.utils.safestring import SafeString
+
+register = template.Library()
+
+
+@register.simple_tag
+def when(moment: datetime | None) -> SafeString:
+    """A date and time in the reader's zone: '2026-03-05 09:30 CET'."""
+    if moment is None:
+        return format_html("–")
+    local = timezone.localtime(moment)
+    return format_html('<time datetime="{}">{}</time>', moment.isoformat(), f"{local:%Y-%m-%d %H:%M %Z}")
+
+
+@register.simple_tag
+def digest(text: str) -> SafeString:
+    """The beginning of a hash; the whole of it to point at."""
+    return format_html('<code class="digest" title="SHA-256 {}">{}</code>', text, text[:10])
+
+
+@register.filter
+def get(mapping: dict[object, object], key: object) -> object:
+    """An entry of a mapping, None when absent."""
+    return mapping.get(key)

@@ -1,0 +1,141 @@
+"""The report for a terminal."""
+
+from __future__ import annotations
+
+import pytest
+
+from kinetics_db.datasets.selectors import Staleness
+from kinetics_db.demo.report import (
+    columns_of,
+    grid_text,
+    interval_text,
+    label,
+    place_key,
+    with_uncertainty,
+)
+from kinetics_db.evidence.selectors import Cell, Grid, GridColumn
+
+
+@pytest.mark.parametrize(
+    ("value", "uncertainty", "text"),
+    [
+        (1.2341, 0.0056, "1.2341(56)"),
+        (0.0114, 0.00011, "1.140(11)e-2"),
+        (1.701e-4, 4.03e-7, "1.7010(40)e-4"),
+        (0.25, 0.01, "0.250(10)"),
+        (123.4, 5.6, "123.4(5.6)"),
+        (1234.0, 56.0, "1234(56)"),
+        (1234.0, 560.0, "1.23(56)e3"),
+        (-0.5, 0.02, "-0.500(20)"),
+        (9.9996e-4, 1.2e-6, "1.0000(12)e-3"),
+        (1.0, 0.0996, "1.00(10)"),
+        (2.0e-5, 4.0e-5, "2.0(4.0)e-5"),
+        (0.0, 0.02, "0.000(20)"),
+        (3.14159, None, "3.142"),
+        (3.14159, 0.0, "3.142"),
+        (3.14159, float("nan"), "3.142"),
+    ],
+)
+def test_digits_in_brackets_are_the_uncertainty_of_the_last_digits(
+    value: float, uncertainty: float | None, text: str
+) -> None:
+    assert with_uncertainty(value, uncertainty) == text
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "text"),
+    [
+        (0.01118, 0.01161, "(1.118 to 1.161)e-2"),
+        (1.693e-4, 1.709e-4, "(1.693 to 1.709)e-4"),
+        (0.94e-3, 1.004e-3, "(0.940 to 1.004)e-3"),
+        (0.25, 0.31, "0.250 to 0.310"),
+        (12.0, 340.0, "12 to 340"),
+        (-1.5, 2.5, "-1.5 to 2.5"),
+        (None, 2.5, "open"),
+        (1.0, None, "open"),
+    ],
+)
+def test_both_ends_of_an_interval_are_given_to_the_same_place(
+    low: float | None, high: float | None, text: str
+) -> None:
+    assert interval_text(low, high) == text
+
+
+def test_columns_of_a_grid_are_lettered_beyond_the_alphabet() -> None:
+    assert [label(i) for i in (0, 25, 26, 27, 52)] == ["A", "Z", "AA", "AB", "BA"]
+
+
+def test_temperatures_are_put_in_the_order_of_their_numbers() -> None:
+    assert sorted(["98.00 K", "298.15 K", "run 2", "", "100.00 K"], key=place_key) == [
+        "98.00 K", "100.00 K", "298.15 K", "", "run 2",
+    ]  # fmt: skip
+
+
+def test_rows_are_aligned_and_cut_at_the_width_of_the_terminal() -> None:
+    lines = columns_of([("a", "12", "x"), ("long", "3", "y" * 200)], right=(1,))
+    assert lines[0] == "  a     12  x"
+    assert lines[1].startswith("  long   3  yyy") and lines[1].endswith("...") and len(lines[1]) == 100
+
+
+def column(
+    fit_id: int, *, delta: float | None = None, status: str = "converged", stale: str = ""
+) -> GridColumn:
+    return GridColumn(
+        fit_id=fit_id,
+        mechanism=f"mechanism {fit_id} " + "with a long name " * 8,
+        dataset="all v1",
+        status=status,
+        aicc=1.0,
+        bic=1.0,
+        stale=Staleness((stale,) if stale else ()),
+        delta_aicc=delta,
+    )
+
+
+def cell(verdict: str, fit_id: int) -> Cell:
+    return Cell(verdict, 0.5, 0.01, fit_id, "t1")
+
+
+def test_the_grid_has_runs_down_and_versions_across_with_their_verdicts() -> None:
+    grid = Grid(
+        ("r1", "r2"),
+        (column(1, delta=0.0), column(2, delta=1234.56)),
+        {("r1", 1): cell("agrees", 1), ("r1", 2): cell("disagrees", 2), ("r2", 2): cell("strained", 2)},
+    )
+    rows = [line.split() for line in grid_text(grid).splitlines()]
+    assert ["run", "A", "B"] in rows
+    assert ["r1", "agrees", "disagrees"] in rows
+    assert ["r2", ".", "strained"] in rows
+    assert ["AICc", "above", "the", "lowest", "0.0", "1234.6"] in rows
+
+
+def test_every_verdict_that_occurs_is_explained_and_no_other() -> None:
+    text = grid_text(Grid(("r1",), (column(1),), {("r1", 1): cell("consistent", 1)}))
+    explained = [
+        line.split("  ")[0] for line in text.splitlines() if line.startswith(("agrees", "consistent"))
+    ]
+    assert explained == ["consistent"]
+
+
+def test_a_grid_of_many_versions_and_long_names_stays_within_100_columns() -> None:
+    columns = tuple(column(i, delta=float(10**i)) for i in range(1, 16))
+    runs = tuple("a run with a long code " * 3 + str(i) for i in range(3))
+    cells = {(run, c.fit_id): cell("not tested", c.fit_id) for run in runs for c in columns}
+    text = grid_text(Grid(runs, columns, cells))
+    assert max(map(len, text.splitlines())) <= 100
+    assert text.count("not tested") == 3 * 15 + 1
+    heads = [name for line in text.splitlines() if line.startswith("run ") for name in line.split()[1:]]
+    assert heads == [label(i) for i in range(15)]
+
+
+def test_a_stale_or_unconverged_fit_says_so_beside_its_name() -> None:
+    stale = "run r1 has been revised"
+    grid = Grid((), (column(1, status="not converged"), column(2, stale=stale)), {})
+    text = grid_text(grid)
+    assert f"stale: {stale}" in text
+    assert "A  (not converged) mechanism 1" in text
+    assert "B  mechanism 2" in text
+
+
+def test_a_project_without_fits_says_so_instead_of_showing_an_empty_grid() -> None:
+    assert grid_text(Grid(("r1",), (), {})) == "No fit has a result yet."

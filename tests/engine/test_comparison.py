@@ -1,0 +1,225 @@
+"""Verdicts on runs and the comparison of models."""
+
+from dataclasses import replace
+
+import numpy as np
+import pytest
+
+from kinetics_db.engine import fit_globally, parse_mechanism, simulate
+from kinetics_db.engine.comparison import (
+    Thresholds,
+    aicc,
+    akaike_weights,
+    bic,
+    compare,
+    effective_parameters,
+    evidence_of_model,
+    evidence_of_runs,
+    likelihood_ratio,
+)
+from kinetics_db.engine.fitting.problem import Charge, Constant, Experiment, Nuisance, Settings
+from kinetics_db.errors import InvalidInput
+
+CHAIN = parse_mechanism("A --k_1--> B\nB --k_2--> C")
+DIRECT = parse_mechanism("A --k_1--> B\nA --k_2--> C")
+TIMES = np.linspace(0.5, 12.0, 24)
+CONSTANTS = [Constant("k_1", 0.4), Constant("k_2", 0.3)]
+
+
+def made(name, seed, sigma=0.01, stated=None, **constants):
+    curves = simulate(CHAIN, constants={"k_1": 0.5, "k_2": 0.2, **constants}, start={"A": 1.0}, times=TIMES)
+    values = curves.values + sigma * np.random.default_rng(seed).normal(size=curves.values.shape)
+    table = np.full(values.shape, stated or sigma)
+    return Experiment(name, (Charge("A", 1.0),), TIMES, ("A", "B", "C"), values, table)
+
+
+def fit(network, experiments, **more):
+    found = fit_globally(network, experiments, CONSTANTS, **more)
+    assert found.status == "converged", found.message
+    return found
+
+
+RUNS = [made(f"r{i}", seed=10 + i) for i in range(4)]
+
+
+def test_runs_explained_by_the_model_agree_and_carry_their_numbers():
+    evidence = evidence_of_runs(fit(CHAIN, RUNS))
+    assert [run.verdict for run in evidence] == ["agrees"] * 4
+    freedom = sum(o.degrees_of_freedom for run in evidence for o in run.observables)
+    assert freedom == pytest.approx(4 * 72 - 2)  # the traces of the hat blocks add up to the parameters
+    for run in evidence:
+        for o in run.observables:
+            assert o.n == 24
+            assert 0.3 < o.chi_square / o.degrees_of_freedom < 2.5
+            assert o.nrmse < 0.05
+            assert 0.5 < o.durbin_watson < 3.5
+            assert abs(o.largest_standardised) < 5
+            assert o.chi_square_p <= o.chi_square_p_adjusted
+        assert run.thresholds == Thresholds()
+
+
+def test_a_wrong_model_disagrees_with_the_runs_that_refute_it():
+    evidence = evidence_of_runs(fit(DIRECT, RUNS))
+    assert [run.verdict for run in evidence] == ["disagrees"] * 4
+    assert evidence[0].worst_observable in ("A", "B", "C")
+
+
+def test_a_single_odd_run_is_singled_out():
+    odd = made("odd", seed=99, k_2=0.4)
+    many = [made(f"r{i}", seed=10 + i) for i in range(10)]
+    evidence = evidence_of_runs(fit(CHAIN, [*many, odd]))
+    assert evidence[-1].verdict == "disagrees"
+    assert sum(run.verdict == "disagrees" for run in evidence) == 1
+
+
+def test_a_failed_test_with_a_small_error_is_strained_only():
+    """sigma stated at a third of the true scatter: chi-square fails, the curve is within 5 % of the span."""
+    runs = [made(f"r{i}", seed=10 + i, stated=0.01 / 3) for i in range(3)]
+    evidence = evidence_of_runs(fit(CHAIN, runs))
+    assert {run.verdict for run in evidence} == {"strained"}
+
+
+def test_stated_uncertainties_that_are_too_large_are_called_so():
+    runs = [made(f"r{i}", seed=10 + i, stated=0.1) for i in range(3)]
+    evidence = evidence_of_runs(fit(CHAIN, runs))
+    assert all(run.verdict == "agrees" for run in evidence)
+    assert "uncertainties too large to test" in evidence[0].note
+
+
+def test_with_a_fitted_sigma_the_strongest_word_is_consistent():
+    evidence = evidence_of_runs(fit(CHAIN, RUNS, settings=Settings(error_model="one sigma")))
+    assert {run.verdict for run in evidence} == {"consistent"}
+    wrong = evidence_of_runs(fit(DIRECT, RUNS, settings=Settings(error_model="one sigma")))
+    assert "disagrees" in {run.verdict for run in wrong}
+
+
+def test_an_observable_without_points_is_not_tested_and_does_not_decide():
+    values = RUNS[0].values.copy()
+    values[:, 2] = np.nan
+    evidence = evidence_of_runs(fit(CHAIN, [replace(RUNS[0], values=values), RUNS[1]]))
+    assert [o.verdict for o in evidence[0].observables] == ["agrees", "agrees", "not tested"]
+    assert evidence[0].verdict == "agrees"
+    assert evidence[0].observables[2].chi_square is None
+
+
+def test_below_ten_points_there_is_no_runs_test():
+    short = [replace(r, times=r.times[:9], values=r.values[:9], sigma=r.sigma[:9]) for r in RUNS]
+    evidence = evidence_of_runs(fit(CHAIN, short))
+    assert all(o.runs_p is None for run in evidence for o in run.observables)
+
+
+def test_a_large_pull_of_a_runs_own_nuisance_makes_it_strained():
+    """The charge is 10 % off where 2 % was claimed: the curve fits, the pull tells."""
+    runs = [replace(r, charges=(Charge("A", 1.0, (f"weighing {r.name}",)),)) for r in RUNS]
+    runs[2] = replace(runs[2], charges=(Charge("A", 0.9, ("weighing r2",)),))
+    nuisances = [Nuisance(f"weighing {r.name}", r.name, 0.02) for r in RUNS]
+    evidence = evidence_of_runs(fit(CHAIN, runs, nuisances=nuisances))
+    assert [run.verdict for run in evidence] == ["agrees", "agrees", "strained", "agrees"]
+    assert evidence[2].pulls[0].name == "weighing r2"
+    assert evidence[2].pulls[0].pull > 3
+
+
+def test_a_run_that_alone_determines_its_constants_is_not_tested():
+    one = Experiment(
+        "one", (Charge("A", 1.0),), np.array([2.0]), ("A",), np.array([[0.4]]), np.array([[0.01]])
+    )
+    network = parse_mechanism("A --k--> B")
+    found = fit_globally(network, [one], [Constant("k", 0.3)])
+    assert evidence_of_runs(found)[0].verdict == "not tested"
+
+
+def test_aicc_follows_the_worked_example_of_least_squares():
+    """n = 6, RSS = 25.990267, K = 3 with sigma counted (BOD data of Bates & Watts 1988): AICc 26.79577591."""
+    value = aicc(6 * np.log(25.990267 / 6), 6, 3)
+    assert value == pytest.approx(26.79577591532741, rel=1e-12)
+    assert aicc(1.0, 4, 3) is None
+    assert aicc(1.0, 5, 3) == pytest.approx(1.0 + 6.0 + 24.0)
+
+
+def test_akaike_weights_follow_the_worked_example():
+    """Differences 0, 2, 7 (Burnham & Anderson 2002, their formula)."""
+    expected = [0.7152682759694339, 0.2631324936512963, 0.021599230379269717]
+    assert akaike_weights([10.0, 12.0, 17.0]) == pytest.approx(expected)
+
+
+def test_the_criteria_of_a_fit_with_one_sigma_are_those_of_least_squares_up_to_a_constant():
+    found = fit(CHAIN, RUNS, settings=Settings(error_model="one sigma"))
+    evidence = evidence_of_model(found)
+    n, rss = found.n_points, found.residual_sum_of_squares
+    assert evidence.k == 3
+    assert evidence.aicc == pytest.approx(n + aicc(n * np.log(rss / n), n, 3))
+    assert evidence.bic == pytest.approx(bic(n + n * np.log(rss / n), n, 3))
+    assert evidence_of_model(fit(CHAIN, RUNS)).k == 2  # tabulated sigmas are not counted
+
+
+def test_a_parameter_with_a_prior_counts_by_what_the_data_say_of_it():
+    runs = [replace(r, charges=(Charge("A", 1.0, ("stock",)),)) for r in RUNS]
+    loose = fit(CHAIN, runs, nuisances=[Nuisance("stock", "stock", 10.0)])
+    tight = fit(CHAIN, runs, nuisances=[Nuisance("stock", "stock", 1e-6)])
+    assert effective_parameters(loose) == pytest.approx(3.0, abs=1e-3)
+    assert effective_parameters(tight) == pytest.approx(2.0, abs=1e-3)
+
+
+def test_the_true_model_wins_by_far():
+    comparison = compare({"chain": fit(CHAIN, RUNS), "direct": fit(DIRECT, RUNS)})
+    assert comparison.best == "chain"
+    assert comparison.differences["chain"] == 0.0
+    assert comparison.differences["direct"] > 10
+    assert comparison.weights["chain"] == pytest.approx(1.0)
+
+
+def test_no_weights_are_given_when_the_residuals_of_the_best_model_are_correlated():
+    comparison = compare({"direct": fit(DIRECT, RUNS)})
+    assert comparison.weights is None
+    assert "correlated" in comparison.why_no_weights
+
+
+def test_aicc_is_undefined_for_too_few_points():
+    short = replace(RUNS[0], times=TIMES[:1], values=RUNS[0].values[:1], sigma=RUNS[0].sigma[:1])
+    found = fit_globally(CHAIN, [short], CONSTANTS)
+    evidence = evidence_of_model(found)
+    assert evidence.aicc is None
+    assert "3 points" in evidence.why_no_aicc
+    assert compare({"m": found}).weights is None
+
+
+@pytest.mark.parametrize(
+    "other",
+    [
+        RUNS[:3],
+        [*RUNS[:3], made("r3", seed=77)],
+        [*RUNS[:3], replace(RUNS[3], sigma=RUNS[3].sigma * 2)],
+        [*RUNS[:3], replace(RUNS[3], times=TIMES + 0.1)],
+    ],
+    ids=["other runs", "other values", "other uncertainties", "other times"],
+)
+def test_fits_of_different_data_are_not_compared(other):
+    with pytest.raises(InvalidInput, match="same data"):
+        compare({"a": fit(CHAIN, RUNS), "b": fit(CHAIN, other)})
+
+
+def test_the_likelihood_ratio_of_nested_models_counts_the_extra_constants():
+    tied = fit(CHAIN, RUNS)
+    apart = fit_globally(CHAIN, RUNS, [Constant("k_1", 0.4, scope="own per run"), Constant("k_2", 0.3)])
+    ratio = likelihood_ratio(apart, tied)
+    assert ratio.degrees_of_freedom == pytest.approx(3.0)
+    assert 0.001 < ratio.p < 1.0
+    assert likelihood_ratio(apart, tied, constant_at_zero=True).p == pytest.approx(ratio.p / 2)
+    with pytest.raises(InvalidInput):
+        likelihood_ratio(tied, apart)
+
+
+def test_chi_square_p_values_are_spread_evenly_when_the_model_is_true():
+    """40 simulated fits of 4 runs: the mean of 480 p-values is 0.5 within 0.06 (over four standard errors)."""
+    p = []
+    for seed in range(40):
+        runs = [made(f"r{i}", seed=1000 + 4 * seed + i) for i in range(4)]
+        for run in evidence_of_runs(fit(CHAIN, runs)):
+            p += [o.chi_square_p for o in run.observables]
+    assert np.mean(p) == pytest.approx(0.5, abs=0.06)
+
+
+def test_a_fit_without_a_result_is_not_judged():
+    found = fit_globally(CHAIN, RUNS, CONSTANTS, settings=Settings(max_seconds=1e-9))
+    with pytest.raises(InvalidInput, match="no result"):
+        evidence_of_runs(found)
