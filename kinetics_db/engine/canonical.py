@@ -1,7 +1,8 @@
 """Canonical JSON (RFC 8785) of plain values, and SHA-256 over it.
 
 Text is brought to Unicode NFC; -0.0 becomes 0; NaN and infinities are refused, so whoever stores 'no value'
-writes null and says why beside it. Integers beyond 2^53 are refused, as RFC 8785 asks.
+writes null and says why beside it. Integers beyond 2^53 are refused, as RFC
+8785 asks, unless they are how it writes a float.
 """
 
 from __future__ import annotations
@@ -26,9 +27,12 @@ def plain(value: Any, path: str = "$") -> Any:
     if isinstance(value, str):
         return unicodedata.normalize("NFC", value)
     if isinstance(value, int):
-        if abs(value) > MAX_INTEGER:
-            raise InvalidInput(f"integer {value} at {path} is beyond 2^53", cure="write it as text")
-        return int(value)
+        if abs(value) <= MAX_INTEGER:
+            return int(value)
+        # RFC 8785 writes large floats without exponent, so they read back as integers.
+        if abs(value) < 10**21 and rfc8785.dumps(float(value)) == str(value).encode():
+            return float(value)
+        raise InvalidInput(f"integer {value} at {path} is beyond 2^53", cure="write it as text")
     if isinstance(value, float):  # numpy.float64 is a float
         if not math.isfinite(value):
             raise InvalidInput(f"{value} at {path}", cure="a finite number, or null with a reason beside it")

@@ -22,7 +22,7 @@ def projects_visible_to(user: User) -> QuerySet[Project]:
 
 def project_named(*, user: User, slug: str) -> Project:
     """A project that the person may see; NotFound otherwise, so that names leak nothing."""
-    project = projects_visible_to(user).filter(slug=slug).first()
+    project = projects_visible_to(user).select_related("created_by").filter(slug=slug).first()
     if project is None:
         raise NotFound(f"there is no project '{slug}' that you may see")
     return project

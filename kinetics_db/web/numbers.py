@@ -14,7 +14,7 @@ from django.utils.safestring import SafeString
 
 NOTHING = "–"
 MINUS = "−"
-SMALLEST_PLAIN, LARGEST_PLAIN = -3, 4  # powers of ten that are written without a factor 10ⁿ
+SMALLEST_PLAIN, LARGEST_PLAIN = -2, 4  # powers of ten that are written without a factor 10ⁿ
 MOST_DIGITS = 15  # a float has no more
 
 _RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")

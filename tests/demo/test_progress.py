@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import io
 from collections.abc import Iterator
+from pathlib import Path
 
 import pytest
 
@@ -36,12 +37,16 @@ def test_following_ends_when_every_fit_has_ended_with_a_line_for_each(fits: list
     undone = list(fits)
     looks: list[int] = []
     lines: list[str] = []
+
+    def finish_one(_: float) -> None:
+        compute_now(undone.pop(0))
+
     follow(
         fits,
         check=lambda: looks.append(1),
         say=lines.append,
         stream=io.StringIO(),
-        sleep=lambda _: compute_now(undone.pop(0)) and None,
+        sleep=finish_one,
     )
     assert len(looks) == len(fits) + 1
     assert [line.split(":")[0] for line in lines] == [
@@ -76,7 +81,7 @@ def test_a_bar_stands_where_the_job_stands(fits: list[Fit]) -> None:
     assert "iteration 5" in terminal.getvalue()
 
 
-def test_the_death_of_a_child_ends_the_following(fits: list[Fit], tmp_path) -> None:  # type: ignore[no-untyped-def]
+def test_the_death_of_a_child_ends_the_following(fits: list[Fit], tmp_path: Path) -> None:
     def check() -> None:
         raise ChildDied("The worker has died.", name="worker", log=tmp_path)
 

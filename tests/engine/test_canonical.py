@@ -90,7 +90,7 @@ def test_numbers_that_are_not_finite_are_refused_with_their_path(value: float) -
 
 def test_integers_beyond_the_exact_range_are_refused() -> None:
     assert canonical_json(2**53 - 1) == b"9007199254740991"
-    for value in (2**53, -(2**53), 10**400):
+    for value in (2**53 + 1, -(2**53) - 1, 10**400):
         with pytest.raises(InvalidInput, match="beyond 2"):
             canonical_json({"n": value})
 
@@ -117,15 +117,10 @@ _VALUES = st.recursive(
 )
 
 
-def _whole(text: str) -> int | float:
-    # every number of canonical JSON is a double; Python alone would read 1e17 as an integer
-    return int(text) if abs(int(text)) < 2**53 else float(text)
-
-
 @given(_VALUES)
 def test_reading_the_bytes_back_and_writing_them_again_changes_nothing(value: object) -> None:
     written = canonical_json(value)
-    assert canonical_json(json.loads(written, parse_int=_whole)) == written
+    assert canonical_json(json.loads(written)) == written
 
 
 @given(_VALUES)

@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 
 from kinetics_db.web.axes import axis, nice_step
 from kinetics_db.web.marks import SHAPES, colour_class, shape
-from kinetics_db.web.plots import BOTTOM, LEFT, MOST_POINTS, RIGHT, TOP, Plot, Series, describe, draw
+from kinetics_db.web.plots import BOTTOM, LEFT, MOST_POINTS, RADIUS, RIGHT, TOP, Plot, Series, describe, draw
 
 TIMES = np.linspace(0.0, 60.0, 13)
 FALLING = 100.0 * np.exp(-TIMES / 20.0)
@@ -86,7 +86,7 @@ def test_a_curve_goes_through_the_models_values_and_is_explained() -> None:
     centres = re.findall(r"M([\d.]+) ([\d.]+)a", paths(svg, "mark")[0])
     assert len(curve) == len(centres) == TIMES.size
     for (x, y), (left, middle) in zip(curve, centres, strict=True):
-        assert (x, y) == pytest.approx((float(left) + 3.2, float(middle)), abs=0.11)
+        assert (x, y) == pytest.approx((float(left) + RADIUS, float(middle)), abs=0.11)
     assert "model" in [e.text for e in of_class(svg, "key")]
     assert "lines: slow path v1" in describe(plot(series, model_name="slow path v1"))
 
@@ -129,7 +129,7 @@ def test_very_long_tables_are_thinned_out_but_keep_their_ends() -> None:
     svg = parsed(draw(plot(Series("lactone", 0, times, times))))
     assert paths(svg, "mark")[0].count("Z") == MOST_POINTS
     xs = [float(x) for x in re.findall(r"M([\d.]+) [\d.]+a", paths(svg, "mark")[0])]
-    assert (min(xs) + 3.2, max(xs) + 3.2) == pytest.approx((LEFT + 4, RIGHT - 4), abs=0.2)
+    assert (min(xs) + RADIUS, max(xs) + RADIUS) == pytest.approx((LEFT + 4, RIGHT - 4), abs=0.2)
 
 
 def test_a_name_with_markup_stays_text() -> None:

@@ -20,7 +20,7 @@ from tests.factories.people import make_member, make_user
 from tests.web.conftest import RIGHT, WRONG, Study
 
 ADDRESS = "/projects/oxidation/"
-MOST_QUERIES = 17
+MOST_QUERIES = 16
 
 
 def html_of(browser: Client, address: str = ADDRESS) -> str:
@@ -236,7 +236,7 @@ def test_the_number_of_queries_does_not_grow_with_the_runs(browser: Client, stud
         dataset = study.dataset()
         study.fit("first order", RIGHT, dataset)
         study.fit("second order", WRONG, dataset, start=1e-2)
-        with CaptureQueriesContext(connection, ) as queries:
+        with CaptureQueriesContext(connection) as queries:
             html_of(browser)
         counts.append(len(queries))
     assert counts[0] == counts[1] <= MOST_QUERIES, "\n".join(q["sql"][:200] for q in queries)

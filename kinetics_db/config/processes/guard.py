@@ -117,11 +117,9 @@ def is_running(pid: int) -> bool:
     except PermissionError:
         return True
     try:
-        # The state follows the name, which stands in brackets and may hold anything.
-        state = Path(f"/proc/{pid}/stat").read_bytes().rpartition(b")")[2].split()[:1]
+        return not _has_ended(_fields_of(Path(f"/proc/{pid}/stat")))
     except OSError:
         return not Path("/proc/self/stat").exists()  # gone meanwhile, or a system without /proc
-    return state != [b"Z"]
 
 
 def group_is_running(group: int) -> bool:
@@ -137,12 +135,23 @@ def group_is_running(group: int) -> bool:
     for entry in Path("/proc").iterdir():
         if entry.name.isdigit():
             try:
-                fields = (entry / "stat").read_bytes().rpartition(b")")[2].split()
+                fields = _fields_of(entry / "stat")
             except OSError:
                 continue
-            if int(fields[2]) == group and fields[0] != b"Z":
+            if int(fields[2]) == group and not _has_ended(fields):
                 return True
     return False
+
+
+def _fields_of(stat: Path) -> list[bytes]:
+    """The fields of /proc/PID/stat from the state on; before it stands a name which may hold anything."""
+    return stat.read_bytes().rpartition(b")")[2].split()
+
+
+def _has_ended(fields: list[bytes]) -> bool:
+    """A zombie whose threads are gone too: until then it can still hold a port open."""
+    number_of_threads = int(fields[17])
+    return fields[0] in (b"Z", b"X") and number_of_threads <= 1
 
 
 def kill_group(group: int) -> None:

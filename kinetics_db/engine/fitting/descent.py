@@ -2,7 +2,7 @@
 
 SciPy's trust-region reflective method (Branch, Coleman & Li, SIAM J. Sci. Comput. 21 (1999) 1) on exact
 Jacobians. It ends when a full Gauss-Newton step would no longer lower -2 ln L noticeably (in the spirit of the
-relative offset, Bates & Watts, Technometrics 23 (1981) 179).
+relative offset, Bates & Watts, Technometrics 23 (1981) 179); a few full steps then sharpen the point.
 """
 
 from __future__ import annotations
@@ -18,16 +18,18 @@ from scipy.optimize import least_squares
 from kinetics_db.engine.fitting.objective import Objective, Point
 from kinetics_db.engine.fitting.problem import Settings
 from kinetics_db.engine.fitting.residuals import Evaluation, InterruptedFitError, Model
-from kinetics_db.engine.fitting.uncertainty import curvature, pushed_against_bounds
+from kinetics_db.engine.fitting.uncertainty import Curvature, curvature, pushed_against_bounds
 
 Floats = NDArray[np.float64]
 DescentStatus = Literal["converged", "stopped", "not converged", "cannot start"]
 
 TIGHT = 1e-13  # further fall of -2 ln L, per point, that counts as none
-LOOSE = 1e-5  # fall that integration noise may leave undone
+LOOSE = 1e-5  # fall of -2 ln L, 0.003 standard errors, below which the search hands over to full steps
+MOST_POLISHING_STEPS = 10
 MOST_FAILURES_IN_A_ROW = 16
+HARDLY = "a full step would hardly lower the cost"
 MOST_SIGMA_ROUNDS = 60
-SIGMA_TOLERANCE = 1e-7
+SIGMA_TOLERANCE = 1e-6
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,9 +64,9 @@ class Descender:
     ) -> None:
         self.model = model
         self.objective = objective
-        self.best: Point | None = None
+        self.best: Point | None = None  # lowest cost at its own sigmas, kept for a search that is cut short
         self.iterations = 0
-        self.negligible = TIGHT * max(objective.data.n, 1)
+        self._negligible = TIGHT * max(objective.data.n, 1)
         self._settings = settings
         self._on_progress = on_progress
         parameters = objective.parameters
@@ -80,27 +82,26 @@ class Descender:
             evaluation = self.model.evaluate(theta)
             if evaluation.failed is not None:
                 return Descent("cannot start", _failure(evaluation), None)
-            self._meet(evaluation)
-            status, message = self._rounds(begun)
+            current, status, message = self._rounds(self._meet(evaluation), begun)
+            if status == "converged":
+                self.best = current
         except InterruptedFitError as interruption:
             status, message = "stopped", str(interruption)
             if self.best is None:
                 message += " before the first evaluation was complete"
         return Descent(status, message, self.best, self.iterations - begun)
 
-    def _rounds(self, begun: int) -> tuple[Literal["converged", "not converged"], str]:
+    def _rounds(self, current: Point, begun: int) -> tuple[Point, Literal["converged", "not converged"], str]:
         """Alternate the parameters and the profiled sigmas to their fixed point."""
-        message = ""
         for _ in range(MOST_SIGMA_ROUNDS):
-            assert self.best is not None
-            sigmas = self.best.sigmas
-            converged, message = self._minimise(sigmas, begun)
+            sigmas = current.sigmas
+            current, converged, message = self._minimise(current, sigmas, begun)
             if not converged:
-                return "not converged", message
+                return current, "not converged", message
             # with one common sigma and no prior a second round only sharpens the criterion
-            if np.allclose(np.log(self.best.sigmas), np.log(sigmas), rtol=0, atol=SIGMA_TOLERANCE):
-                return "converged", message
-        return "not converged", "the standard uncertainties did not settle"
+            if np.allclose(np.log(current.sigmas), np.log(sigmas), rtol=0, atol=SIGMA_TOLERANCE):
+                return current, "converged", message
+        return current, "not converged", "the standard uncertainties did not settle"
 
     def _meet(self, evaluation: Evaluation) -> Point:
         point = self.objective.point(evaluation)
@@ -108,26 +109,46 @@ class Descender:
             self.best = point
         return point
 
-    def _minimise(self, sigmas: Floats, begun: int) -> tuple[bool, str]:
-        assert self.best is not None
-        if self.decrease(self.best, sigmas) < self.negligible:
-            return True, "a full step would not lower the cost any further"
-        search = _Search(self, self.best, sigmas, begun)
-        ending = search.run()
-        remaining = self.decrease(self.best, sigmas)
-        if ending is None:
-            return True, "a full step would not lower the cost any further"
-        if remaining < LOOSE:
-            return True, f"{ending}; a full step would lower -2 ln L by {remaining:.1e}"
-        return False, f"{ending}, though a full step should lower -2 ln L by {remaining:.3g}"
+    def _minimise(self, current: Point, sigmas: Floats, begun: int) -> tuple[Point, bool, str]:
+        ending = HARDLY
+        if not self.hardly_falls(current, sigmas):
+            current, ending = _Search(self, current, sigmas, begun).run()
+        remaining = self._curvature(current, sigmas).decrease
+        if remaining >= LOOSE:
+            what = f"{ending}, though a full step should lower -2 ln L by {remaining:.3g}"
+            return current, False, what
+        current, remaining = self._polish(current, sigmas, remaining)
+        return current, True, f"a full step would lower -2 ln L by {remaining:.1e} only"
 
-    def decrease(self, point: Point, sigmas: Floats) -> float:
-        """By how much a full Gauss-Newton step inside the bounds would lower -2 ln L - 2 ln prior."""
+    def _polish(self, current: Point, sigmas: Floats, decrease: float) -> tuple[Point, float]:
+        """Last full steps, judged by the fall still to come, since the fall itself drowns in integration noise."""
+        for _ in range(MOST_POLISHING_STEPS):
+            if decrease < self._negligible:
+                break
+            theta = current.theta + self._curvature(current, sigmas).step
+            if np.any(theta < self._lower) or np.any(theta > self._upper):
+                break
+            evaluation = self.model.evaluate(theta)
+            if evaluation.failed is not None:
+                break
+            point = self._meet(evaluation)
+            left = self._curvature(point, sigmas).decrease
+            if left >= decrease:
+                break
+            current, decrease = point, left
+            self.accepted(current)
+        return current, decrease
+
+    def _curvature(self, point: Point, sigmas: Floats) -> Curvature:
         residuals, jacobian = self.objective.standardised(point, sigmas)
         pulls = self.objective.prior_residuals(point.theta)
         gradient = jacobian.T @ residuals + pulls / self.objective.prior_sds
         fixed = pushed_against_bounds(point.theta, self._lower, self._upper, gradient, self._scale)
-        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed).decrease
+        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed)
+
+    def hardly_falls(self, point: Point, sigmas: Floats) -> bool:
+        """Whether a full Gauss-Newton step inside the bounds would no longer lower the cost noticeably."""
+        return self._curvature(point, sigmas).decrease < LOOSE
 
     def accepted(self, point: Point) -> None:
         """Count an iteration and tell of it."""
@@ -149,8 +170,8 @@ class _Search:
         self._failures = 0
         self._lowest = self._sum_of_squares(origin)
 
-    def run(self) -> str | None:
-        """None when the tight criterion was met, else how the search ended."""
+    def run(self) -> tuple[Point, str]:
+        """The last accepted point and how the search ended, in words."""
         owner = self._owner
         scale, theta = owner._scale, self._origin.theta
         lower, upper = (owner._lower - theta) / scale, (owner._upper - theta) / scale
@@ -169,9 +190,9 @@ class _Search:
                 callback=self._after_iteration,
             )
         except _StalledError:
-            return "no smaller step was better"
+            return self._accepted, "no smaller step was better"
         endings = {
-            -2: None,
+            -2: HARDLY,
             0: f"the limit of {owner._settings.max_iterations} iterations was reached",
             1: "the gradient vanished",
             2: "the cost no longer fell",
@@ -179,8 +200,8 @@ class _Search:
             4: "the cost no longer fell and the steps became negligible",
         }
         if found.status == -2 and owner.iterations >= self._last_iteration:
-            return endings[0]
-        return endings.get(found.status, "the search ended")
+            return self._accepted, endings[0]
+        return self._accepted, endings.get(found.status, "the search ended")
 
     def _point(self, z: Floats) -> Point | None:
         for known, point in self._known:
@@ -230,7 +251,7 @@ class _Search:
         self._owner.accepted(self._accepted)
         if self._owner.iterations >= self._last_iteration:
             raise StopIteration
-        if self._owner.decrease(self._accepted, self._sigmas) < self._owner.negligible:
+        if self._owner.hardly_falls(self._accepted, self._sigmas):
             raise StopIteration
 
 

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Literal
 
 import numpy as np
@@ -128,13 +128,8 @@ def _spread(point: Point, objective: Objective) -> _Spread:
         residuals, jacobian = objective.standardised(point, sigmas)
         found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound)
         if any(e.value is None for e in estimates):  # no scatter left to judge the points by
-            found = Curvature(
-                found.basis,
-                np.full_like(found.covariance, np.nan),
-                np.zeros_like(found.determined),
-                found.inert,
-                found.decrease,
-            )
+            nothing = np.full_like(found.covariance, np.nan)
+            found = replace(found, covariance=nothing, determined=np.zeros_like(found.determined))
     freedom = data.n - float(found.leverage.sum())
     return _Spread(found, at_bound, tuple(estimates), data.sigma_of_points(sigmas), freedom)
 

@@ -33,13 +33,15 @@ class Curvature:
     covariance : ndarray, shape (p, p), NaN in rows and columns of what is not determined or held at a bound
     determined : ndarray of bool, shape (p,)
     inert : ndarray of bool, shape (p,), no effect on any point and no prior
-    decrease : by how much a full step would lower the sum of squares
+    step : ndarray, shape (p,), the full Gauss-Newton step in the determined directions
+    decrease : by how much that step would lower the sum of squares
     """
 
     basis: Floats
     covariance: Floats
     determined: NDArray[np.bool_]
     inert: NDArray[np.bool_]
+    step: Floats
     decrease: float
 
     @property
@@ -88,8 +90,10 @@ def curvature(
     inert = np.zeros(p, dtype=bool)
     inert[positions[~acting]] = True
     everything = np.concatenate([residuals, prior_residuals])
-    decrease = float(np.sum((u[:, kept].T @ everything) ** 2))
-    return Curvature(u[:v, kept], covariance, determined, inert, decrease)
+    along = u[:, kept].T @ everything
+    step = np.zeros(p)
+    step[at] = -half.T @ along
+    return Curvature(u[:v, kept], covariance, determined, inert, step, float(np.sum(along**2)))
 
 
 def pushed_against_bounds(

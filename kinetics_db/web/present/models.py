@@ -51,6 +51,11 @@ class FitSheet:
     points: int | None
     seconds: str
 
+    @property
+    def has_remarks(self) -> bool:
+        """Whether there is anything to say about any constant."""
+        return any(constant.remark for constant in self.constants)
+
 
 @dataclass(frozen=True)
 class ModelSheet:

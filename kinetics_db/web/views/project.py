@@ -24,7 +24,8 @@ if TYPE_CHECKING:
     from kinetics_db.fits.models import Fit
 
 SECONDS_BETWEEN_LOOKS = 3
-HEAVY = ("signal_table__canonical", "signal_table__file__canonical", "reduction__canonical")
+HEAVY_OF_FITS = ("dataset__canonical", "mechanism_version__canonical")
+HEAVY_OF_TABLES = ("signal_table__canonical", "signal_table__file__canonical", "reduction__canonical")
 
 
 @page
@@ -34,9 +35,9 @@ def project(request: HttpRequest, slug: str) -> HttpResponse:
     found = project_named(user=request.user, slug=slug)
     of_project = {"user": request.user, "project_id": found.pk}
     revisions = list(newest_revisions_in(**of_project))
-    tables_found = current_tables_in(**of_project).select_related("signal_table__file__stored").defer(*HEAVY)
+    tables_found = current_tables_in(**of_project).select_related("signal_table__file__stored").defer(*HEAVY_OF_TABLES)
     tables = [(record, record.table) for record in tables_found]
-    fits = fits_of_page(list(fits_in(**of_project)))
+    fits = fits_of_page(list(fits_in(**of_project).defer(*HEAVY_OF_FITS)))
     jobs = jobs_for(kind="fit", subject_ids=[fit.pk for fit in fits.newest])
     contents = contents_of(list(fits.results.values()))
     grid = grid_of(**of_project)
