@@ -11,6 +11,7 @@ ONCE ?=
 BIN := .venv/bin
 PROCESSES := kinetics_db/config/processes
 PYTEST := $(BIN)/python -m pytest -n $(JOBS) --dist loadfile
+TYPED := $(wildcard kinetics_db api workers manage.py)
 FOLDERS_OF_CODE := $(wildcard kinetics_db api workers tests manage.py)
 # Tests that do not touch the database are not run a second time.
 TESTS_WITHOUT_DATABASE := tests/engine tests/architecture tests/processes tests/services tests/factories \
@@ -53,7 +54,7 @@ check-slow: development ## the tests that take minutes
 static: development ## ruff, mypy, import contracts, missing migrations
 	$(BIN)/ruff check $(FOLDERS_OF_CODE)
 	$(BIN)/ruff format --check $(FOLDERS_OF_CODE)
-	$(BIN)/mypy $(FOLDERS_OF_CODE)
+	$(BIN)/mypy $(TYPED)
 	$(BIN)/lint-imports
 	RATEWRIGHT_VAR="$${TMPDIR:-/tmp}/ratewright-static" $(BIN)/python manage.py makemigrations --check --dry-run
 

@@ -47,12 +47,12 @@ def follow(
     bars = {
         fit.pk: tqdm(
             total=100,
-            desc=f"{names[fit.pk]:<{NAME_WIDTH}}",
+            desc=names[fit.pk],
             position=i,
             leave=False,
             file=stream,
             disable=not stream.isatty(),
-            bar_format="  {desc} {percentage:3.0f} % |{bar:20}| {postfix}",
+            bar_format="  {percentage:3.0f} % |{bar:20}| {desc}",
         )
         for i, fit in enumerate(fits)
     }
@@ -64,7 +64,7 @@ def follow(
             for fit_id in list(waiting):
                 job, bar = jobs[fit_id], bars[fit_id]
                 bar.n = round(100 * job.progress)
-                bar.set_postfix_str(f"{job.state} {job.message}"[:30], refresh=True)
+                bar.set_description_str(f"{names[fit_id]}  {_now(job.state, job.message)}")
                 if job.state not in OPEN:
                     waiting.remove(fit_id)
                     with tqdm.external_write_mode(file=stream):
@@ -74,6 +74,12 @@ def follow(
     finally:
         for bar in bars.values():
             bar.close()
+
+
+def _now(state: str, message: str) -> str:
+    """'waiting', 'running: iteration 3', ...; the first part of the worker's message is enough for a bar."""
+    short = message.split(",")[0][:24]
+    return f"{state}: {short}" if state == "running" and short else state
 
 
 def _name(fit: Fit) -> str:

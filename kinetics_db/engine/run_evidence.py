@@ -173,7 +173,8 @@ def _leverage_by_experiment(fit: FitOutcome) -> list[Floats]:
         prior_sds = 1.0 / np.sqrt(fit.prior_precision)
     fixed = np.array([p.at_bound for p in fit.parameters], dtype=bool)
     nothing = np.zeros(len(stacked))
-    found = curvature(stacked, nothing, prior_sds, np.zeros(len(prior_sds)), fixed)
+    scales = np.array([1.0 if p.scale == "logarithmic" else max(abs(p.value), 1e-3) for p in fit.parameters])
+    found = curvature(stacked, nothing, prior_sds, np.zeros(len(prior_sds)), fixed, scales)
     ends = np.cumsum([len(e.rows) for e in fit.experiments])
     return np.split(found.leverage, ends[:-1])
 

@@ -42,6 +42,8 @@ def predict_run(
     require_contributor(user=user, project_id=fit.project_id)
     if result.status != FitResult.Status.CONVERGED:
         raise InvalidInput(f"the fit is {result.status}", field="result", cure="a converged fit")
+    if not len(times):
+        raise InvalidInput("there are no times", field="times", cure="at least one time in s")
     content = result.content
     request = FitRequest.from_plain(fit.content)
     network = network_of(fit.mechanism_version)

@@ -8,6 +8,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Decimal
+from typing import TypeGuard
 
 from django.utils.html import format_html
 from django.utils.safestring import SafeString
@@ -106,7 +107,9 @@ def interval(low: float | None, high: float | None, unit: str = "") -> str:
         return plain(low, unit)
     last = max((above - below).adjusted() - 1, max(abs(below), abs(above)).adjusted() - MOST_DIGITS + 1)
     rounded = _rounded(below, last, ROUND_FLOOR), _rounded(above, last, ROUND_CEILING)
-    if (below and not rounded[0]) or (above and not rounded[1]):  # ends of different size need their own digits
+    if (below and not rounded[0]) or (
+        above and not rounded[1]
+    ):  # ends of different size need their own digits
         ends = plain(low, digits=2, rounding=ROUND_FLOOR), plain(high, digits=2, rounding=ROUND_CEILING)
         return f"{ends[0]} to {ends[1]} {unit}".rstrip()
     power = _power(max(abs(rounded[0]), abs(rounded[1])))
@@ -148,12 +151,12 @@ def _two_digits(value: float) -> str:
     return _digits(_rounded(number, last), -last)
 
 
-def _is_number(value: float | None) -> bool:
+def _is_number(value: float | None) -> TypeGuard[float]:
     return value is not None and math.isfinite(value)
 
 
-def _decimal(value: float | None) -> Decimal:
-    return Decimal(repr(float(value)))  # type: ignore[arg-type]  # callers have looked for None
+def _decimal(value: float) -> Decimal:
+    return Decimal(repr(float(value)))
 
 
 def _rounded(number: Decimal, last: int, rounding: str = ROUND_HALF_EVEN) -> Decimal:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from functools import wraps
-from typing import Any
+from typing import TYPE_CHECKING, Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from django.contrib.auth.decorators import login_required
@@ -17,7 +17,17 @@ from django.views.decorators.http import require_safe
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, RatewrightError, Unavailable
 from kinetics_db.projects.selectors import roles_remembered
 
+if TYPE_CHECKING:
+    from kinetics_db.accounts.models import User
+
 View = Callable[..., HttpResponse]
+
+
+class ReadersRequest(HttpRequest):
+    """A request of somebody who is logged in, as the views of pages get it; for type checkers."""
+
+    user: User
+
 
 ERRORS: dict[type[RatewrightError], tuple[int, str]] = {
     NotFound: (404, "There is no such page"),

@@ -16,6 +16,7 @@ from kinetics_db.fits.models import Fit
 from kinetics_db.fits.services import stop_fit
 from kinetics_db.jobs.models import Job
 from kinetics_db.jobs.selectors import job_for
+from kinetics_db.jobs.services import claim_job, fail_job, heartbeat
 from tests.demo import another
 from tests.factories.flow import compute_now
 from tests.factories.people import make_user
@@ -69,7 +70,7 @@ def test_bars_are_drawn_on_a_terminal_only(fits: list[Fit]) -> None:
 
 def test_a_bar_stands_where_the_job_stands(fits: list[Fit]) -> None:
     job = job_for(kind="fit", subject_id=fits[0].pk)
-    Job.objects.filter(pk=job.pk).update(progress=0.4, message="iteration 5")
+    Job.objects.filter(pk=job.pk).update(progress=0.4, message="iteration 5, cost 12.5")
     terminal = Terminal()
 
     def finish(_: float) -> None:
@@ -78,7 +79,23 @@ def test_a_bar_stands_where_the_job_stands(fits: list[Fit]) -> None:
 
     follow(fits, check=lambda: None, say=lambda _: None, stream=terminal, sleep=finish)
     assert "40 % |" in terminal.getvalue()
-    assert "iteration 5" in terminal.getvalue()
+    assert "by way of quinal v1  waiting" in terminal.getvalue()
+
+
+def test_a_running_fit_shows_its_iteration(fits: list[Fit]) -> None:
+    claim = claim_job(job_for(kind="fit", subject_id=fits[0].pk).pk)
+    assert claim is not None
+    heartbeat(claim, progress=0.4, message="iteration 5, cost 12.5")
+    terminal = Terminal()
+
+    def end_both(_: float) -> None:
+        fail_job(claim, reason="it cannot be done")
+        compute_now(fits[1])
+
+    lines: list[str] = []
+    follow(fits, check=lambda: None, say=lines.append, stream=terminal, sleep=end_both)
+    assert "by way of quinal v1  running: iteration 5" in terminal.getvalue()
+    assert "fit of 'by way of quinal v1': it cannot be done" in lines
 
 
 def test_the_death_of_a_child_ends_the_following(fits: list[Fit], tmp_path: Path) -> None:

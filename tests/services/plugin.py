@@ -19,6 +19,7 @@ from urllib.parse import quote, urlsplit
 import pytest
 
 from kinetics_db.config.processes.failures import ChildFailed, ServerMissing
+from kinetics_db.config.processes.guard import Guard
 from kinetics_db.config.processes.postgres import ThrowAwayPostgres, find_binaries
 from kinetics_db.config.processes.valkey import Valkey, find_server
 
@@ -43,6 +44,8 @@ class Services:
         find_server()  # what is missing is told before anything is made
         binaries = None if self.on_sqlite or self.is_xdist_worker else find_binaries()
         self.folder = Path(tempfile.mkdtemp(prefix="rw-suite-"))
+        self._guard = Guard()
+        self._guard.remove_when_orphaned(self.folder)  # also a session that is killed leaves nothing
         self.broker = Valkey(self.folder / "valkey")
         os.environ["RATEWRIGHT_BROKER_URL"] = self.broker.url()
         os.environ["RATEWRIGHT_VAR"] = str(self.folder / "var")
@@ -69,6 +72,7 @@ class Services:
             self.postgres.remove()
         self.broker.stop()
         shutil.rmtree(self.folder, ignore_errors=True)
+        self._guard.close()
 
 
 services: Services | None = None

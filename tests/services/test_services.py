@@ -198,6 +198,25 @@ def test_a_session_leaves_no_process_and_no_folder(tmp_path: Path) -> None:
         assert not (is_running(int(word)) if word.isdigit() else Path(word).exists())
 
 
+def test_a_killed_session_leaves_no_process_and_no_folder(tmp_path: Path) -> None:
+    code = (
+        "import os, signal\nfrom pathlib import Path\nfrom tests.services import plugin\n\n"
+        "def test_die(broker):\n"
+        "    services = plugin.services\n"
+        "    places = [services.folder, services.broker.socket.parent]\n"
+        f"    Path({str(tmp_path / 'found')!r}).write_text(' '.join(map(str, [services.broker.pid, *places])))\n"
+        "    os.kill(os.getpid(), signal.SIGKILL)\n"
+    )
+    (tmp_path / "conftest.py").write_text("from tests.conftest import broker\n")
+    assert pytest_of_its_own(tmp_path, code, RATEWRIGHT_TEST_DB="sqlite").returncode == -9
+    pid, *places = (tmp_path / "found").read_text().split()
+    wait_until(
+        lambda: not is_running(int(pid)) and not any(Path(place).exists() for place in places),
+        within=20,
+        what="the server and the folders of the killed session are gone",
+    )
+
+
 def test_children_of_a_process_are_found() -> None:
     with subprocess.Popen([sys.executable, "-S", "-c", "import time; time.sleep(60)"]) as child:
         assert child.pid in children_of(os.getpid())

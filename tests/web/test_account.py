@@ -7,13 +7,14 @@ from django.test import Client
 
 from kinetics_db.web import throttle
 from tests.factories.people import make_member, make_user
-from tests.web.conftest import Study
+from tests.web.study import Study
 
 PASSWORD = "a long password 1"
 
 
-def log_in(client: Client, name: str, password: str, **more: str) -> int:
-    return client.post("/login/", {"username": name, "password": password}, **more).status_code
+def log_in(client: Client, name: str, password: str, address: str = "127.0.0.1") -> int:
+    data = {"username": name, "password": password}
+    return client.post("/login/", data, REMOTE_ADDR=address).status_code
 
 
 @pytest.mark.parametrize("address", ["/", "/projects/oxidation/"])
@@ -41,7 +42,9 @@ def test_a_wrong_password_is_refused_in_words(client: Client, study: Study) -> N
     assert client.get("/").status_code == 302
 
 
-def test_the_eleventh_failed_try_is_refused_even_with_the_right_password(client: Client, study: Study) -> None:
+def test_the_eleventh_failed_try_is_refused_even_with_the_right_password(
+    client: Client, study: Study
+) -> None:
     for _ in range(throttle.MOST_FAILURES):
         assert log_in(client, "mira", "wrong") == 200
     response = client.post("/login/", {"username": "mira", "password": PASSWORD})
@@ -63,7 +66,7 @@ def test_other_accounts_and_other_addresses_are_not_held_up(client: Client, stud
         log_in(client, "mira", "wrong")
     assert log_in(client, "otto", PASSWORD) == 302
     client.logout()
-    assert log_in(client, "mira", PASSWORD, REMOTE_ADDR="192.0.2.7") == 302
+    assert log_in(client, "mira", PASSWORD, address="192.0.2.7") == 302
 
 
 def test_a_success_forgets_the_failures_before_it(client: Client, study: Study) -> None:
@@ -75,7 +78,9 @@ def test_a_success_forgets_the_failures_before_it(client: Client, study: Study) 
 
 
 def test_tries_are_counted_before_the_password_is_looked_at(study: Study) -> None:
-    begun = [throttle.begin_try(account="mira", address="192.0.2.1") for _ in range(throttle.MOST_FAILURES + 2)]
+    begun = [
+        throttle.begin_try(account="mira", address="192.0.2.1") for _ in range(throttle.MOST_FAILURES + 2)
+    ]
     assert begun == [True] * throttle.MOST_FAILURES + [False] * 2
 
 

@@ -13,13 +13,15 @@ from django.views.defaults import bad_request, page_not_found, permission_denied
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, RatewrightError, Unavailable
 from kinetics_db.web.middleware import CONTENT_SECURITY_POLICY, PageHeaders
 from kinetics_db.web.pages import page
-from tests.web.conftest import Study
+from tests.web.study import Study
 
 REQUEST = RequestFactory().get("/somewhere/")
 
 
 def test_pages_let_nothing_in_but_our_own_styles_and_images(client: Client, study: Study) -> None:
-    policy = dict(part.strip().split(" ", 1) for part in client.get("/login/")["Content-Security-Policy"].split(";"))
+    policy = dict(
+        part.strip().split(" ", 1) for part in client.get("/login/")["Content-Security-Policy"].split(";")
+    )
     assert policy == {
         "default-src": "'none'",
         "style-src": "'self'",
@@ -43,7 +45,10 @@ def test_a_response_with_its_own_policy_keeps_it() -> None:
         return HttpResponse(headers={"Content-Security-Policy": "default-src 'self'"})
 
     assert PageHeaders(view)(REQUEST)["Content-Security-Policy"] == "default-src 'self'"
-    assert PageHeaders(lambda request: HttpResponse())(REQUEST)["Content-Security-Policy"] == CONTENT_SECURITY_POLICY
+    assert (
+        PageHeaders(lambda request: HttpResponse())(REQUEST)["Content-Security-Policy"]
+        == CONTENT_SECURITY_POLICY
+    )
 
 
 @pytest.mark.parametrize(

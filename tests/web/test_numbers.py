@@ -62,7 +62,12 @@ def test_an_uncertainty_larger_than_the_value_is_written_with_its_decimal_point(
 
 @pytest.mark.parametrize(
     ("value", "uncertainty", "text"),
-    [(12346.0, 678.0, "1.235(68) × 10⁴"), (12345.0, 67.8, "12345(68)"), (1.0, 34.0, "1(34)"), (1.0, 340.0, "0.0(3.4) × 10²")],
+    [
+        (12346.0, 678.0, "1.235(68) × 10⁴"),
+        (12345.0, 67.8, "12345(68)"),
+        (1.0, 34.0, "1(34)"),
+        (1.0, 340.0, "0.0(3.4) × 10²"),
+    ],
 )
 def test_digits_that_are_not_known_are_not_written(value: float, uncertainty: float, text: str) -> None:
     assert with_uncertainty(value, uncertainty) == text
@@ -89,7 +94,9 @@ def test_an_uncertainty_finer_than_a_float_can_tell_is_left_away() -> None:
     st.floats(min_value=-1e12, max_value=1e12),
     st.floats(min_value=1e-9, max_value=1e9),
 )
-def test_reading_the_text_back_gives_value_and_uncertainty_within_their_last_digit(value: float, u: float) -> None:
+def test_reading_the_text_back_gives_value_and_uncertainty_within_their_last_digit(
+    value: float, u: float
+) -> None:
     text = with_uncertainty(value, u).replace("−", "-")
     if "(" not in text:
         assert abs(value) / u > 1e13
@@ -107,7 +114,15 @@ def test_reading_the_text_back_gives_value_and_uncertainty_within_their_last_dig
 
 @pytest.mark.parametrize(
     ("value", "text"),
-    [(25.0, "25"), (0.1, "0.1"), (0.00012345, "1.234 × 10⁻⁴"), (123456.0, "1.235 × 10⁵"), (0.0, "0"), (-0.0, "0"), (-2.5, "−2.5")],
+    [
+        (25.0, "25"),
+        (0.1, "0.1"),
+        (0.00012345, "1.234 × 10⁻⁴"),
+        (123456.0, "1.235 × 10⁵"),
+        (0.0, "0"),
+        (-0.0, "0"),
+        (-2.5, "−2.5"),
+    ],
 )
 def test_a_value_without_uncertainty_claims_no_trailing_zeros(value: float, text: str) -> None:
     assert plain(value) == text

@@ -82,7 +82,8 @@ USE_I18N = False
 USE_TZ = True
 
 STATIC_URL = "static/"
-STATIC_ROOT = VAR_DIR / "static"
+# Served from the packages themselves; a lab may collect them into a folder for a front server.
+STATIC_ROOT = os.environ.get("RATEWRIGHT_STATIC") or None
 STORAGES = {
     "default": {"BACKEND": "django.core.files.storage.FileSystemStorage"},
     "staticfiles": {"BACKEND": "django.contrib.staticfiles.storage.StaticFilesStorage"},

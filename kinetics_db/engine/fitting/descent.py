@@ -144,7 +144,7 @@ class Descender:
         pulls = self.objective.prior_residuals(point.theta)
         gradient = jacobian.T @ residuals + pulls / self.objective.prior_sds
         fixed = pushed_against_bounds(point.theta, self._lower, self._upper, gradient, self._scale)
-        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed)
+        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed, self._scale)
 
     def hardly_falls(self, point: Point, sigmas: Floats) -> bool:
         """Whether a full Gauss-Newton step inside the bounds would no longer lower the cost noticeably."""

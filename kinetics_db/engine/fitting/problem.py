@@ -15,7 +15,7 @@ class Charge:
     """A contribution to the start concentration of a species: c0 += concentration * product(factors).
 
     ``factors`` are names of nuisance parameters (weighing, stock, lot, volume) whose value multiplies this
-    contribution. ``start_parameter`` names a `StartConcentration` that replaces the number when fitted.
+    contribution. A `StartConcentration` of the species replaces all its charges.
     """
 
     species: str

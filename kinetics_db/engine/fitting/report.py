@@ -111,7 +111,7 @@ def _spread(point: Point, objective: Objective) -> _Spread:
     lower, upper = parameters.bounds
     scale = np.array([p.scale for p in parameters.parameters])
     at_bound = pushed_against_bounds(point.theta, lower, upper, gradient, scale)
-    found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound)
+    found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound, scale)
     leverage = found.leverage
     estimates: list[SigmaEstimate] = []
     sigmas = point.sigmas.copy()
@@ -126,7 +126,7 @@ def _spread(point: Point, objective: Objective) -> _Spread:
         estimates.append(SigmaEstimate(name, value, float(point.sigmas[g]), n, freedom))
     if data.group_names:
         residuals, jacobian = objective.standardised(point, sigmas)
-        found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound)
+        found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound, scale)
         if any(e.value is None for e in estimates):  # no scatter left to judge the points by
             nothing = np.full_like(found.covariance, np.nan)
             found = replace(found, covariance=nothing, determined=np.zeros_like(found.determined))

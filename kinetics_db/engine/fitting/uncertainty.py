@@ -20,6 +20,7 @@ Floats = NDArray[np.float64]
 # Exact sensitivities carry a tenth of this relative error; flatter directions are not determined.
 SMALLEST_SINGULAR_VALUE = 1e-5
 LARGEST_SHARE_OF_FLAT_DIRECTION = 1e-4
+INERT = 1e-9  # of a sigma, for a natural step of the parameter
 WIDEST_INTERVAL = math.log(100.0)  # on a logarithmic scale, to each side
 
 
@@ -56,6 +57,7 @@ def curvature(
     prior_sds: Floats,
     prior_residuals: Floats,
     fixed: NDArray[np.bool_] | None = None,
+    scales: Floats | None = None,
 ) -> Curvature:
     """Decompose the standardised Jacobian together with the priors.
 
@@ -66,12 +68,14 @@ def curvature(
     prior_sds : ndarray, shape (p,), infinite without a prior
     prior_residuals : ndarray, shape (p,), (theta - mean)/sd, zero without a prior
     fixed : ndarray of bool, shape (p,), parameters to leave out, such as those at a bound
+    scales : ndarray, shape (p,), a natural step of each parameter, 1 when None; one that moves no residual
+        by a billionth of its sigma in such a step is inert
     """
     v, p = jacobian.shape
     moving = np.ones(p, dtype=bool) if fixed is None else ~fixed
     stacked = np.vstack([jacobian, np.diag(1.0 / prior_sds)])[:, moving]
     norms = np.sqrt(np.sum(stacked**2, axis=0))
-    acting = norms > 1e-12 * max(float(norms.max(initial=0.0)), 1e-290)
+    acting = norms * (1.0 if scales is None else scales[moving]) > INERT
     scaled = stacked[:, acting] / norms[acting]
     u, s, vt = np.linalg.svd(scaled, full_matrices=False)
     kept = s > SMALLEST_SINGULAR_VALUE * (s[0] if s.size else 1.0)

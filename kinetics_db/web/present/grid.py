@@ -103,7 +103,12 @@ def _cell(cell: Cell | None) -> CellSheet | None:
     if cell is None:
         return None
     return CellSheet(
-        cell.fit_id, cell.verdict, css_of(cell.verdict), probability(cell.p_value), percent(cell.nrmse), cell.table
+        cell.fit_id,
+        cell.verdict,
+        css_of(cell.verdict),
+        probability(cell.p_value),
+        percent(cell.nrmse),
+        cell.table,
     )
 
 

@@ -116,7 +116,9 @@ def model_sheets(
     return found
 
 
-def curves_of(content: Mapping[str, Any], casting: Mapping[str, str | None], table_ids: Sequence[int]) -> dict[int, Curve]:
+def curves_of(
+    content: Mapping[str, Any], casting: Mapping[str, str | None], table_ids: Sequence[int]
+) -> dict[int, Curve]:
     """A result's model values by table id; ``casting`` says which observable each column was fitted as."""
     curves = {}
     for table_id, experiment in zip(table_ids, content.get("experiments", ()), strict=False):
@@ -138,13 +140,15 @@ def _fit_sheet(
 ) -> FitSheet:
     content = contents.get(result.pk, {}) if result is not None else {}
     is_open = job is not None and job.state in job.OPEN
-    if is_open or (job is not None and (result is None or job.state in ENDED_WITHOUT_RESULT)):
+    if job is not None and (is_open or result is None or job.state in ENDED_WITHOUT_RESULT):
         state, message = str(job.state), job.message
     elif result is not None:
         state, message = str(result.status), content.get("message", "")
     else:
         state, message = "not asked for", ""
-    parameters = [p for p in content.get("parameters", ()) if p["kind"] in ("constant", "start concentration")]
+    parameters = [
+        p for p in content.get("parameters", ()) if p["kind"] in ("constant", "start concentration")
+    ]
     confidence = content.get("confidence")
     return FitSheet(
         fit=fit,
@@ -176,7 +180,10 @@ def _constant(p: Mapping[str, Any]) -> ConstantSheet:
     if p["determined"]:
         value, limits = shown(p["value"], p["standard_error"], unit), interval(p["lower"], p["upper"], unit)
     else:
-        value, limits = Shown("not determined", f"{p['value']!r} {unit}, where the fit ended", repr(p["value"])), interval(None, None)
+        value, limits = (
+            Shown("not determined", f"{p['value']!r} {unit}, where the fit ended", repr(p["value"])),
+            interval(None, None),
+        )
     remarks = []
     if not p["determined"] and p["why_not"]:
         remarks.append(p["why_not"])

@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from typing import Any
 
-from django import forms
 from django.contrib.auth import views
 from django.contrib.auth.forms import AuthenticationForm
 from django.core.exceptions import ValidationError
@@ -53,7 +52,7 @@ class Login(views.LoginView):
     authentication_form = LoginForm
     redirect_authenticated_user = True
 
-    def form_invalid(self, form: forms.Form) -> HttpResponse:
+    def form_invalid(self, form: AuthenticationForm) -> HttpResponse:
         response = super().form_invalid(form)
         if getattr(form, "refused", False):
             response.status_code = 429

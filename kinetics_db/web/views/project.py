@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
-from django.http import HttpRequest, HttpResponse
+from django.http import HttpResponse
 from django.shortcuts import render
 
 from kinetics_db.datasets.selectors import table_ids_of
@@ -15,7 +15,7 @@ from kinetics_db.measurements.selectors import current_tables_in
 from kinetics_db.mechanisms.selectors import versions_in
 from kinetics_db.projects.selectors import project_named, role_in
 from kinetics_db.runs.selectors import newest_revisions_in
-from kinetics_db.web.pages import page
+from kinetics_db.web.pages import ReadersRequest, page
 from kinetics_db.web.present.grid import grid_sheet
 from kinetics_db.web.present.models import FitsOfPage, curves_of, fits_of_page, model_sheets
 from kinetics_db.web.present.runs import run_sheets, units_of
@@ -29,18 +29,22 @@ HEAVY_OF_TABLES = ("signal_table__canonical", "signal_table__file__canonical", "
 
 
 @page
-def project(request: HttpRequest, slug: str) -> HttpResponse:
+def project(request: ReadersRequest, slug: str) -> HttpResponse:
     """Everything of a project on one page. ``?curve=`` chooses the fit whose curves are drawn, ``?hold`` stops
     the page from loading itself again while fits are under way."""
-    found = project_named(user=request.user, slug=slug)
-    of_project = {"user": request.user, "project_id": found.pk}
-    revisions = list(newest_revisions_in(**of_project))
-    tables_found = current_tables_in(**of_project).select_related("signal_table__file__stored").defer(*HEAVY_OF_TABLES)
+    user = request.user
+    found = project_named(user=user, slug=slug)
+    revisions = list(newest_revisions_in(user=user, project_id=found.pk))
+    tables_found = (
+        current_tables_in(user=user, project_id=found.pk)
+        .select_related("signal_table__file__stored")
+        .defer(*HEAVY_OF_TABLES)
+    )
     tables = [(record, record.table) for record in tables_found]
-    fits = fits_of_page(list(fits_in(**of_project).defer(*HEAVY_OF_FITS)))
+    fits = fits_of_page(list(fits_in(user=user, project_id=found.pk).defer(*HEAVY_OF_FITS)))
     jobs = jobs_for(kind="fit", subject_ids=[fit.pk for fit in fits.newest])
     contents = contents_of(list(fits.results.values()))
-    grid = grid_of(**of_project)
+    grid = grid_of(user=user, project_id=found.pk)
     drawn = _drawn_fit(request.GET.get("curve"), fits, grid)
     curves = {}
     if drawn is not None:
@@ -49,14 +53,14 @@ def project(request: HttpRequest, slug: str) -> HttpResponse:
     units = units_of(revisions, tables)
     model_name = str(drawn.mechanism_version) if drawn is not None else ""
     runs = run_sheets(revisions, tables, curves, units=units, model_name=model_name)
-    models = model_sheets(list(versions_in(**of_project)), fits, jobs, contents)
+    models = model_sheets(list(versions_in(user=user, project_id=found.pk)), fits, jobs, contents)
     under_way = [fit for model in models for fit in model.fits if fit.is_open]
     return render(
         request,
         "web/project.html",
         {
             "project": found,
-            "role": role_in(**of_project),
+            "role": role_in(user=user, project_id=found.pk),
             "runs": runs,
             "models": models,
             "grid": grid_sheet(grid, runs, found.verdict_thresholds),

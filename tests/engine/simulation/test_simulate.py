@@ -188,6 +188,18 @@ def test_a_law_that_needs_the_temperature_asks_for_it():
         simulate(parse_mechanism("A --{ k*T*[A] }--> B"), constants={"k": 1.0}, start={"A": 1.0}, times=[1.0])
 
 
+def test_a_law_may_use_the_temperature_of_the_run():
+    network = parse_mechanism("A --{ k*T*[A] }--> B")
+    curves = simulate(
+        network,
+        constants={"k": 1e-3},
+        start={"A": 1.0},
+        times=[2.0],
+        conditions=Conditions(temperature=300.0),
+    )
+    np.testing.assert_allclose(curves.of("A"), np.exp(-0.6), rtol=1e-6)
+
+
 def test_every_problem_is_named_at_once():
     with pytest.raises(InvalidInput) as caught:
         simulate(parse_mechanism("A --k--> B"), constants={"q": 1.0}, start={"Z": 1.0}, times=[1.0, 0.0])
