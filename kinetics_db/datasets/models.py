@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import Q
@@ -32,11 +30,6 @@ class Dataset(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"{self.name} v{self.number}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """Plain values: runs with their table digests, columns and time windows."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class DatasetItem(models.Model):

@@ -202,7 +202,7 @@ def _raw(e: ExperimentFit, column: int, leverage: Floats, limits: Thresholds) ->
         chi_square,
         freedom,
         p,
-        error / max(span, 5.0 * sigma),
+        error / max(span, 5.0 * sigma) if max(span, sigma) > 0.0 else 0.0,
         runs_test(standardised) if enough else None,
         durbin_watson(standardised),
         float(standardised[np.argmax(np.abs(standardised))]),

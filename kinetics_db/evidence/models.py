@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import Q
@@ -26,11 +24,6 @@ class ModelEvidence(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"evidence of {self.result}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """Plain values: per model, per run, per run and observable; thresholds."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class RunEvidence(models.Model):

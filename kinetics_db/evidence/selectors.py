@@ -72,7 +72,11 @@ def grid_of(*, user: User, project_id: int) -> Grid:
         "run_revision__run", "table__run", "evidence__result"
     )
     for row in rows.defer(
-        "run_revision__canonical", "table__canonical", "evidence__canonical", "evidence__result__canonical"
+        "run_revision__canonical",
+        "table__canonical",
+        "table__blob",
+        "evidence__canonical",
+        "evidence__result__canonical",
     ):
         fit_id = row.evidence.result.fit_id
         cells[row.run_revision.run.code, fit_id] = Cell(

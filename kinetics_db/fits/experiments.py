@@ -95,7 +95,7 @@ def experiments_of(
             if casting.columns.get(c) is not None and (window["columns"] is None or c in window["columns"])
         ]
         signal_factors: dict[str, tuple[str, ...]] = {}
-        for error in item.table.scale_errors:
+        for error in item.table.content["scale_errors"]:
             for column in columns:
                 if column in error["columns"]:
                     observable = str(casting.columns[column])

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import F, Q
@@ -31,11 +29,6 @@ class Fit(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"fit {self.pk}: {self.mechanism_version} on {self.dataset}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """The request's plain values."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class FitResult(ImmutableRecord):
@@ -74,11 +67,6 @@ class FitResult(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"result of fit {self.fit_id}: {self.status}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """Plain values of the outcome: constants, intervals, covariance, curves, residuals, work counts."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class FittedConstant(models.Model):

@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import Q
@@ -68,11 +66,6 @@ class MaterialRevision(ImmutableRecord):
 
     class Meta(ImmutableRecord.Meta):
         abstract = True
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """The revision's plain values."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class CompoundRevision(MaterialRevision):

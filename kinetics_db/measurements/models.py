@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import F, Q
@@ -32,8 +30,12 @@ class InstrumentFile(ImmutableRecord):
 
 
 class StoredTable(ImmutableRecord):
-    """A table kept as one blob; its canonical bytes are the table's own (`engine.tables`)."""
+    """A table kept as one blob in its own canonical bytes (`engine.tables`).
 
+    The record's content holds the blob's SHA-256 beside how the table was made, so its digest covers both.
+    """
+
+    blob = models.BinaryField(editable=False)
     rows = models.PositiveIntegerField()
     first_time = models.FloatField(null=True, help_text="s")
     last_time = models.FloatField(null=True, help_text="s")
@@ -44,7 +46,7 @@ class StoredTable(ImmutableRecord):
     @property
     def table(self) -> Table:
         """The numbers."""
-        return Table.from_bytes(bytes(self.canonical))
+        return Table.from_bytes(bytes(self.blob))
 
 
 class SignalTable(StoredTable):
@@ -84,11 +86,6 @@ class Reduction(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"{self.name} v{self.number}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """The recipe's plain values."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class ConcentrationTable(StoredTable):

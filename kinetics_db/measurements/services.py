@@ -11,7 +11,7 @@ from django.db.models import Max
 
 from kinetics_db.accounts.models import User
 from kinetics_db.engine import calibration, reading
-from kinetics_db.engine.canonical import canonical_json, digest
+from kinetics_db.engine.canonical import digest, sha256_hex
 from kinetics_db.engine.tables import Table
 from kinetics_db.errors import Conflict, InvalidInput
 from kinetics_db.measurements.models import (
@@ -72,24 +72,37 @@ def store_file(
             file = save_record(
                 InstrumentFile(project_id=run.project_id, run=run, stored=stored, name=name),
                 user=user,
-                content={"format": "ratewright/instrument-file/1", "name": name, "sha256": stored.sha256},
+                content={
+                    "format": "ratewright/instrument-file/1",
+                    "run": run.code,
+                    "name": name,
+                    "sha256": stored.sha256,
+                },
                 parents=[run],
                 project_id=run.project_id,
                 label=f"{run.code}: {name}",
                 verb="uploaded",
             )
-        content = result.table.to_bytes()
-        plain_options = reading.ReadingOptions.from_plain(options or {}).to_plain()
-        for table in file.signal_tables.filter(reader=reader):
-            if bytes(table.canonical) == content and table.reader_options == plain_options:
-                return table
+        blob = result.table.to_bytes()
+        content = {
+            "format": "ratewright/signal-table/1",
+            "file": file.digest,
+            "reader": reader,
+            "options": reading.ReadingOptions.from_plain(options or {}).to_plain(),
+            "notes": list(result.notes),
+            "table": sha256_hex(blob),
+        }
+        existing = file.signal_tables.filter(digest=digest(content)).first()
+        if existing is not None:
+            return existing
         return save_record(
             SignalTable(
                 file=file,
                 number=file.signal_tables.count() + 1,
                 reader=reader,
-                reader_options=plain_options,
-                notes=list(result.notes),
+                reader_options=content["options"],
+                notes=content["notes"],
+                blob=blob,
                 **_extent(result.table),
             ),
             user=user,
@@ -123,6 +136,20 @@ def reduce_signals(
             return existing
         revision = latest_revision(run)
         number = (run.concentration_tables.aggregate(n=Max("number"))["n"] or 0) + 1
+        blob = reduced.table.to_bytes()
+        content = {
+            "format": "ratewright/concentration-table/1",
+            "run": revision.digest,
+            "signal_table": signal_table.digest,
+            "reduction": reduction.digest,
+            "basis": reduced.basis,
+            "scale_errors": [
+                {"owner": e.owner, "relative_u": e.relative_u, "columns": list(e.columns)}
+                for e in reduced.scale_errors
+            ],
+            "notes": list(reduced.notes),
+            "table": sha256_hex(blob),
+        }
         table = save_record(
             ConcentrationTable(
                 run=run,
@@ -130,15 +157,13 @@ def reduce_signals(
                 reduction=reduction,
                 number=number,
                 basis=reduced.basis,
-                scale_errors=[
-                    {"owner": e.owner, "relative_u": e.relative_u, "columns": list(e.columns)}
-                    for e in reduced.scale_errors
-                ],
-                notes=list(reduced.notes),
+                scale_errors=content["scale_errors"],
+                notes=content["notes"],
+                blob=blob,
                 **_extent(reduced.table),
             ),
             user=user,
-            content=reduced.table.to_bytes(),
+            content=content,
             parents=[signal_table, reduction, revision],
             project_id=run.project_id,
             label=f"{run.code} t{number}",
@@ -211,7 +236,7 @@ def _reduction(user: User, project_id: int, name: str, recipe: Any) -> Reduction
     return save_record(
         Reduction(project_id=project_id, name=name, number=number, method=content["kind"]),
         user=user,
-        content=canonical_json(content),
+        content=content,
         parents=[latest] if latest else [],
         project_id=project_id,
         label=f"{name} v{number}",

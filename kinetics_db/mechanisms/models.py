@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 from django.db.models import Q
@@ -44,8 +42,3 @@ class MechanismVersion(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"{self.mechanism} v{self.number}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """The canonical form's plain values."""
-        return dict(json.loads(bytes(self.canonical)))

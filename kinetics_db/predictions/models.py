@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.db import models
 
@@ -22,8 +20,3 @@ class Prediction(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"prediction {self.pk} from {self.result}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """Plain values: conditions, curves, standard uncertainties."""
-        return dict(json.loads(bytes(self.canonical)))

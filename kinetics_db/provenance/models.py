@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 from typing import Any
 
 from django.conf import settings
@@ -37,6 +38,11 @@ class ImmutableRecord(models.Model):
 
     class Meta:
         abstract = True
+
+    @property
+    def content(self) -> dict[str, Any]:
+        """The plain values that the digest is over."""
+        return dict(json.loads(bytes(self.canonical)))
 
     @classmethod
     def kind(cls) -> str:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import os
 import tempfile
-from collections.abc import Iterable
+from collections.abc import Iterable, Mapping
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -27,7 +27,7 @@ def save_record(
     record: Record,
     *,
     user: User,
-    content: Any,
+    content: Mapping[str, Any],
     parents: Iterable[models.Model] = (),
     project_id: int | None,
     label: str = "",
@@ -37,12 +37,11 @@ def save_record(
 ) -> Record:
     """Store an immutable record: canonical bytes and hash of `content`, the row, its lineage, its audit entry.
 
-    `content` is a plain value (hashed as RFC 8785 JSON) or bytes that are canonical already. Parents are the
-    records that it was made from. Must run inside `recording()`.
+    `content` is a mapping of plain values, hashed as RFC 8785 JSON. Parents are the records that it was made
+    from. Must run inside `recording()`.
     """
-    data = bytes(content) if isinstance(content, bytes | bytearray) else canonical_json(content)
-    record.canonical = data
-    record.digest = sha256_hex(data)
+    record.canonical = canonical_json(content)
+    record.digest = sha256_hex(record.canonical)
     record.created_by = user
     record.save()
     Derivation.objects.bulk_create(

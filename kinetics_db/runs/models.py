@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import json
-from typing import Any
 
 from django.conf import settings
 from django.db import models
@@ -49,11 +47,6 @@ class RunRevision(ImmutableRecord):
 
     def __str__(self) -> str:
         return f"{self.run} r{self.number}"
-
-    @property
-    def content(self) -> dict[str, Any]:
-        """The snapshot's plain values; their names are in docs/reference/run-snapshot.md."""
-        return dict(json.loads(bytes(self.canonical)))
 
 
 class RunCharge(models.Model):

@@ -219,6 +219,18 @@ def test_chi_square_p_values_are_spread_evenly_when_the_model_is_true():
     assert np.mean(p) == pytest.approx(0.5, abs=0.06)
 
 
+def test_an_observable_that_is_zero_throughout_and_fitted_exactly_is_judged_without_a_crash():
+    network = parse_mechanism("A --k--> B\nX --q--> Y")
+    values = np.stack([np.exp(-0.3 * TIMES), np.zeros(len(TIMES))], axis=1)
+    run = Experiment("r", (Charge("A", 1.0),), TIMES, ("A", "Y"), values)
+    constants = [Constant("k", 0.1), Constant("q", 0.1)]
+    found = fit_globally(network, [run], constants, settings=Settings(error_model="one sigma per observable"))
+    assert found.parameter("k").value == pytest.approx(0.3, rel=1e-5)
+    evidence = evidence_of_runs(found)[0]
+    assert evidence.observables[1].nrmse == 0.0
+    assert np.isfinite(found.cost)
+
+
 def test_a_fit_without_a_result_is_not_judged():
     found = fit_globally(CHAIN, RUNS, CONSTANTS, settings=Settings(max_seconds=1e-9))
     with pytest.raises(InvalidInput, match="no result"):

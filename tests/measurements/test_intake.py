@@ -127,15 +127,26 @@ def test_a_stored_table_reads_back_bit_for_bit(run: Run) -> None:
     table = reduce_signals(user=run.created_by, signal_table=store(run), name="1H", recipe=RECIPE)
     stored = ConcentrationTable.objects.get(pk=table.pk)
     assert stored.table == table.table
-    assert stored.table.to_bytes() == bytes(stored.canonical)
-    assert Table.from_bytes(bytes(stored.canonical)).to_bytes() == bytes(table.canonical)
-    assert stored.digest == sha256_hex(bytes(stored.canonical)) == "ba7cb7c829160bb95e270b0ad462664ce415a9613eec4cabefbad6a6a348d204"
+    assert Table.from_bytes(bytes(stored.blob)).to_bytes() == bytes(table.blob)
+    assert stored.content["table"] == sha256_hex(bytes(stored.blob))
+    assert (
+        stored.digest
+        == sha256_hex(bytes(stored.canonical))
+        == "f312e2c3231b31d4350986308ad603527efb6e0bedcdb24ca62a635e89f91f5b"
+    )
+
+
+def test_the_scale_errors_that_a_fit_reads_are_covered_by_the_digest(run: Run) -> None:
+    table = reduce_signals(user=run.created_by, signal_table=store(run), name="1H", recipe=RECIPE)
+    assert table.content["scale_errors"] == table.scale_errors != []
 
 
 def test_the_same_recipe_again_is_the_same_version_and_table(run: Run) -> None:
     signals = store(run)
     first = reduce_signals(user=run.created_by, signal_table=signals, name="1H", recipe=RECIPE)
-    again = reduce_signals(user=run.created_by, signal_table=signals, name="1H", recipe=dict(reversed(RECIPE.items())))
+    again = reduce_signals(
+        user=run.created_by, signal_table=signals, name="1H", recipe=dict(reversed(RECIPE.items()))
+    )
     changed = reduce_signals(
         user=run.created_by, signal_table=signals, name="1H", recipe={**RECIPE, "noise_absolute": 0.1}
     )
@@ -164,7 +175,9 @@ def test_a_table_is_superseded_with_a_reason_only_by_a_newer_one_of_its_run(run:
     user = run.created_by
     signals = store(run)
     older = reduce_signals(user=user, signal_table=signals, name="1H", recipe=RECIPE)
-    newer = reduce_signals(user=user, signal_table=signals, name="1H", recipe={**RECIPE, "noise_absolute": 0.1})
+    newer = reduce_signals(
+        user=user, signal_table=signals, name="1H", recipe={**RECIPE, "noise_absolute": 0.1}
+    )
     with pytest.raises(InvalidInput, match="not newer"):
         supersede_table(user=user, older=newer, newer=older, reason="x")
     with pytest.raises(InvalidInput, match="no reason"):

@@ -1,7 +1,9 @@
 """A lab's servers: PostgreSQL, Redis and workers on as many hosts as wanted; everything from the environment."""
 
+import os
+
 from kinetics_db.config.settings.base import *  # noqa: F403
-from kinetics_db.config.settings.base import os, postgresql_from_url
+from kinetics_db.config.settings.base import postgresql_from_url
 
 
 def required(name: str) -> str:

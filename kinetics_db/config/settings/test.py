@@ -10,7 +10,8 @@ os.environ.setdefault("RATEWRIGHT_TLS", "0")
 os.environ.setdefault("RATEWRIGHT_ROLE", "worker")
 os.environ.setdefault("RATEWRIGHT_DATABASE_URL", "postgresql:///ratewright")
 os.environ.setdefault("RATEWRIGHT_BROKER_URL", "memory://")
-os.environ.setdefault("RATEWRIGHT_VAR", tempfile.mkdtemp(prefix="rw-test-"))
+if "RATEWRIGHT_VAR" not in os.environ:
+    os.environ["RATEWRIGHT_VAR"] = tempfile.mkdtemp(prefix="rw-test-")
 
 from kinetics_db.config.settings.base import VAR_DIR, sqlite_at
 from kinetics_db.config.settings.lab import *  # noqa: F403

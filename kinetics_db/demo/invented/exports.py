@@ -36,15 +36,18 @@ def _semicolons(export: Exported) -> bytes:
     """Preamble without comment signs, semicolons with one at the end, decimal commas, Windows-1252, CRLF."""
     lines = [
         f"Probe;{export.run.code};",
-        f"Temperatur;{export.run.celsius:.1f} °C;",
-        f"Rauschen;{export.noise:.4g} a.u.;",
+        f"Temperatur;{_comma(f'{export.run.celsius:.1f}')} °C;",
+        f"Rauschen;{_comma(f'{export.noise:.4g}')} a.u.;",
         "",
         ";".join(["Zeit [min]", *(f"{name} [a.u.]" for name in export.columns)]) + ";",
     ]
     for t, row in zip(export.times, _cells(export), strict=True):
-        lines.append(";".join([f"{t / 60:.3f}", *row]) + ";")
-    head, body = lines[:5], [line.replace(".", ",") for line in lines[5:]]
-    return ("\r\n".join(head + body) + "\r\n").encode("cp1252")
+        lines.append(_comma(";".join([f"{t / 60:.3f}", *row])) + ";")
+    return ("\r\n".join(lines) + "\r\n").encode("cp1252")
+
+
+def _comma(numbers: str) -> str:
+    return numbers.replace(".", ",")
 
 
 def _units_row(export: Exported) -> bytes:
@@ -73,7 +76,7 @@ def _spreadsheet(export: Exported) -> bytes:
     lines = ["sep=;", f"{export.run.code}: integrals" + ";" * len(export.columns)]
     lines.append(";".join(["time in h", *(f"{name} in a.u." for name in export.columns)]))
     for t, row in zip(export.times, _cells(export, missing="-"), strict=True):
-        lines.append(";".join([f'"{t / 3600:.6f}"', *row]).replace(".", ","))
+        lines.append(_comma(";".join([f'"{t / 3600:.6f}"', *row])))
     return ("\r\n".join(lines) + "\r\n").encode("utf-8-sig")
 
 

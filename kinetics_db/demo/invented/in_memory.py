@@ -56,7 +56,7 @@ def _data(plan: Plan, exports: list[Exported]) -> DataOfFit:
         items.append(
             SimpleNamespace(
                 run_revision=SimpleNamespace(run=SimpleNamespace(code=export.run.code)),
-                table=SimpleNamespace(scale_errors=scale_errors),
+                table=SimpleNamespace(content={"scale_errors": scale_errors}),
             )
         )
         runs.append(run)

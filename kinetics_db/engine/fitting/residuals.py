@@ -227,8 +227,10 @@ class Data:
             position = {name: i for i, name in enumerate(self.group_names)}
             self.groups = np.array([position[name] for name in names], dtype=np.intp)
         # what an integration at this tolerance cannot tell from a perfect fit
-        size = [np.sqrt(np.mean(self.observed[self.groups == g] ** 2)) for g in range(len(self.group_names))]
-        self.smallest_sigmas = np.maximum(100 * settings.rtol * np.array(size), 1e-300)
+        groups = [self.observed[self.groups == g] for g in range(len(self.group_names))]
+        size = np.array([np.sqrt(np.mean(values**2)) for values in groups])
+        largest = float(size.max(initial=0.0)) or 1.0
+        self.smallest_sigmas = 100 * settings.rtol * np.maximum(size, 1e-3 * largest)
 
     @property
     def n(self) -> int:

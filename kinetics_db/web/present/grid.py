@@ -85,11 +85,11 @@ def legend(thresholds: Mapping[str, float]) -> list[tuple[str, str, str]]:
     meanings = {
         "agrees": f"every observable passes both tests: chi-square (p at least {limits.chi_square_p:g}) and runs "
         f"of residuals on one side (p at least {limits.runs_p:g})",
-        "consistent": "the same, but the size of the errors was found by the fit itself, so chi-square says nothing",
+        "consistent": "the same, but the size of the errors was found by the fit itself, so chi-square cannot test it",
         "strained": f"a test fails while the error stays within {error} of the measured span, or the fit had to "
         f"move an amount of this run by more than {limits.pull:g} of its standard uncertainties",
         "disagrees": f"a test fails and the error is above {error} of the span: this model does not explain the run",
-        "not tested": "nothing of the run could be judged",
+        "not tested": "nothing of the run could be judged, or its points are used up by parameters that only it has",
     }
     return [(verdict, css_of(verdict), meaning) for verdict, meaning in meanings.items()]
 

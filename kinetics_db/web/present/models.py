@@ -80,7 +80,11 @@ class FitsOfPage:
     @property
     def curve_choices(self) -> list[Fit]:
         """Fits that have curves, newest first."""
-        return [fit for fit in self.newest if fit.pk in self.results]
+        return [
+            fit
+            for fit in self.newest
+            if (result := self.results.get(fit.pk)) is not None and result.cost is not None
+        ]
 
 
 def fits_of_page(fits: Sequence[Fit]) -> FitsOfPage:

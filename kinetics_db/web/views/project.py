@@ -25,7 +25,12 @@ if TYPE_CHECKING:
 
 SECONDS_BETWEEN_LOOKS = 3
 HEAVY_OF_FITS = ("dataset__canonical", "mechanism_version__canonical")
-HEAVY_OF_TABLES = ("signal_table__canonical", "signal_table__file__canonical", "reduction__canonical")
+HEAVY_OF_TABLES = (
+    "signal_table__canonical",
+    "signal_table__blob",
+    "signal_table__file__canonical",
+    "reduction__canonical",
+)
 
 
 @page
