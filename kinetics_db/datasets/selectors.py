@@ -46,6 +46,7 @@ def staleness_of(dataset_ids: list[int]) -> dict[int, Staleness]:
     items = DatasetItem.objects.filter(dataset_id__in=dataset_ids).select_related(
         "run_revision__run", "table__superseded_by"
     )
+    items = items.defer("run_revision__canonical", "table__canonical", "table__blob")
     for item in items.order_by("dataset_id", "order"):
         run = item.run_revision.run
         if run.latest_number > item.run_revision.number:

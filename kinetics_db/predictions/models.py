@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-
 from django.db import models
 
 from kinetics_db.provenance.models import ImmutableRecord

@@ -71,7 +71,7 @@ def run_page(page: Path, after_each: Callable[[], None] = lambda: None) -> dict[
             # Blank lines before it, so that a traceback names the line of the page.
             code = compile("\n" * (block.line - 1) + block.text, str(page), "exec")
             with contextlib.redirect_stdout(out):
-                exec(code, namespace)  # noqa: S102  the page's own examples
+                exec(code, namespace)
             printed = out.getvalue()
             after_each()
         elif block.kind == "text":

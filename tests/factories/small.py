@@ -9,9 +9,9 @@ import numpy as np
 from kinetics_db.accounts.models import User
 from kinetics_db.datasets.models import Dataset
 from kinetics_db.datasets.services import freeze_dataset
+from kinetics_db.measurements.models import ConcentrationTable
 from kinetics_db.mechanisms.models import MechanismVersion
 from kinetics_db.mechanisms.services import write_version
-from kinetics_db.measurements.models import ConcentrationTable
 from kinetics_db.projects.models import Project
 from kinetics_db.runs.entry import Amount
 from tests.factories.flow import lines, make_reported_table, make_run
@@ -50,11 +50,20 @@ def make_study(
     tables = []
     for i, (start, rate) in enumerate(zip(starts, rates, strict=True), start=1):
         run = make_run(
-            user, project.pk, f"R-{i}", {"A": Amount(start, "mM", 0.01 * start)}, temperature=Amount(20 + 10 * i, "degC")
+            user,
+            project.pk,
+            f"R-{i}",
+            {"A": Amount(start, "mM", 0.01 * start)},
+            temperature=Amount(20 + 10 * i, "degC"),
         )
         tables.append(
             make_reported_table(
-                user, run, decay_file(start, rate, seed=i), {"A": "A", "B": "B"}, name=f"R-{i}.csv", constant_u=SIGMA
+                user,
+                run,
+                decay_file(start, rate, seed=i),
+                {"A": "A", "B": "B"},
+                name=f"R-{i}.csv",
+                constant_u=SIGMA,
             )
         )
     dataset = freeze_dataset(user=user, project_id=project.pk, name="all", table_ids=[t.pk for t in tables])

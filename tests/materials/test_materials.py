@@ -20,7 +20,12 @@ def project() -> Project:
     project = make_project()
     enter_compound(user=project.created_by, project_id=project.pk, name="salt", molar_mass=58.44)
     enter_lot(
-        user=project.created_by, project_id=project.pk, code="S-1", compound="salt", purity=0.99, purity_uncertainty=0.002
+        user=project.created_by,
+        project_id=project.pk,
+        code="S-1",
+        compound="salt",
+        purity=0.99,
+        purity_uncertainty=0.002,
     )
     return project
 
@@ -101,7 +106,11 @@ def test_a_stock_that_cannot_be_made_up_is_refused_and_leaves_nothing(
 
 @pytest.mark.parametrize(
     ("changes", "says"),
-    [({"molar_mass": 0.0}, "molar mass"), ({"molar_mass": float("nan")}, "molar mass"), ({"density": (1.0, "g")}, "g")],
+    [
+        ({"molar_mass": 0.0}, "molar mass"),
+        ({"molar_mass": float("nan")}, "molar mass"),
+        ({"density": (1.0, "g")}, "g"),
+    ],
 )
 def test_a_compound_with_impossible_numbers_is_refused(
     project: Project, changes: dict[str, object], says: str

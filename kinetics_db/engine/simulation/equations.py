@@ -30,8 +30,10 @@ class Equations:
     Attributes
     ----------
     species, constants : as in the network
-    net : ndarray, shape (s, c)
-        Net stoichiometric numbers of each channel (a direction of a mass-action step); zero for held species.
+    net : ndarray, shape (s, r)
+        Net stoichiometric numbers of the mass-action steps, then of the steps with a law; zero for held
+        species. Rates are summed over steps last, so that rounding in the two large rates of a fast
+        equilibrium cannot disturb what the step conserves.
     """
 
     def __init__(self, network: Network) -> None:
@@ -53,20 +55,22 @@ class Equations:
         return self.law_tape.uses_temperature or self.computed.uses_temperature
 
     def _compile_channels(self) -> None:
-        channels: list[tuple[str, dict[int, float], Floats]] = []
+        channels: list[tuple[str, dict[int, float], int, float]] = []  # constant, orders, step, direction
+        nets: list[Floats] = []
         for step in self.network.steps:
             if step.constant is None:
                 continue
-            net = self._net(step.reactants, step.products)
-            channels.append((step.constant, self._orders(step.reactants), net))
+            channels.append((step.constant, self._orders(step.reactants), len(nets), 1.0))
             if step.reverse_constant is not None:
-                channels.append((step.reverse_constant, self._orders(step.products), -net))
-        s = len(self.species)
-        self.channel_constants = tuple(name for name, _, _ in channels)
-        self.net = np.array([net for _, _, net in channels]).reshape(len(channels), s).T.copy()
-        rows = [self._factors(orders) for _, orders, _ in channels]
+                channels.append((step.reverse_constant, self._orders(step.products), len(nets), -1.0))
+            nets.append(self._net(step.reactants, step.products))
+        self._nets = nets
+        self.channel_constants = tuple(c[0] for c in channels)
+        self.channel_step = np.array([c[2] for c in channels], dtype=np.intp)
+        self.channel_direction = np.array([c[3] for c in channels])
+        rows = [self._factors(c[1]) for c in channels]
         entries: list[tuple[int, int, float]] = []  # channel, species, order in it
-        for c, (_, orders, _) in enumerate(channels):
+        for c, (_, orders, _, _) in enumerate(channels):
             for i, order in orders.items():
                 entries.append((c, i, order))
                 rows.append(self._factors({**orders, i: order - 1.0}))
@@ -77,9 +81,8 @@ class Equations:
 
     def _compile_laws(self) -> None:
         laws = [(step, step.law) for step in self.network.steps if step.law is not None]
-        s = len(self.species)
-        net = [self._net(step.reactants, step.products) for step, _ in laws]
-        self.law_net = np.array(net).reshape(len(laws), s).T.copy()
+        nets = self._nets + [self._net(step.reactants, step.products) for step, _ in laws]
+        self.net = np.array(nets).reshape(len(nets), len(self.species)).T.copy()
         names = self.computed.names
         self.law_tape = Tape([law for _, law in laws], species=self.species, names=names)
 
@@ -198,28 +201,34 @@ class Bound:
         n_y, n_k = len(tape.species_entries), len(tape.name_entries)
         total = n_c + n_e + n_l + n_y + n_k
 
-        rates = np.zeros((s, total))
-        rates[:, :n_c] = equations.net * k
+        net = equations.net
+        r, first_law = net.shape[1], net.shape[1] - n_l
+        step, direction = equations.channel_step, equations.channel_direction
         at_l = n_c + n_e
-        rates[:, at_l : at_l + n_l] = equations.law_net
-        jacobian_t = np.zeros((s, s, total))  # [j, i] = d f_i / d y_j
+        at_y, at_k = at_l + n_l, at_l + n_l + n_y
+        rates = np.zeros((r, total))
+        rates[step, np.arange(n_c)] = direction * k
+        rates[first_law + np.arange(n_l), at_l + np.arange(n_l)] = 1.0
+        slopes = np.zeros((s, r, total))  # [j, v] = d v / d y_j
         for e in range(n_e):
             c, j = equations.entry_channel[e], equations.entry_species[e]
-            jacobian_t[j, :, n_c + e] += equations.net[:, c] * k[c] * equations.entry_order[e]
-        at_y = at_l + n_l
+            slopes[j, step[c], n_c + e] += direction[c] * k[c] * equations.entry_order[e]
         for e, (law, j) in enumerate(tape.species_entries):
-            jacobian_t[j, :, at_y + e] += equations.law_net[:, law]
-        parameters = np.zeros((p, s, total))
+            slopes[j, first_law + law, at_y + e] += 1.0
+        parameters = np.zeros((p, r, total))
         for c in range(n_c):
-            parameters[:, :, c] += dk[c][:, None] * equations.net[:, c]
-        at_k = at_y + n_y
+            parameters[:, step[c], c] += direction[c] * dk[c]
         for e, (law, name) in enumerate(tape.name_entries):
-            parameters[:, :, at_k + e] += dvalues[name][:, None] * equations.law_net[:, law]
+            parameters[:, first_law + law, at_k + e] += dvalues[name]
 
-        flat_jacobian = jacobian_t.reshape(s * s, total)
+        flat_slopes = slopes.reshape(s * r, total)
+        self.r = r
+        self._net_t = np.ascontiguousarray(net.T)
         self._to_rates = _product(np.hstack([rates[:, :n_c], rates[:, at_l:at_y]]))
-        self._to_jacobian = _product(flat_jacobian)
-        self._to_all = _product(np.concatenate([flat_jacobian, parameters.reshape(p * s, total), rates]))
+        self._to_slopes = _product(flat_slopes)
+        self._to_all = _product(np.concatenate([flat_slopes, parameters.reshape(p * r, total), rates]))
+        self._step_rates = np.zeros(r)
+        self._slopes = np.zeros(s * r)
         self._monomials = np.zeros(total)
         self._few = np.zeros(n_c + n_l)
         self._x = np.ones(s + 1 + len(equations.power_slots))
@@ -230,7 +239,7 @@ class Bound:
         self._products = self._monomials[: self._n_m]
         self._x_species = self._x[:s]
         self._gathered_few = np.zeros(self._index_few.shape)
-        self._jac = np.zeros(s * s)
+        self._jac = np.zeros((s, s))
         self._out = np.zeros(s)
         self._powers = equations.power_slots
         self._tail: list[float] = [*values.tolist(), math.nan if temperature is None else temperature]
@@ -251,7 +260,8 @@ class Bound:
         np.multiply.reduce(g, axis=0, out=few[:n_c])
         if self._tape is not None:
             few[n_c:] = self._tape.run(y.tolist() + self._tail, derivatives=False)
-        self._to_rates(few, self._out)
+        self._to_rates(few, self._step_rates)
+        np.dot(self._step_rates, self._net_t, self._out)
         return self._out
 
     def _fill_monomials(self, y: Floats) -> Floats:
@@ -275,25 +285,28 @@ class Bound:
         start concentrations. The array that the function gives is overwritten by its next call. It raises
         ArithmeticError or ValueError where a written-out law is not defined.
         """
-        s, p = self.s, self.p
+        s, p, r = self.s, self.p, self.r
         blocks = p + starts
-        # [transposed Jacobian, df/dp, f] and right behind it J S, so that the last two are the answer
-        memory = np.zeros(s * s + p * s + s + blocks * s)
-        flat, answer = memory[: s * s + p * s + s], memory[s * s + p * s :]
-        jacobian_t, slopes = memory[: s * s].reshape(s, s), memory[s * s : s * s + p * s].reshape(p, s)
-        moved = answer[s:].reshape(blocks, s)
-        moved_by_constants = moved[:p]
-        monomials, product, dot, add = self._fill_monomials, self._to_all, np.dot, np.add
+        # [dv/dy, dv/dp, v] and right behind it dv/dy S, so that the last two hold all rates by step
+        memory = np.zeros(s * r + p * r + r + blocks * r)
+        flat, by_step = memory[: s * r + p * r + r], memory[s * r + p * r :].reshape(1 + blocks, r)
+        to_species, to_constants = memory[: s * r].reshape(s, r), memory[s * r : s * r + p * r].reshape(p, r)
+        moved, moved_by_constants = by_step[1:], by_step[1 : 1 + p]
+        answer = np.zeros(s * (1 + blocks))
+        by_species = answer.reshape(1 + blocks, s)
+        monomials, product, dot, add, net_t = self._fill_monomials, self._to_all, np.dot, np.add, self._net_t
 
         def evaluate(u: Floats) -> Floats:
             product(monomials(u[:s]), flat)
-            dot(u[s:].reshape(blocks, s), jacobian_t, moved)
-            add(moved_by_constants, slopes, moved_by_constants)
+            dot(u[s:].reshape(blocks, s), to_species, moved)
+            add(moved_by_constants, to_constants, moved_by_constants)
+            dot(by_step, net_t, by_species)
             return answer
 
         return evaluate
 
     def jacobian_transposed(self, y: Floats) -> Floats:
         """[j, i] = d f_i / d y_j, shape (s, s); overwritten by the next call."""
-        self._to_jacobian(self._fill_monomials(y), self._jac)
-        return self._jac.reshape(self.s, self.s)
+        self._to_slopes(self._fill_monomials(y), self._slopes)
+        np.dot(self._slopes.reshape(self.s, self.r), self._net_t, self._jac)
+        return self._jac

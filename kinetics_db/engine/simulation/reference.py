@@ -28,7 +28,7 @@ Floats = NDArray[np.float64]
 
 # A species is followed to this fraction of the largest concentration with full relative accuracy.
 TRACE = 1e-8
-SENSITIVITY_TRACE = 1e-2  # below 1e-6 rounding in stiff nets costs thousands of steps
+SENSITIVITY_TRACE = 1e-3  # below 1e-6 rounding in stiff nets costs thousands of steps
 _CLOCK_EVERY = 64  # rate evaluations between looks at the clock
 _EVALUATIONS_PER_STEP = 6
 

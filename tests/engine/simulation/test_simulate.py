@@ -46,6 +46,25 @@ def test_conserved_moieties_hold_to_one_part_in_ten_billion():
     assert np.abs(moved).max() < 1e-12
 
 
+def test_a_fast_equilibrium_does_not_disturb_what_it_conserves():
+    """Rates of 4e8 mol/L/s each way cancel; their rounding must neither drift nor cost steps."""
+    text = "A + B <--k1 / k2--> C + D\nE <--k3 / k4--> C\nE <--k5 / k6--> B"
+    constants = {"k1": 0.034, "k2": 4.5e-5, "k3": 163.0, "k4": 6.06, "k5": 3.14e8, "k6": 4.17e8}
+    curves = simulate(
+        parse_mechanism(text),
+        constants=constants,
+        start={"A": 1e-3, "B": 1.0, "D": 1.0, "E": 1.0},
+        times=[1e-3, 1.0, 50.0, 190.0, 1e4],
+        sensitivities_to=tuple(constants),
+    )
+    assert curves.outcome.ok, curves.outcome.message
+    assert curves.outcome.steps < 6000
+    total = sum(curves.of(name) for name in "BCE")
+    np.testing.assert_allclose(total, 2.0, rtol=1e-10)
+    np.testing.assert_allclose(curves.of("A") + curves.of("D"), 1.001, rtol=1e-10)
+    np.testing.assert_allclose(curves.of("E") / curves.of("B"), 4.17 / 3.14, rtol=1e-6)
+
+
 def test_a_held_species_stays_and_still_drives_the_rate():
     network = parse_mechanism("A + B --k--> C\nhold B")
     curves = simulate(
