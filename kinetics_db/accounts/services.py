@@ -1,4 +1,4 @@
-"""Making accounts. The audit trail stands above accounts, so entrances audit through `provenance`."""
+"""Making accounts. The audit trail stands above and listens to `accounts.signals`."""
 
 from __future__ import annotations
 
@@ -6,8 +6,10 @@ import secrets
 
 from django.contrib.auth.password_validation import validate_password
 from django.core.exceptions import ValidationError
+from django.db import transaction
 
 from kinetics_db.accounts.models import User
+from kinetics_db.accounts.signals import account_written
 from kinetics_db.errors import InvalidInput
 
 
@@ -22,7 +24,9 @@ def create_user(*, username: str, password: str, is_staff: bool = False) -> User
     if User.objects.filter(username=username).exists():
         raise InvalidInput(f"there is an account '{username}' already", field="username", cure="another name")
     user.set_password(password)
-    user.save()
+    with transaction.atomic():
+        user.save()
+        account_written.send(sender=User, user=user, verb="made")
     return user
 
 
@@ -41,5 +45,7 @@ def set_password(*, username: str, password: str) -> User:
     if user is None:
         raise InvalidInput(f"there is no account '{username}'", field="username")
     user.set_password(password)
-    user.save(update_fields=["password"])
+    with transaction.atomic():
+        user.save(update_fields=["password"])
+        account_written.send(sender=User, user=user, verb="gave a new password")
     return user

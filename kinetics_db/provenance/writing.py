@@ -81,6 +81,14 @@ def note_write(
     )
 
 
+def audit_account(sender: Any, *, user: Any, verb: str, **_: Any) -> None:
+    """Audit what happens to accounts, which stand below the trail and so cannot write to it themselves."""
+    with recording(user=user):
+        note_write(
+            verb=verb, record_kind="account", record_id=user.pk, project_id=None, label=user.get_username()
+        )
+
+
 def entry_digest(values: dict[str, Any]) -> str:
     """SHA-256 over the canonical JSON of an audit entry's content, the previous digest included."""
     return digest(values)

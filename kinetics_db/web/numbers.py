@@ -6,6 +6,7 @@ Rounding works on the shortest decimal text of a float, so that 0.15 is rounded 
 from __future__ import annotations
 
 import math
+import re
 from dataclasses import dataclass
 from decimal import ROUND_CEILING, ROUND_FLOOR, ROUND_HALF_EVEN, Decimal
 from typing import TypeGuard
@@ -18,6 +19,7 @@ MINUS = "−"
 SMALLEST_PLAIN, LARGEST_PLAIN = -2, 4  # powers of ten that are written without a factor 10ⁿ
 MOST_DIGITS = 15  # a float has no more
 
+_EXPONENT = re.compile(r"\^(-?\d+)(?![\d.])")
 _RAISED = str.maketrans("-0123456789", "⁻⁰¹²³⁴⁵⁶⁷⁸⁹")
 
 
@@ -111,7 +113,7 @@ def interval(low: float | None, high: float | None, unit: str = "") -> str:
         above and not rounded[1]
     ):  # ends of different size need their own digits
         ends = plain(low, digits=2, rounding=ROUND_FLOOR), plain(high, digits=2, rounding=ROUND_CEILING)
-        return f"{ends[0]} to {ends[1]} {unit}".rstrip()
+        return f"{ends[0]} to {ends[1]} {unit_text(unit)}".rstrip()
     power = _power(max(abs(rounded[0]), abs(rounded[1])))
     decimals = max(0, power - last)
     text = " to ".join(_digits(end.scaleb(-power), decimals) for end in rounded)
@@ -148,7 +150,11 @@ def _two_digits(value: float) -> str:
     if not number:
         return "0"
     last = min(number.adjusted() - 1, 0)
-    return _digits(_rounded(number, last), -last)
+    rounded = _rounded(number, last)
+    if last < 0 and rounded.adjusted() - last > 1:  # 9.96 became 10.0
+        last += 1
+        rounded = _rounded(number, last)
+    return _digits(rounded, -last)
 
 
 def _is_number(value: float | None) -> TypeGuard[float]:
@@ -178,4 +184,9 @@ def _digits(number: Decimal, decimals: int) -> str:
 
 def _joined(digits: str, power: int, unit: str) -> str:
     factor = f" × 10{str(power).translate(_RAISED)}" if power else ""
-    return f"{digits}{factor} {unit}".rstrip()
+    return f"{digits}{factor} {unit_text(unit)}".rstrip()
+
+
+def unit_text(unit: str) -> str:
+    """A unit with its whole exponents raised: 'L^2/mol^2/s' is read as 'L²/mol²/s'."""
+    return _EXPONENT.sub(lambda found: found[1].translate(_RAISED), unit)

@@ -128,7 +128,7 @@ def _axes(plot: Plot, points: Sequence[tuple[Floats, Floats, Floats]]) -> tuple[
             low = min(low, max(float(curve.min()), low - room))
             high = max(high, min(float(curve.max()), high + room))
     x = axis(min(0.0, float(times.min())), float(times.max()), LEFT + 4, RIGHT - 4, about=6)
-    return x, axis(low, high, BOTTOM, TOP, about=4)
+    return x, axis(low, high, BOTTOM, TOP, about=5)
 
 
 def _frame(svg: Element, plot: Plot, x: Axis, y: Axis) -> None:

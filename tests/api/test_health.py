@@ -22,7 +22,9 @@ def test_health_says_that_the_database_answers(client: Client) -> None:
     assert response.json() == {"database": "answers", "open_jobs": 0}
 
 
-def test_health_is_503_when_the_database_does_not_answer(client: Client, monkeypatch: pytest.MonkeyPatch) -> None:
+def test_health_is_503_when_the_database_does_not_answer(
+    client: Client, monkeypatch: pytest.MonkeyPatch
+) -> None:
     def away() -> int:
         raise OperationalError("gone")
 

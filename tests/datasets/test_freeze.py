@@ -80,9 +80,7 @@ def test_relative_and_molar_tables_are_never_mixed(project: Project) -> None:
 def test_a_stranger_learns_nothing_of_a_project(project: Project) -> None:
     table = table_of(project, "R-1")
     with pytest.raises(NotFound):
-        freeze_dataset(
-            user=make_project().created_by, project_id=project.pk, name="x", table_ids=[table.pk]
-        )
+        freeze_dataset(user=make_project().created_by, project_id=project.pk, name="x", table_ids=[table.pk])
 
 
 def test_a_dataset_is_stale_once_a_run_is_revised_or_a_table_superseded(project: Project) -> None:

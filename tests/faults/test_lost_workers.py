@@ -77,7 +77,9 @@ def test_a_killed_child_of_a_worker_is_replaced_and_the_fit_finishes_once(
 
 
 def test_a_flushed_broker_loses_no_fit(
-    broker: Any, celery_worker_process: Callable[..., Any], sweeper_process: Callable[..., Any],
+    broker: Any,
+    celery_worker_process: Callable[..., Any],
+    sweeper_process: Callable[..., Any],
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:
     import redis
@@ -96,7 +98,9 @@ def test_a_flushed_broker_loses_no_fit(
 
 
 def test_a_fit_asked_for_while_the_broker_is_away_starts_when_it_is_back(
-    broker: Any, celery_worker_process: Callable[..., Any], sweeper_process: Callable[..., Any],
+    broker: Any,
+    celery_worker_process: Callable[..., Any],
+    sweeper_process: Callable[..., Any],
     monkeypatch: pytest.MonkeyPatch,
 ) -> None:
     for name, value in QUICK_LEASE.items():
@@ -112,7 +116,9 @@ def test_a_fit_asked_for_while_the_broker_is_away_starts_when_it_is_back(
     assert_one_result(fit)
 
 
-def test_a_running_fit_stops_when_asked_and_keeps_its_best_point(celery_worker_process: Callable[..., Any]) -> None:
+def test_a_running_fit_stops_when_asked_and_keeps_its_best_point(
+    celery_worker_process: Callable[..., Any],
+) -> None:
     celery_worker_process(concurrency=1)
     fit = ask(starts=MANY_STARTS)
     wait_until(is_under_way(fit), seconds=90, what="the fit is under way")

@@ -94,9 +94,11 @@ def test_ten_people_who_write_one_mechanism_at_once_get_ten_numbers() -> None:
     project = make_project()
     versions = at_once(
         10,
-        lambda i: write_version(
-            user=project.created_by, project_id=project.pk, name="idea", text=f"A --k--> {i + 1} B"
-        ).number,
+        lambda i: (
+            write_version(
+                user=project.created_by, project_id=project.pk, name="idea", text=f"A --k--> {i + 1} B"
+            ).number
+        ),
     )
     assert sorted(versions) == list(range(1, 11))
 

@@ -12,7 +12,7 @@ from kinetics_db.errors import InvalidInput, NotFound, NotPermitted
 from kinetics_db.fits.casting import Casting
 from kinetics_db.fits.models import Fit
 from kinetics_db.fits.request import FitRequest
-from kinetics_db.fits.services import request_fit
+from kinetics_db.fits.services import request_fit, retry_fit, stop_fit
 from kinetics_db.jobs.models import Job
 from kinetics_db.mechanisms.services import write_version
 from kinetics_db.provenance.models import AuditEntry
@@ -30,7 +30,11 @@ def study() -> SmallStudy:
 
 def ask(study: SmallStudy, **changes: Any) -> Fit:
     values = {
-        "user": study.user, "dataset": study.dataset, "mechanism_version": study.version, "constants": [K], **changes,
+        "user": study.user,
+        "dataset": study.dataset,
+        "mechanism_version": study.version,
+        "constants": [K],
+        **changes,
     }
     return request_fit(**values)
 
@@ -71,7 +75,9 @@ def test_a_request_reads_back_from_its_stored_bytes(study: SmallStudy) -> None:
     prior = Prior(mean=0.01, sd=0.5)
     fit = ask(
         study,
-        constants=[replace(K, prior=prior, lower=1e-4, upper=1.0, scope="in a group", group_by="temperature")],
+        constants=[
+            replace(K, prior=prior, lower=1e-4, upper=1.0, scope="in a group", group_by="temperature")
+        ],
         start_concentrations=[StartConcentration("B", start=1e-4)],
     )
     request = FitRequest.from_plain(Fit.objects.get(pk=fit.pk).content)
@@ -100,9 +106,7 @@ def test_an_observable_that_no_column_is_assigned_to_is_refused(study: SmallStud
 
 
 def test_a_compound_that_plays_no_species_is_refused(study: SmallStudy) -> None:
-    said = refused(
-        study, mechanism_version=mechanism(study, "S --k--> B"), casting=Casting({}, {"A": None})
-    )
+    said = refused(study, mechanism_version=mechanism(study, "S --k--> B"), casting=Casting({}, {"A": None}))
     assert "compound 'A' is not assigned" in said
 
 
@@ -152,3 +156,21 @@ def test_readers_may_not_ask_and_strangers_may_not_know(study: SmallStudy) -> No
         ask(study, user=make_member(study.project, "reader"))
     with pytest.raises(NotFound):
         ask(study, user=make_project().created_by)
+
+
+def test_stopping_and_trying_again_are_in_the_audit_trail(study: SmallStudy) -> None:
+    fit = ask(study)
+    assert stop_fit(user=study.user, fit=fit).state == Job.State.STOPPED
+    assert retry_fit(user=study.user, fit=fit).state == Job.State.WAITING
+    verbs = list(
+        AuditEntry.objects.filter(record_kind="fit").order_by("sequence").values_list("verb", flat=True)
+    )
+    assert verbs == ["asked for", "asked to stop", "asked for again"]
+
+
+def test_a_reader_may_neither_stop_a_fit_nor_try_it_again(study: SmallStudy) -> None:
+    fit, reader = ask(study), make_member(study.project, "reader")
+    with pytest.raises(NotPermitted):
+        stop_fit(user=reader, fit=fit)
+    with pytest.raises(NotPermitted):
+        retry_fit(user=reader, fit=fit)

@@ -51,9 +51,7 @@ def test_a_constant_is_found_with_its_unit_and_an_interval_that_holds_it() -> No
 
 
 def test_own_constants_differ_from_run_to_run() -> None:
-    result = fitted(
-        make_study(k=(0.01, 0.03)), constants=[Constant("k", start=0.01, scope="own per run")]
-    )
+    result = fitted(make_study(k=(0.01, 0.03)), constants=[Constant("k", start=0.01, scope="own per run")])
     found = by_name(result)
     assert found["k @ R-1"].value == pytest.approx(0.01, rel=0.03)
     assert found["k @ R-2"].value == pytest.approx(0.03, rel=0.03)
@@ -70,7 +68,9 @@ def test_constants_in_a_group_are_shared_by_the_runs_at_one_temperature() -> Non
 
 def test_a_held_constant_is_not_fitted() -> None:
     study = make_study()
-    version = write_version(user=study.user, project_id=study.project.pk, name="back", text="A <--k / k_b--> B")
+    version = write_version(
+        user=study.user, project_id=study.project.pk, name="back", text="A <--k / k_b--> B"
+    )
     constants = [Constant("k", start=0.005), Constant("k_b", start=1e-9, scope="held")]
     assert list(by_name(fitted(study, mechanism_version=version, constants=constants))) == ["k"]
 
@@ -100,26 +100,37 @@ def test_a_result_keeps_curves_residuals_and_library_versions() -> None:
     first = content["experiments"][0]
     assert first["name"] == "R-1" and first["observed_names"] == ["A", "B"]
     residual = np.array(first["observed"]) - np.array(first["model"])
-    np.testing.assert_allclose(residual / np.array(first["sigma"]), np.array(first["standardised"]), rtol=1e-9)
+    np.testing.assert_allclose(
+        residual / np.array(first["sigma"]), np.array(first["standardised"]), rtol=1e-9
+    )
 
 
 def test_two_computations_of_one_request_give_equal_bytes() -> None:
     study = make_study()
     fit = request_fit(
-        user=study.user, dataset=study.dataset, mechanism_version=study.version, constants=[Constant("k", start=0.002)]
+        user=study.user,
+        dataset=study.dataset,
+        mechanism_version=study.version,
+        constants=[Constant("k", start=0.002)],
     )
     first = compute_now(fit)
     from kinetics_db.fits.services.compute import compute_fit, result_content
 
-    claim = jobs.Claim(job_id=job_for(kind="fit", subject_id=fit.pk).pk, kind="fit", subject_id=fit.pk, token=1)
-    Job.objects.filter(pk=claim.job_id).update(state="running", lease_until="2100-01-01T00:00:00Z", finished=None)
+    claim = jobs.Claim(
+        job_id=job_for(kind="fit", subject_id=fit.pk).pk, kind="fit", subject_id=fit.pk, token=1
+    )
+    Job.objects.filter(pk=claim.job_id).update(
+        state="running", lease_until="2100-01-01T00:00:00Z", finished=None
+    )
     again = result_content(compute_fit(Fit.objects.get(pk=fit.pk), claim))
     assert again == first.content
 
 
 def test_a_right_model_agrees_and_a_wrong_one_disagrees() -> None:
     study = make_study(starts=(10.0, 20.0, 40.0))
-    wrong = write_version(user=study.user, project_id=study.project.pk, name="second order", text="2 A --k--> 2 B")
+    wrong = write_version(
+        user=study.user, project_id=study.project.pk, name="second order", text="2 A --k--> 2 B"
+    )
     good = fitted(study)
     bad = fitted(study, mechanism_version=wrong, constants=[Constant("k", start=1.0)])
     grid = grid_of(user=study.user, project_id=study.project.pk)
@@ -173,9 +184,14 @@ def test_a_fit_that_is_done_cannot_be_tried_again() -> None:
 
 def test_a_model_that_blows_up_ends_with_a_reason_and_other_fits_go_on() -> None:
     study = make_study()
-    version = write_version(user=study.user, project_id=study.project.pk, name="explosion", text="2 A --k--> 3 A + B")
+    version = write_version(
+        user=study.user, project_id=study.project.pk, name="explosion", text="2 A --k--> 3 A + B"
+    )
     fit = request_fit(
-        user=study.user, dataset=study.dataset, mechanism_version=version, constants=[Constant("k", start=1e6)]
+        user=study.user,
+        dataset=study.dataset,
+        mechanism_version=version,
+        constants=[Constant("k", start=1e6)],
     )
     result = compute_now(fit)
     assert result.status in ("cannot start", "not converged")

@@ -25,7 +25,11 @@ def write(project: Project, text: str, name: str = "direct") -> MechanismVersion
 
 
 def test_versions_are_numbered_in_the_order_of_writing(project: Project) -> None:
-    assert [write(project, text).number for text in ("A --k--> B", "A --k--> 2 B", "2 A --k--> B")] == [1, 2, 3]
+    assert [write(project, text).number for text in ("A --k--> B", "A --k--> 2 B", "2 A --k--> B")] == [
+        1,
+        2,
+        3,
+    ]
 
 
 def test_a_change_of_comments_or_order_is_not_a_new_version(project: Project) -> None:

@@ -37,7 +37,9 @@ def test_a_prediction_is_the_closed_form_with_its_propagated_uncertainty() -> No
     np.testing.assert_allclose(np.array(content["values"])[:, at], expected, rtol=1e-6)
     # first order: u([A]) = t [A] u(k)
     np.testing.assert_allclose(
-        np.array(content["standard_uncertainty"])[:, at], np.array(times) * expected * k.standard_error, rtol=1e-4
+        np.array(content["standard_uncertainty"])[:, at],
+        np.array(times) * expected * k.standard_error,
+        rtol=1e-4,
     )
     assert content["outside"] == [] and "kinetic estimate" in content["caution"]
 
@@ -57,7 +59,9 @@ def test_where_constants_differ_a_place_has_to_be_named() -> None:
     result = fitted(study, scope="own per run")
     with pytest.raises(InvalidInput, match="R-1, R-2"):
         predict_run(user=study.user, result=result, start={"A": 0.01}, times=[0.0, 10.0])
-    fast = predict_run(user=study.user, result=result, start={"A": 0.01}, times=[0.0, 10.0], place="R-2").content
+    fast = predict_run(
+        user=study.user, result=result, start={"A": 0.01}, times=[0.0, 10.0], place="R-2"
+    ).content
     at = fast["species"].index("A")
     assert fast["values"][1][at] == pytest.approx(0.01 * np.exp(-0.3), rel=0.01)
 

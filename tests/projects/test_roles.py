@@ -14,6 +14,8 @@ from kinetics_db.projects.selectors import (
     require_reader,
 )
 from kinetics_db.projects.services import create_project, set_member
+from kinetics_db.provenance.models import AuditEntry
+from kinetics_db.provenance.selectors import chain_breaks
 from tests.factories.people import make_member, make_project, make_user
 
 pytestmark = pytest.mark.django_db
@@ -59,7 +61,9 @@ def test_a_project_keeps_an_owner() -> None:
 def test_only_owners_give_roles_and_only_known_ones() -> None:
     project = make_project()
     with pytest.raises(NotPermitted):
-        set_member(user=make_member(project, "contributor"), project=project, member=make_user(), role="reader")
+        set_member(
+            user=make_member(project, "contributor"), project=project, member=make_user(), role="reader"
+        )
     with pytest.raises(InvalidInput, match="reader, contributor, owner"):
         set_member(user=project.created_by, project=project, member=make_user(), role="king")
 
@@ -95,3 +99,14 @@ def test_an_account_that_exists_keeps_its_password() -> None:
     set_password(username="ann", password="another long phrase 7")
     user.refresh_from_db()
     assert user.check_password("another long phrase 7")
+
+
+def test_what_happens_to_an_account_is_in_the_audit_trail() -> None:
+    create_user(username="ann", password="a long enough phrase 9")
+    set_password(username="ann", password="another long phrase 7")
+    told = AuditEntry.objects.order_by("sequence").values_list("actor", "verb", "record_kind", "record_label")
+    assert list(told) == [
+        ("ann", "made", "account", "ann"),
+        ("ann", "gave a new password", "account", "ann"),
+    ]
+    assert chain_breaks() == []

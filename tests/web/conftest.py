@@ -7,7 +7,6 @@ import math
 import pytest
 from django.core.cache import cache
 from django.test import Client
-from pytest_django import Settings
 
 from kinetics_db.projects.services import create_project
 from tests.factories.people import make_user
@@ -15,10 +14,8 @@ from tests.web.study import RIGHT, WRONG, Study
 
 
 @pytest.fixture(autouse=True)
-def _fresh_server(settings: Settings) -> None:
-    """No counted logins, and no folder of collected files: style sheets come from the source tree."""
+def _no_counted_logins() -> None:
     cache.clear()
-    settings.STATIC_ROOT = None
 
 
 @pytest.fixture

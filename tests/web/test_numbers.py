@@ -202,6 +202,8 @@ def test_shares_are_percentages_of_two_digits() -> None:
     assert percent(0.02134) == "2.1 %"
     assert percent(0.534) == "53 %"
     assert percent(1.534) == "153 %"
+    assert percent(0.0996) == "10 %"
+    assert percent(0.00996) == "1.0 %"
     assert percent(0.0) == "0 %"
 
 
@@ -222,3 +224,12 @@ def test_every_digit_can_be_copied_from_a_page() -> None:
 
 def test_a_unit_with_markup_in_it_stays_text() -> None:
     assert "<b>" not in shown(1.0, 0.1, "<b>").html
+
+
+@pytest.mark.parametrize(
+    ("unit", "text"),
+    [("L^2/mol^2/s", "L²/mol²/s"), ("mol^-1", "mol⁻¹"), ("(mol/L)^0.5/s", "(mol/L)^0.5/s"), ("1/s", "1/s")],
+)
+def test_whole_exponents_of_units_are_raised(unit: str, text: str) -> None:
+    assert with_uncertainty(1.234, 0.056, unit) == f"1.234(56) {text}"
+    assert interval(0.0123, 3.11, unit) == f"0.012 to 3.2 {text}"

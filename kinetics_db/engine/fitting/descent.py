@@ -26,6 +26,7 @@ DescentStatus = Literal["converged", "stopped", "not converged", "cannot start"]
 TIGHT = 1e-13  # further fall of -2 ln L, per point, that counts as none
 LOOSE = 1e-5  # fall of -2 ln L, 0.003 standard errors, below which the search hands over to full steps
 MOST_POLISHING_STEPS = 10
+MOST_SEARCHES = 3
 MOST_FAILURES_IN_A_ROW = 16
 HARDLY = "a full step would hardly lower the cost"
 MOST_SIGMA_ROUNDS = 60
@@ -112,7 +113,11 @@ class Descender:
     def _minimise(self, current: Point, sigmas: Floats, begun: int) -> tuple[Point, bool, str]:
         ending = HARDLY
         if not self.hardly_falls(current, sigmas):
-            current, ending = _Search(self, current, sigmas, begun).run()
+            for _ in range(MOST_SEARCHES):  # a fresh trust region helps where the last one shrank away
+                current, ending = _Search(self, current, sigmas, begun).run()
+                used_up = self.iterations - begun >= self._settings.max_iterations
+                if used_up or self.hardly_falls(current, sigmas):
+                    break
         remaining = self._curvature(current, sigmas).decrease
         if remaining >= LOOSE:
             what = f"{ending}, though a full step should lower -2 ln L by {remaining:.3g}"
@@ -185,7 +190,7 @@ class _Search:
                 ftol=1e-12,
                 xtol=1e-10,
                 gtol=1e-14,
-                x_scale=1.0,
+                x_scale=self._steps(lower, upper),
                 max_nfev=10 * owner._settings.max_iterations,
                 callback=self._after_iteration,
             )
@@ -202,6 +207,12 @@ class _Search:
         if found.status == -2 and owner.iterations >= self._last_iteration:
             return self._accepted, endings[0]
         return self._accepted, endings.get(found.status, "the search ended")
+
+    @staticmethod
+    def _steps(lower: Floats, upper: Floats) -> Floats:
+        """The solver multiplies steps by the root of the distance to a finite bound; this takes it out."""
+        nearest = np.maximum(np.minimum(-lower, upper), 1.0)
+        return np.asarray(np.where(np.isfinite(nearest), 1.0 / np.sqrt(nearest), 1.0))
 
     def _point(self, z: Floats) -> Point | None:
         for known, point in self._known:

@@ -21,6 +21,8 @@ Floats = NDArray[np.float64]
 Ints = NDArray[np.intp]
 Kind = Literal["constant", "start concentration", "nuisance"]
 
+# Limit for a parameter without bounds that runs away because the data do not hold it.
+FARTHEST = 1e9
 # A positive parameter is followed this far from its start and no further, so that exp cannot overflow.
 WIDEST_FACTOR = 1e15
 
@@ -52,12 +54,15 @@ class FreeParameter:
 
     @property
     def limits(self) -> tuple[float, float]:
-        """Bounds on the fitted scale, infinite where none are given."""
-        lower = -math.inf if self.lower is None else self.lower
-        upper = math.inf if self.upper is None else self.upper
-        if self.positive:
-            lower = math.log(lower) if lower > 0 else -math.inf
-            upper = math.log(upper) if upper < math.inf else math.inf
+        """Bounds on the fitted scale; where none is given a positive parameter may go `FARTHEST`-fold."""
+        if not self.positive:
+            return (
+                -math.inf if self.lower is None else self.lower,
+                math.inf if self.upper is None else self.upper,
+            )
+        centre, reach = math.log(self.start), math.log(FARTHEST)
+        lower = math.log(self.lower) if self.lower else centre - reach
+        upper = math.log(self.upper) if self.upper is not None and self.upper < math.inf else centre + reach
         return lower, upper
 
     @property

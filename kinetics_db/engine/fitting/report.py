@@ -32,6 +32,7 @@ from kinetics_db.engine.fitting.uncertainty import (
 
 Floats = NDArray[np.float64]
 PARTNERS = 0.99  # correlation of parameters of which only a combination is determined
+SHARED_DIRECTION = 0.05  # element of the projector onto flat directions
 SET_BY_PRIOR = 0.8  # of the width of the prior's interval
 
 
@@ -205,7 +206,7 @@ def _partners(i: int, objective: Objective, found: Curvature) -> list[str]:
     names = [p.name for p in objective.parameters.parameters]
     others = [j for j in range(len(names)) if j != i and not found.inert[j]]
     if not found.determined[i]:
-        return [names[j] for j in others if not found.determined[j]][:5]
+        return [names[j] for j in others if abs(found.flat[i, j]) > SHARED_DIRECTION][:5]
     errors = np.sqrt(np.diag(found.covariance))
     with np.errstate(invalid="ignore"):
         correlation = found.covariance[i] / (errors[i] * errors)

@@ -34,6 +34,7 @@ class Curvature:
     covariance : ndarray, shape (p, p), NaN in rows and columns of what is not determined or held at a bound
     determined : ndarray of bool, shape (p,)
     inert : ndarray of bool, shape (p,), no effect on any point and no prior
+    flat : ndarray, shape (p, p), projector onto the directions that are not determined, in scaled parameters
     step : ndarray, shape (p,), the full Gauss-Newton step in the determined directions
     decrease : by how much that step would lower the sum of squares
     """
@@ -42,6 +43,7 @@ class Curvature:
     covariance: Floats
     determined: NDArray[np.bool_]
     inert: NDArray[np.bool_]
+    flat: Floats
     step: Floats
     decrease: float
 
@@ -94,10 +96,12 @@ def curvature(
     inert = np.zeros(p, dtype=bool)
     inert[positions[~acting]] = True
     everything = np.concatenate([residuals, prior_residuals])
+    flat = np.zeros((p, p))
+    flat[np.ix_(at, at)] = vt[~kept].T @ vt[~kept]
     along = u[:, kept].T @ everything
     step = np.zeros(p)
     step[at] = -half.T @ along
-    return Curvature(u[:v, kept], covariance, determined, inert, step, float(np.sum(along**2)))
+    return Curvature(u[:v, kept], covariance, determined, inert, flat, step, float(np.sum(along**2)))
 
 
 def pushed_against_bounds(

@@ -21,7 +21,7 @@ from kinetics_db.jobs.selectors import job_for
 from kinetics_db.mechanisms.models import MechanismVersion
 from kinetics_db.mechanisms.selectors import network_of
 from kinetics_db.projects.selectors import require_contributor
-from kinetics_db.provenance.services import recording, save_record
+from kinetics_db.provenance.services import note_write, recording, save_record
 
 JOB_KIND = "fit"
 
@@ -116,10 +116,27 @@ def _known_owners(data: DataOfFit, request: FitRequest) -> None:
 def stop_fit(*, user: User, fit: Fit) -> Job:
     """Ask a fit to stop; its best point so far is kept as a stopped result."""
     require_contributor(user=user, project_id=fit.project_id)
-    return jobs.request_stop(job=job_for(kind=JOB_KIND, subject_id=fit.pk))
+    with recording(user=user):
+        job = jobs.request_stop(job=job_for(kind=JOB_KIND, subject_id=fit.pk))
+        _note(fit, "asked to stop")
+    return job
 
 
 def retry_fit(*, user: User, fit: Fit) -> Job:
     """Compute a fit again that was stopped, failed or crashed."""
     require_contributor(user=user, project_id=fit.project_id)
-    return jobs.retry_job(job=job_for(kind=JOB_KIND, subject_id=fit.pk))
+    with recording(user=user):
+        job = jobs.retry_job(job=job_for(kind=JOB_KIND, subject_id=fit.pk))
+        _note(fit, "asked for again")
+    return job
+
+
+def _note(fit: Fit, verb: str) -> None:
+    note_write(
+        verb=verb,
+        record_kind=Fit.kind(),
+        record_id=fit.pk,
+        project_id=fit.project_id,
+        label=str(fit),
+        digest_after=fit.digest,
+    )

@@ -49,6 +49,7 @@ class Command(BaseCommand):
                 f"not {settings.SETTINGS_MODULE}: unset DJANGO_SETTINGS_MODULE"
             )
         self._begun = time.monotonic()
+        self._once = bool(options["once"])
         installation = LocalInstallation(
             checkout=settings.BASE_DIR, var=settings.VAR_DIR, port=options["port"], say=self._stage
         )
@@ -93,7 +94,10 @@ class Command(BaseCommand):
             result = result_of(fit_by_id(user=user, fit_id=fit.pk))
             if result is None or result.status != "converged":
                 unconverged.append(str(fit.mechanism_version))
-        self.stdout.write(f"\n{installation.url}\n  user      {USERNAME}\n  password  {password}")
+        where = (
+            "To look at it in the browser: make demo, then" if self._once else "Look at it in the browser:"
+        )
+        self.stdout.write(f"\n{where}\n{installation.url}\n  user      {USERNAME}\n  password  {password}")
         self.stdout.write(f"  (kept in {settings.VAR_DIR / 'demo-password.txt'})")
         self.stdout.flush()
         return unconverged
