@@ -51,7 +51,9 @@ def plain(value: Any, path: str = "$") -> Any:
         return [plain(item, f"{path}[{i}]") for i, item in enumerate(value)]
     if hasattr(value, "item") and callable(value.item) and getattr(value, "ndim", None) == 0:
         return plain(value.item(), path)  # NumPy integers and booleans
-    raise InvalidInput(f"{type(value).__name__} at {path} has no canonical form", cure="text, numbers, lists, mappings")
+    raise InvalidInput(
+        f"{type(value).__name__} at {path} has no canonical form", cure="text, numbers, lists, mappings"
+    )
 
 
 def canonical_json(value: Any) -> bytes:

@@ -55,11 +55,14 @@ class Table:
                 cure="one value per row and column",
             )
         if values.size > MAX_VALUES:
-            raise InvalidInput(f"a table of {values.size} values is too large", cure=f"at most {MAX_VALUES} values")
+            raise InvalidInput(
+                f"a table of {values.size} values is too large", cure=f"at most {MAX_VALUES} values"
+            )
         if np.isinf(values).any():
             row, col = np.argwhere(np.isinf(values))[0]
             raise InvalidInput(
-                f"infinite value in row {row + 1} of column '{self.columns[col].name}'", cure="finite or missing"
+                f"infinite value in row {row + 1} of column '{self.columns[col].name}'",
+                cure="finite or missing",
             )
         keys = [(c.name, c.quantity) for c in self.columns]
         if len(set(keys)) != len(keys):

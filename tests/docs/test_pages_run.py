@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from pathlib import Path
+
 import pytest
 
 from kinetics_db.accounts.services import ensure_user
 from kinetics_db.fits.models import FitResult
 from kinetics_db.jobs.models import Job
-from tests.docs.fences import DOCS, run_page, same_output
+from tests.docs.fences import DOCS, blocks_in_docs, run_page, same_output
+
+TUTORIAL = DOCS / "tutorial" / "first-fit.md"
 
 
 def do_waiting_work() -> None:
@@ -21,15 +25,27 @@ def do_waiting_work() -> None:
 @pytest.mark.django_db
 def test_the_tutorial_leads_from_files_to_verdicts() -> None:
     ensure_user(username="admin")
-    names = run_page(DOCS / "tutorial" / "first-fit.md", after_each=do_waiting_work)
+    names = run_page(TUTORIAL, after_each=do_waiting_work)
     assert names["job"].state == Job.State.DONE
     results = FitResult.objects.filter(fit__in=[names["fit_1"], names["fit_2"]])
     assert [r.status for r in results] == ["converged", "converged"]
 
 
-def test_the_engine_runs_in_a_notebook_as_described() -> None:
-    names = run_page(DOCS / "how-to" / "use-the-engine-in-a-notebook.md")
-    assert names["outcome"].status == "converged"
+WITHOUT_DATABASE = [
+    DOCS / "how-to" / "answer-a-failed-fit.md",
+    DOCS / "how-to" / "use-the-engine-in-a-notebook.md",
+    DOCS / "reference" / "instrument-files.md",
+    DOCS / "reference" / "reductions.md",
+]
+
+
+@pytest.mark.parametrize("page", WITHOUT_DATABASE, ids=lambda page: page.name)
+def test_a_page_about_the_engine_runs_without_a_database_and_prints_what_it_shows(page: Path) -> None:
+    run_page(page)
+
+
+def test_no_page_with_python_is_left_out() -> None:
+    assert {block.page for block in blocks_in_docs("python")} == {TUTORIAL, *WITHOUT_DATABASE}
 
 
 @pytest.mark.parametrize(
