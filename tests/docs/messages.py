@@ -42,7 +42,7 @@ def _patterns(node: ast.expr | None) -> Iterator[str]:
     if isinstance(node, ast.Constant) and isinstance(node.value, str):
         yield node.value
     elif isinstance(node, ast.JoinedStr):
-        yield "".join(v.value if isinstance(v, ast.Constant) else "…" for v in node.values)
+        yield "".join(str(v.value) if isinstance(v, ast.Constant) else "…" for v in node.values)
     elif isinstance(node, ast.IfExp):
         yield from _patterns(node.body)
         yield from _patterns(node.orelse)

@@ -2,22 +2,26 @@
 
 from __future__ import annotations
 
+import json
 import re
 from dataclasses import fields
 
 import pytest
-from django.urls import get_resolver
+from django.test import Client
 
-from api.errors import STATUS
+import api.urls
+from api.errors import STATUS, problem_details
 from kinetics_db.engine.calibration import AsReported, InternalStandard, MeasuredSignal, ReportedColumn
 from kinetics_db.engine.fitting.problem import Constant, Settings
 from kinetics_db.engine.reading.options import DELIMITERS, ENCODINGS, ReadingOptions
 from kinetics_db.engine.run_evidence import FROM_BEST_TO_WORST, Thresholds
 from kinetics_db.engine.units import STORED_UNITS
+from kinetics_db.errors import InvalidInput
 from kinetics_db.jobs.models import Job
+from kinetics_db.materials.services import enter_compound
 from kinetics_db.runs.entry import CONTROL_KINDS, SECTIONS, Amount, ChargeEntry, RunEntry
 from kinetics_db.runs.services import log_run
-from tests.docs.fences import DOCS, ROOT
+from tests.docs.fences import DOCS, ROOT, blocks_in_docs
 from tests.docs.messages import messages_in
 from tests.factories.people import make_project
 
@@ -134,8 +138,6 @@ def test_states_of_a_job_are_documented() -> None:
 def test_fields_of_a_run_revision_are_documented() -> None:
     project = make_project()
     entry = RunEntry(code="R-1", charges=[ChargeEntry(Amount(10.0, "%"), compound="A")])
-    from kinetics_db.materials.services import enter_compound
-
     enter_compound(user=project.created_by, project_id=project.pk, name="A")
     content = log_run(user=project.created_by, project_id=project.pk, entry=entry).content
     listed = first_cells(text_of("run-snapshot.md").split("\n## ")[0])
@@ -161,9 +163,30 @@ def test_sections_and_controls_of_a_run_are_documented_with_their_units() -> Non
 
 
 def test_addresses_and_statuses_of_rest_are_documented() -> None:
-    (api,) = [p for p in get_resolver().url_patterns if str(p.pattern) == "api/v1/"]
-    addresses = {f"/api/v1/{p.pattern}" for p in api.url_patterns}
+    addresses = {f"/api/v1/{pattern.pattern}" for pattern in api.urls.urlpatterns}
     page = text_of("rest.md")
     assert {a for _, a in re.findall(r"^## `(GET|POST) ([^`]+)`", page, re.MULTILINE)} == addresses
     documented = {int(s) for s in re.findall(r"^\| (\d{3}) \|", page, re.MULTILINE)}
     assert documented == {status for status, _ in STATUS.values()}
+
+
+@pytest.mark.django_db
+def test_the_problem_details_shown_are_those_of_such_an_error() -> None:
+    project = make_project()
+    enter_compound(user=project.created_by, project_id=project.pk, name="A")
+    charges = [ChargeEntry(Amount(0.1, "M"), compound="A"), ChargeEntry(Amount(1.0, "mL"), stock="amine B")]
+    with pytest.raises(InvalidInput) as refused:
+        log_run(user=project.created_by, project_id=project.pk, entry=RunEntry(code="R-1", charges=charges))
+    response = problem_details(refused.value, {})
+    assert response is not None
+    assert response.data == json.loads(shown_as_json("title"))
+
+
+@pytest.mark.django_db
+def test_the_answer_about_health_is_the_one_shown(client: Client) -> None:
+    assert client.get("/api/v1/health/").json() == json.loads(shown_as_json("open_jobs"))
+
+
+def shown_as_json(key: str) -> str:
+    (block,) = [b for b in blocks_in_docs("json") if f'"{key}"' in b.text]
+    return block.text

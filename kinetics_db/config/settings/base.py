@@ -34,6 +34,7 @@ INSTALLED_APPS = [
 
 MIDDLEWARE = [
     "django.middleware.security.SecurityMiddleware",
+    "kinetics_db.web.middleware.PageHeaders",  # first, so that static files and early refusals have them too
     "whitenoise.middleware.WhiteNoiseMiddleware",
     "django.contrib.sessions.middleware.SessionMiddleware",
     "django.middleware.common.CommonMiddleware",
@@ -41,7 +42,6 @@ MIDDLEWARE = [
     "django.contrib.auth.middleware.AuthenticationMiddleware",
     "django.contrib.messages.middleware.MessageMiddleware",
     "django.middleware.clickjacking.XFrameOptionsMiddleware",
-    "kinetics_db.web.middleware.PageHeaders",
 ]
 
 ROOT_URLCONF = "kinetics_db.config.urls"
@@ -80,6 +80,11 @@ LANGUAGE_CODE = "en-gb"
 TIME_ZONE = "UTC"
 USE_I18N = False
 USE_TZ = True
+
+# Counts of failed logins. A lab with several web processes needs a cache that they share.
+CACHES = {
+    "default": {"BACKEND": "django.core.cache.backends.locmem.LocMemCache", "OPTIONS": {"MAX_ENTRIES": 10_000}}
+}
 
 STATIC_URL = "static/"
 # Served from the packages themselves; a lab may collect them into a folder for a front server.
