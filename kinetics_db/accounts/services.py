@@ -1,4 +1,4 @@
-"""Making accounts. The audit trail stands above and listens to `accounts.signals`."""
+"""Making accounts. The audit trail stands above and listens to what is saved."""
 
 from __future__ import annotations
 
@@ -9,7 +9,6 @@ from django.core.exceptions import ValidationError
 from django.db import transaction
 
 from kinetics_db.accounts.models import User
-from kinetics_db.accounts.signals import account_written
 from kinetics_db.errors import InvalidInput
 
 
@@ -24,9 +23,8 @@ def create_user(*, username: str, password: str, is_staff: bool = False) -> User
     if User.objects.filter(username=username).exists():
         raise InvalidInput(f"there is an account '{username}' already", field="username", cure="another name")
     user.set_password(password)
-    with transaction.atomic():
+    with transaction.atomic():  # together with its audit entry
         user.save()
-        account_written.send(sender=User, user=user, verb="made")
     return user
 
 
@@ -47,5 +45,4 @@ def set_password(*, username: str, password: str) -> User:
     user.set_password(password)
     with transaction.atomic():
         user.save(update_fields=["password"])
-        account_written.send(sender=User, user=user, verb="gave a new password")
     return user

@@ -13,6 +13,7 @@ from kinetics_db.measurements.models import ConcentrationTable
 from kinetics_db.measurements.selectors import tables_by_id
 from kinetics_db.projects.selectors import require_contributor
 from kinetics_db.provenance.services import recording, save_record
+from kinetics_db.runs.models import RunRevision
 from kinetics_db.runs.selectors import latest_revisions
 
 FORMAT = "ratewright/dataset/1"
@@ -58,6 +59,7 @@ def freeze_dataset(
             raise InvalidInput(problems)
         ordered = [tables[table_id] for table_id in table_ids]
         revisions = latest_revisions([table.run_id for table in ordered])
+        _same_basis(ordered, revisions)
         content = {
             "format": FORMAT,
             "basis": ordered[0].basis,
@@ -95,6 +97,25 @@ def freeze_dataset(
             for i, table in enumerate(ordered)
         )
     return dataset
+
+
+def _same_basis(tables: Sequence[ConcentrationTable], revisions: Mapping[int, RunRevision]) -> None:
+    """Refuse a run charged in mol/L beside its table in percent, or the other way round."""
+    problems = [
+        Problem(
+            f"run {table.run.code} is charged in {_words(basis)}, its table {table.number} is in {_words(table.basis)}",
+            field="tables",
+            cure="reduce the table to the unit of the charges, or log the charges in the unit of the table",
+        )
+        for table in tables
+        if (basis := revisions[table.run_id].content["basis"]) != table.basis
+    ]
+    if problems:
+        raise InvalidInput(problems)
+
+
+def _words(basis: str) -> str:
+    return "percent" if basis == "relative" else "mol/L"
 
 
 def _plain(window: Window) -> dict[str, object]:

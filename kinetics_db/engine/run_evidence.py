@@ -134,7 +134,7 @@ def evidence_of_runs(fit: FitOutcome, thresholds: Thresholds | None = None) -> t
     known_sigma = fit.n_estimated_sigmas == 0
     found: list[RunEvidence] = []
     for e in fit.experiments:
-        pulls = tuple(p for p in fit.pulls if p.owner == e.name or p.experiments == (e.name,))
+        pulls = tuple(p for p in fit.pulls if p.owner == e.owner or p.experiments == (e.name,))
         pulled = any(abs(p.pull) > limits.pull for p in pulls)
         observables = tuple(
             _judged(r, c, s, known_sigma=known_sigma, pulled=pulled, limits=limits)

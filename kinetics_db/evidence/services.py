@@ -20,7 +20,6 @@ from kinetics_db.engine.comparison import (
 )
 from kinetics_db.errors import InvalidInput
 from kinetics_db.evidence.models import ModelEvidence, RunEvidence
-from kinetics_db.fits.experiments import unique_names
 from kinetics_db.fits.models import Fit, FitResult
 from kinetics_db.fits.selectors import load_fit
 from kinetics_db.fits.services import Computed, compute_fit, store_result
@@ -100,7 +99,6 @@ def store_evidence(
         label=f"{fit.mechanism_version} on {fit.dataset}",
         verb="judged",
     )
-    names = unique_names([item.run_revision.run.code for item in computed.data.items])
     by_name = {run.experiment: run for run in runs}
     RunEvidence.objects.bulk_create(
         RunEvidence(
@@ -111,7 +109,7 @@ def store_evidence(
             p_value=_smallest(by_name[name]),
             nrmse=_largest_error(by_name[name]),
         )
-        for item, name in zip(computed.data.items, names, strict=True)
+        for item, name in zip(computed.data.items, computed.data.names, strict=True)
     )
     return evidence
 

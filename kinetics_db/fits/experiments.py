@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -17,41 +17,89 @@ from kinetics_db.fits.casting import Casting
 
 
 @dataclass(frozen=True)
-class DataOfFit:
-    """What the data give to a fit before anything is chosen."""
+class RunOfFit:
+    """One table of a run as a fit reads it: the run's snapshot, the numbers, their common errors, what counts."""
 
-    items: Sequence[DatasetItem]
-    runs: Sequence[dict[str, Any]]  # run snapshots, in the order of the items
-    tables: Sequence[Table]
-    windows: Sequence[dict[str, Any]]
+    code: str
+    snapshot: Mapping[str, Any]
+    table: Table
+    scale_errors: Sequence[Mapping[str, Any]]
+    window: Mapping[str, Any]
+
+    @property
+    def owner(self) -> str:
+        """Whose the errors are that belong to this run alone."""
+        return f"run {self.code}"
+
+    @property
+    def columns(self) -> tuple[str, ...]:
+        """Columns that the window leaves in."""
+        chosen = self.window["columns"]
+        return tuple(c for c in self.table.names("concentration") if chosen is None or c in chosen)
+
+
+@dataclass(frozen=True)
+class DataOfFit:
+    """What the data give to a fit before anything is chosen; ``items`` are the records they stand in."""
+
+    runs: Sequence[RunOfFit]
+    items: Sequence[DatasetItem] = ()
+
+    @property
+    def names(self) -> list[str]:
+        """Names of the experiments: run codes; a run with several tables gets 'code (2)' and so on."""
+        seen: dict[str, int] = {}
+        names = []
+        for run in self.runs:
+            seen[run.code] = seen.get(run.code, 0) + 1
+            names.append(run.code if seen[run.code] == 1 else f"{run.code} ({seen[run.code]})")
+        return names
 
     @property
     def compounds(self) -> tuple[str, ...]:
         """Charged compounds, in order of first appearance."""
-        return tuple(dict.fromkeys(c["compound"] for run in self.runs for c in run["start"]))
+        return tuple(dict.fromkeys(c["compound"] for run in self.runs for c in run.snapshot["start"]))
 
     @property
     def columns(self) -> tuple[str, ...]:
         """Columns that the windows leave in, in order of first appearance."""
-        return tuple(
-            dict.fromkeys(
-                name
-                for table, window in zip(self.tables, self.windows, strict=True)
-                for name in table.names("concentration")
-                if window["columns"] is None or name in window["columns"]
-            )
-        )
+        return tuple(dict.fromkeys(name for run in self.runs for name in run.columns))
 
 
 def data_of(dataset: Dataset) -> DataOfFit:
     """Read a dataset's runs and tables."""
     items = items_of(dataset)
+    windows = [entry["window"] for entry in dataset.content["items"]]
     return DataOfFit(
+        runs=[
+            RunOfFit(
+                code=item.run_revision.run.code,
+                snapshot=item.run_revision.content,
+                table=item.table.table,
+                scale_errors=item.table.content["scale_errors"],
+                window=window,
+            )
+            for item, window in zip(items, windows, strict=True)
+        ],
         items=items,
-        runs=[item.run_revision.content for item in items],
-        tables=[item.table.table for item in items],
-        windows=[entry["window"] for entry in dataset.content["items"]],
     )
+
+
+class _Causes:
+    """Nuisance parameters by name: one for each physical cause, however many runs share it."""
+
+    def __init__(self, without_owners: Sequence[str]):
+        self.found: dict[str, Nuisance] = {}
+        self._without = frozenset(without_owners)
+
+    def named(self, name: str, owner: str, sd: float) -> tuple[str, ...]:
+        """The factor's name as a tuple, empty when there is no error or its owner is left out."""
+        if not sd > 0.0 or owner in self._without:
+            return ()
+        known = self.found.get(name)
+        if known is None or known.sd < sd:  # revisions of one flask may differ: the wider uncertainty holds
+            self.found[name] = Nuisance(name=name, owner=owner, sd=sd)
+        return (name,)
 
 
 def experiments_of(
@@ -62,83 +110,69 @@ def experiments_of(
     A nuisance parameter is named after its cause, so that all runs which share a stock solution or a
     standard share one unknown.
     """
-    nuisances: dict[str, Nuisance] = {}
-
-    def cause(name: str, owner: str, sd: float) -> tuple[str, ...]:
-        if not sd > 0.0 or owner in without_owners:
-            return ()
-        known = nuisances.get(name)
-        if known is None or known.sd < sd:  # revisions of one flask may differ: the wider uncertainty holds
-            nuisances[name] = Nuisance(name=name, owner=owner, sd=sd)
-        return (name,)
-
-    experiments = []
-    names = unique_names([item.run_revision.run.code for item in data.items])
-    for item, name, run, table, window in zip(
-        data.items, names, data.runs, data.tables, data.windows, strict=True
-    ):
-        charges = []
-        for part in run["start"]:
-            species = casting.compounds[part["compound"]]
-            if species is None:
-                continue
-            owner = f"run {item.run_revision.run.code}"
-            factors = cause(f"{owner}: {part['label']}", owner, part["own_relative_u"])
-            for shared in part["run_shared"]:
-                factors += cause(f"{owner}: {shared['owner']}", owner, shared["relative_u"])
-            for shared in part["shared"]:
-                factors += cause(shared["owner"], shared["owner"], shared["relative_u"])
-            charges.append(Charge(species, part["concentration"], factors))
-        columns = [
-            c
-            for c in table.names("concentration")
-            if casting.columns.get(c) is not None and (window["columns"] is None or c in window["columns"])
-        ]
-        signal_factors: dict[str, tuple[str, ...]] = {}
-        for error in item.table.content["scale_errors"]:
-            for column in columns:
-                if column in error["columns"]:
-                    observable = str(casting.columns[column])
-                    signal_factors[observable] = signal_factors.get(observable, ()) + cause(
-                        error["owner"], error["owner"], error["relative_u"]
-                    )
-        keep, values, sigma = _points(table, columns, window)
-        experiments.append(
-            Experiment(
-                name=name,
-                charges=tuple(charges),
-                times=table.times[keep],
-                observed=tuple(str(casting.columns[c]) for c in columns),
-                values=values,
-                sigma=sigma,
-                temperature=run["temperature"]["value"] if run["temperature"] else None,
-                start_time=run["first_contact"],
-                signal_factors=signal_factors,
-                groups=groups_of(run),
-            )
-        )
-    return experiments, list(nuisances.values())
+    causes = _Causes(without_owners)
+    experiments = [
+        _experiment(name, run, casting, causes) for name, run in zip(data.names, data.runs, strict=True)
+    ]
+    return experiments, list(causes.found.values())
 
 
-def unique_names(codes: Sequence[str]) -> list[str]:
-    """Run codes as experiment names; a run with several tables gets 'code (2)' and so on."""
-    seen: dict[str, int] = {}
-    names = []
-    for code in codes:
-        seen[code] = seen.get(code, 0) + 1
-        names.append(code if seen[code] == 1 else f"{code} ({seen[code]})")
-    return names
+def _experiment(name: str, run: RunOfFit, casting: Casting, causes: _Causes) -> Experiment:
+    columns = [c for c in run.columns if casting.columns.get(c) is not None]
+    keep, values, sigma = _points(run.table, columns, run.window)
+    temperature = run.snapshot["temperature"]
+    return Experiment(
+        name=name,
+        charges=_charges(run, casting, causes),
+        times=run.table.times[keep],
+        observed=tuple(str(casting.columns[c]) for c in columns),
+        values=values,
+        sigma=sigma,
+        temperature=temperature["value"] if temperature else None,
+        start_time=run.snapshot["first_contact"],
+        signal_factors=_signal_factors(run, columns, casting, causes),
+        groups=groups_of(run.snapshot),
+        owner=run.owner,
+    )
 
 
-def groups_of(run: dict[str, Any]) -> dict[str, str]:
+def _charges(run: RunOfFit, casting: Casting, causes: _Causes) -> tuple[Charge, ...]:
+    charges = []
+    for part in run.snapshot["start"]:
+        species = casting.compounds[part["compound"]]
+        if species is None:
+            continue
+        factors = causes.named(f"{run.owner}: {part['label']}", run.owner, part["own_relative_u"])
+        for error in part["run_shared"]:
+            factors += causes.named(f"{run.owner}: {error['owner']}", run.owner, error["relative_u"])
+        for error in part["shared"]:
+            factors += causes.named(error["owner"], error["owner"], error["relative_u"])
+        charges.append(Charge(species, part["concentration"], factors))
+    return tuple(charges)
+
+
+def _signal_factors(
+    run: RunOfFit, columns: Sequence[str], casting: Casting, causes: _Causes
+) -> dict[str, tuple[str, ...]]:
+    factors: dict[str, tuple[str, ...]] = {}
+    for error in run.scale_errors:
+        for column in columns:
+            if column in error["columns"]:
+                observable = str(casting.columns[column])
+                named = causes.named(error["owner"], error["owner"], error["relative_u"])
+                factors[observable] = factors.get(observable, ()) + named
+    return factors
+
+
+def groups_of(snapshot: Mapping[str, Any]) -> dict[str, str]:
     """By what constants can be grouped: the set temperature."""
-    if not run["temperature"]:
+    if not snapshot["temperature"]:
         return {}
-    return {"temperature": f"{run['temperature']['value']:.2f} K"}
+    return {"temperature": f"{snapshot['temperature']['value']:.2f} K"}
 
 
 def _points(
-    table: Table, columns: Sequence[str], window: dict[str, Any]
+    table: Table, columns: Sequence[str], window: Mapping[str, Any]
 ) -> tuple[NDArray[np.bool_], NDArray[np.float64], NDArray[np.float64] | None]:
     times = table.times
     keep = np.ones(times.size, dtype=bool)

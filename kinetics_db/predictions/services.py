@@ -115,7 +115,7 @@ def _outside(
     covered: dict[str, list[float]] = {}
     for run in data.runs:
         totals: dict[str, float] = {}
-        for part in run["start"]:
+        for part in run.snapshot["start"]:
             species = request.casting.compounds[part["compound"]]
             if species is not None:
                 totals[species] = totals.get(species, 0.0) + part["concentration"]
@@ -125,7 +125,8 @@ def _outside(
         low, high = min(covered[species]), max(covered[species])
         if not low <= value <= high:
             found.append(f"[{species}]0 {value:g} outside {low:g} to {high:g} mol/L")
-    temperatures = [run["temperature"]["value"] for run in data.runs if run["temperature"]]
+    measured = [run.snapshot["temperature"] for run in data.runs if run.snapshot["temperature"]]
+    temperatures = [t["value"] for t in measured]
     if temperature is not None and temperatures and not min(temperatures) <= temperature <= max(temperatures):
         found.append(f"{temperature:g} K outside {min(temperatures):g} to {max(temperatures):g} K")
     return found

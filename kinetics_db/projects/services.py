@@ -2,10 +2,14 @@
 
 from __future__ import annotations
 
+import math
 import re
+from collections.abc import Mapping
+from dataclasses import fields
 
 from kinetics_db.accounts.models import User
-from kinetics_db.errors import Conflict, InvalidInput
+from kinetics_db.engine.run_evidence import Thresholds
+from kinetics_db.errors import Conflict, InvalidInput, Problem
 from kinetics_db.projects.models import Membership, Project
 from kinetics_db.projects.selectors import require_owner
 from kinetics_db.provenance.services import note_write, recording
@@ -34,6 +38,39 @@ def create_project(
         Membership.objects.create(project=project, user=user, role=Membership.Role.OWNER)
         note_write(
             verb="made", record_kind="project", record_id=project.pk, project_id=project.pk, label=slug
+        )
+    return project
+
+
+def set_verdict_thresholds(*, user: User, project: Project, thresholds: Mapping[str, float]) -> Project:
+    """Set where the project's verdicts change, over the defaults; later fits are judged by them.
+
+    ``thresholds`` holds only what differs, by the names of `engine.run_evidence.Thresholds`.
+    """
+    require_owner(user=user, project_id=project.pk)
+    known = [f.name for f in fields(Thresholds)]
+    problems = [
+        Problem(f"unknown threshold '{name}'", field=f"thresholds.{name}", cure=", ".join(known))
+        for name in thresholds
+        if name not in known
+    ]
+    problems += [
+        Problem(f"{name} is {value!r}", field=f"thresholds.{name}", cure="a number above 0")
+        for name, value in thresholds.items()
+        if isinstance(value, bool) or not isinstance(value, int | float) or not 0.0 < value < math.inf
+    ]
+    if problems:
+        raise InvalidInput(problems)
+    with recording(user=user):
+        project.verdict_thresholds = dict(thresholds)
+        project.save(update_fields=["verdict_thresholds"])
+        note_write(
+            verb="set verdict thresholds",
+            record_kind="project",
+            record_id=project.pk,
+            project_id=project.pk,
+            label=project.slug,
+            reason=", ".join(f"{name} {value:g}" for name, value in sorted(thresholds.items())),
         )
     return project
 

@@ -5,7 +5,9 @@ class ProvenanceConfig(AppConfig):
     name = "kinetics_db.provenance"
 
     def ready(self) -> None:
-        from kinetics_db.accounts.signals import account_written
+        from django.contrib.auth import get_user_model
+        from django.db.models.signals import post_save
+
         from kinetics_db.provenance.writing import audit_account
 
-        account_written.connect(audit_account, dispatch_uid="audit of accounts")
+        post_save.connect(audit_account, sender=get_user_model(), dispatch_uid="audit of accounts")

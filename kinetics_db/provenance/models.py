@@ -19,7 +19,7 @@ class RecordQuerySet(models.QuerySet):
         raise Conflict(f"{self.model.__name__} records are immutable; make a new revision")
 
     def delete(self) -> tuple[int, dict[str, int]]:
-        raise Conflict(f"{self.model.__name__} records are never deleted; withdraw with a reason")
+        raise Conflict(f"{self.model.__name__} records are never deleted")
 
 
 class ImmutableRecord(models.Model):

@@ -81,11 +81,24 @@ def note_write(
     )
 
 
-def audit_account(sender: Any, *, user: Any, verb: str, **_: Any) -> None:
-    """Audit what happens to accounts, which stand below the trail and so cannot write to it themselves."""
-    with recording(user=user):
+def audit_account(
+    sender: Any, *, instance: Any, created: bool, update_fields: frozenset[str] | None, raw: bool, **_: Any
+) -> None:
+    """Audit every save of an account, also by Django's own commands.
+
+    Accounts stand below the trail and so cannot write to it themselves. The date of the last login is no
+    change of the account.
+    """
+    if raw or update_fields == {"last_login"}:
+        return
+    changed = " ".join(["changed", *sorted(update_fields or ())])
+    with recording(user=instance):
         note_write(
-            verb=verb, record_kind="account", record_id=user.pk, project_id=None, label=user.get_username()
+            verb="made" if created else changed[:40],
+            record_kind="account",
+            record_id=instance.pk,
+            project_id=None,
+            label=instance.get_username(),
         )
 
 

@@ -77,6 +77,13 @@ def test_relative_and_molar_tables_are_never_mixed(project: Project) -> None:
         freeze(project, table_of(project, "R-1"), table_of(project, "R-2", percent, "%"))
 
 
+def test_a_run_in_mol_per_litre_does_not_go_with_a_table_in_percent(project: Project) -> None:
+    percent = lines(["t / s", "A / %", "B / %"], [0, 100, 0], [10, 60, 40])
+    with pytest.raises(InvalidInput, match="charged in mol/L, its table 1 is in percent"):
+        freeze(project, table_of(project, "R-1", percent, "mM"))
+    assert not Dataset.objects.exists()
+
+
 def test_a_stranger_learns_nothing_of_a_project(project: Project) -> None:
     table = table_of(project, "R-1")
     with pytest.raises(NotFound):

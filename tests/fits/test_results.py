@@ -19,6 +19,7 @@ from kinetics_db.jobs import services as jobs
 from kinetics_db.jobs.models import Job
 from kinetics_db.jobs.selectors import job_for
 from kinetics_db.mechanisms.services import write_version
+from kinetics_db.projects.services import set_verdict_thresholds
 from kinetics_db.provenance.selectors import chain_breaks
 from tests.factories.flow import compute_now
 from tests.factories.small import SmallStudy, make_study
@@ -158,8 +159,7 @@ def test_with_an_estimated_sigma_the_strongest_word_is_consistent() -> None:
 
 def test_the_project_can_set_its_own_thresholds_and_they_are_kept_with_the_verdict() -> None:
     study = make_study()
-    study.project.verdict_thresholds = {"chi_square_p": 0.999999}
-    study.project.save()
+    set_verdict_thresholds(user=study.user, project=study.project, thresholds={"chi_square_p": 0.999999})
     result = fitted(study)
     content = evidence_of(user=study.user, fit_id=result.fit_id).content
     assert content["thresholds"]["chi_square_p"] == 0.999999

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import pytest
+from django.core.management import call_command
 
 from kinetics_db.accounts.services import create_user, ensure_user, set_password
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted
@@ -13,7 +14,7 @@ from kinetics_db.projects.selectors import (
     require_owner,
     require_reader,
 )
-from kinetics_db.projects.services import create_project, set_member
+from kinetics_db.projects.services import create_project, set_member, set_verdict_thresholds
 from kinetics_db.provenance.models import AuditEntry
 from kinetics_db.provenance.selectors import chain_breaks
 from tests.factories.people import make_member, make_project, make_user
@@ -107,6 +108,23 @@ def test_what_happens_to_an_account_is_in_the_audit_trail() -> None:
     told = AuditEntry.objects.order_by("sequence").values_list("actor", "verb", "record_kind", "record_label")
     assert list(told) == [
         ("ann", "made", "account", "ann"),
-        ("ann", "gave a new password", "account", "ann"),
+        ("ann", "changed password", "account", "ann"),
     ]
+    call_command("createsuperuser", "--noinput", "--username", "eve", "--email", "eve@example.org")
+    assert AuditEntry.objects.filter(verb="made", record_label="eve").count() == 1
     assert chain_breaks() == []
+
+
+@pytest.mark.parametrize("thresholds", [{"p": 0.1}, {"nrmse": 0.0}, {"nrmse": float("nan")}, {"pull": "3"}])
+def test_thresholds_that_cannot_be_are_refused(thresholds: dict[str, float]) -> None:
+    project = make_project()
+    with pytest.raises(InvalidInput):
+        set_verdict_thresholds(user=project.created_by, project=project, thresholds=thresholds)
+
+
+def test_only_an_owner_sets_thresholds() -> None:
+    project = make_project()
+    with pytest.raises(NotPermitted):
+        set_verdict_thresholds(
+            user=make_member(project, "contributor"), project=project, thresholds={"pull": 4}
+        )

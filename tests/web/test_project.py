@@ -118,7 +118,7 @@ def test_the_margin_says_where_things_come_from(browser: Client, fitted: Study) 
     margins = text_of(" ".join(re.findall(r'<aside class="margin".*?</aside>', html, re.DOTALL)))
     fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
     for expected in (
-        "made by mira", "written by mira", "table 1 from nmr.txt", "reduced by against the standard v1",
+        "made by mira", "written by mira", "table 1 from nmr.txt", "reduction: against the standard v1",
         f"engine {fit.engine_version}", "dataset all v1", fit.dataset.digest[:10], "revision 1 by mira",
     ):  # fmt: skip
         assert expected in margins

@@ -83,7 +83,10 @@ USE_TZ = True
 
 # Counts of failed logins. A lab with several web processes needs a cache that they share.
 CACHES = {
-    "default": {"BACKEND": "django.core.cache.backends.locmem.LocMemCache", "OPTIONS": {"MAX_ENTRIES": 10_000}}
+    "default": {
+        "BACKEND": "django.core.cache.backends.locmem.LocMemCache",
+        "OPTIONS": {"MAX_ENTRIES": 10_000},
+    }
 }
 
 STATIC_URL = "static/"

@@ -7,8 +7,7 @@ records between them are plain values.
 from __future__ import annotations
 
 from dataclasses import dataclass
-from types import SimpleNamespace
-from typing import Any, cast
+from typing import Any
 
 from kinetics_db.demo.invented.exports import export_file
 from kinetics_db.demo.invented.plan import Plan, PlannedRun, Truth
@@ -19,7 +18,9 @@ from kinetics_db.engine.fitting.problem import Experiment, Nuisance
 from kinetics_db.engine.network import Network, parse_mechanism
 from kinetics_db.engine.units import convert, to_stored
 from kinetics_db.fits.casting import Casting, complete_casting
-from kinetics_db.fits.experiments import DataOfFit, experiments_of
+from kinetics_db.fits.experiments import DataOfFit, RunOfFit, experiments_of
+
+EVERYTHING: dict[str, Any] = {"start": None, "end": None, "columns": None, "left_out": {}}
 
 
 @dataclass(frozen=True)
@@ -43,7 +44,7 @@ def problem_of(plan: Plan, truth: Truth, *, seed: int, mechanism: str) -> Proble
 
 
 def _data(plan: Plan, exports: list[Exported]) -> DataOfFit:
-    items, runs, tables = [], [], []
+    runs = []
     for export in exports:
         run = _snapshot(plan, export.run)
         _, data = export_file(export)
@@ -53,16 +54,8 @@ def _data(plan: Plan, exports: list[Exported]) -> DataOfFit:
             {"owner": e.owner, "relative_u": e.relative_u, "columns": list(e.columns)}
             for e in reduced.scale_errors
         ]
-        items.append(
-            SimpleNamespace(
-                run_revision=SimpleNamespace(run=SimpleNamespace(code=export.run.code)),
-                table=SimpleNamespace(content={"scale_errors": scale_errors}),
-            )
-        )
-        runs.append(run)
-        tables.append(reduced.table)
-    everything: dict[str, Any] = {"start": None, "end": None, "columns": None, "left_out": {}}
-    return DataOfFit(items=cast(Any, items), runs=runs, tables=tables, windows=[everything] * len(items))
+        runs.append(RunOfFit(export.run.code, run, reduced.table, scale_errors, EVERYTHING))
+    return DataOfFit(runs)
 
 
 def _lot(plan: Plan, code: str) -> amounts.Lot:

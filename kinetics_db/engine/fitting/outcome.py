@@ -126,6 +126,7 @@ class ExperimentFit(ComparedByValue):
     rows, columns : ndarray of int, shape (v,), where each valid point stands in the tables
     jacobian : ndarray, shape (v, p), d(model / sigma)/d(fitted-scale parameter) of each valid point
     nuisances : names of the nuisance parameters that this experiment uses
+    owner : owner of those that are its run's own
     """
 
     name: str
@@ -140,6 +141,7 @@ class ExperimentFit(ComparedByValue):
     columns: NDArray[np.intp]
     jacobian: Floats
     nuisances: tuple[str, ...] = ()
+    owner: str = ""
 
 
 @dataclass(frozen=True, eq=False)

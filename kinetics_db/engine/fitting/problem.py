@@ -38,6 +38,7 @@ class Experiment:
     temperature : K, or None when unknown
     signal_factors : per observed name, nuisance parameters whose value multiplies the modelled signal
     groups : value of each grouping key, e.g. {'temperature': '298.15 K'}
+    owner : owner of the nuisance parameters that are this run's own; by default its name
     """
 
     name: str
@@ -51,6 +52,7 @@ class Experiment:
     signal_factors: Mapping[str, tuple[str, ...]] = field(default_factory=dict)
     time_shift: str | None = None
     groups: Mapping[str, str] = field(default_factory=dict)
+    owner: str = ""
 
 
 @dataclass(frozen=True)

@@ -238,6 +238,7 @@ def _experiments(
                 columns=columns,
                 jacobian=point.jacobian[begin:end] / spread.sigma_of_points[begin:end, None],
                 nuisances=nuisances_of(e),
+                owner=e.owner or e.name,
             )
         )
         begin = end

@@ -17,7 +17,9 @@ from kinetics_db.engine.simulation.equations import equations_of
 from kinetics_db.engine.simulation.reference import integrate
 
 Floats = NDArray[np.float64]
-INTEGRATION_SECONDS = 60.0
+# Bounds one integration. Progress is told between integrations, and who tells of none is taken for lost: this has
+# to stay well below the lease of a background job.
+INTEGRATION_SECONDS = 15.0
 
 
 class InterruptedFitError(Exception):
