@@ -7,6 +7,7 @@ import string
 from collections.abc import Iterable, Mapping, Sequence
 from typing import TYPE_CHECKING, Any
 
+from kinetics_db.engine.shown_numbers import TERMINAL, difference, interval, plain, with_uncertainty
 from kinetics_db.evidence.selectors import Grid, GridColumn, grid_of
 from kinetics_db.fits.selectors import fit_by_id, fits_in, result_of
 from kinetics_db.jobs.selectors import jobs_for
@@ -18,7 +19,6 @@ if TYPE_CHECKING:
 
 WIDTH = 100
 LONGEST_CODE = 24
-SMALLEST_PLAIN, LARGEST_PLAIN = -1, 3  # powers of ten that are written without a factor
 VERDICT_WIDTH = len("not tested") + 2
 WORDS = (
     ("agrees", "every test of every observable is passed, with uncertainties known beforehand"),
@@ -58,8 +58,7 @@ def constants_text(fit: Fit, result: FitResult) -> str:
     shown = [p for p in content["parameters"] if p["kind"] != "nuisance"]
     order = list(dict.fromkeys(p["base"] for p in shown))
     shown.sort(key=lambda p: (order.index(p["base"]), place_key(p["place"] or "")))
-    interval = f"{100 * content['confidence']:g} % interval"
-    rows = [("constant", "where", "value", "unit", interval)]
+    rows = [("constant", "where", "value", "unit", f"{100 * content['confidence']:g} % interval")]
     rows += [_constant_row(p) for p in shown]
     return "\n".join([title, *columns_of(rows, right=(2,))])
 
@@ -67,11 +66,13 @@ def constants_text(fit: Fit, result: FitResult) -> str:
 def _constant_row(p: Mapping[str, Any]) -> tuple[str, str, str, str, str]:
     name, where, unit = p["base"], p["place"] or "all runs", p["unit"]
     if not p["determined"]:
-        return name, where, f"{p['value']:.3g}", unit, f"not determined: {p['why_not']}"
-    between = f"{interval_text(p['lower'], p['upper'])}"
+        value = plain(p["value"], digits=3, style=TERMINAL)
+        return name, where, value, unit, f"not determined: {p['why_not']}"
+    value = with_uncertainty(p["value"], p["standard_error"], style=TERMINAL)
+    between = interval(p["lower"], p["upper"], style=TERMINAL)
     if p["set_by_prior"]:
         between += "  (set by its prior)"
-    return name, where, with_uncertainty(p["value"], p["standard_error"]), unit, between
+    return name, where, value, unit, between
 
 
 def _without_result(user: User, project: Project, shown: set[int]) -> list[str]:
@@ -124,13 +125,7 @@ def _block(grid: Grid, begin: int, columns: Sequence[GridColumn], code_width: in
     for code in grid.runs:
         cells = [grid.cells.get((code, column.fit_id)) for column in columns]
         yield row(code, (cell.verdict if cell is not None else "." for cell in cells))
-    yield row("AICc above the lowest", (_difference(column.delta_aicc) for column in columns))
-
-
-def _difference(delta: float | None) -> str:
-    if delta is None:
-        return "-"
-    return f"{delta:.1f}" if delta < 1e6 else f"{delta:.2e}"
+    yield row("AICc above the lowest", (difference(column.delta_aicc, style=TERMINAL) for column in columns))
 
 
 def label(index: int) -> str:
@@ -170,40 +165,3 @@ def clipped(text: str, width: int) -> str:
     """The text, with '...' for what does not fit."""
     text = " ".join(text.split("\n"))
     return text if len(text) <= width else text[: width - 3] + "..."
-
-
-def with_uncertainty(value: float, uncertainty: float | None) -> str:
-    """'1.234(56)e-3': the digits in brackets are the standard uncertainty in units of the last digits.
-
-    Two digits of the uncertainty are given (JCGM 100:2008, 7.2.2); where they reach beyond the decimal point,
-    it is written: '1.2(3.4)'. Without an uncertainty four digits of the value are given.
-    """
-    if uncertainty is None or not math.isfinite(uncertainty) or uncertainty <= 0 or not math.isfinite(value):
-        return f"{value:.4g}"
-    last = exponent(float(f"{uncertainty:.1e}")) - 1  # place of the last digit given, as a power of ten
-    power = max(exponent(round(value, -last)), last + 1)
-    if SMALLEST_PLAIN <= power <= LARGEST_PLAIN and last <= 0:
-        power = 0
-    decimals = power - last
-    scaled, spread = value / 10.0**power, uncertainty / 10.0**power
-    digits = f"{spread:.{decimals}f}" if spread >= 1 and decimals else str(round(spread * 10**decimals))
-    return f"{scaled:.{decimals}f}({digits})" + (f"e{power}" if power else "")
-
-
-def interval_text(low: float | None, high: float | None) -> str:
-    """'1.10e-3 to 1.20e-3', both ends to the same place, two digits of their distance."""
-    if low is None or high is None:
-        return "open"
-    width = high - low
-    power = exponent(max(abs(low), abs(high)))
-    digits = max(1, min(15, power - exponent(width) + 1)) if width > 0 else 6
-    if SMALLEST_PLAIN <= power <= LARGEST_PLAIN:
-        decimals = max(0, digits - power)
-        return f"{low:.{decimals}f} to {high:.{decimals}f}"
-    scale = 10.0**power
-    return f"({low / scale:.{digits}f} to {high / scale:.{digits}f})e{power}"
-
-
-def exponent(value: float) -> int:
-    """Power of ten of the first digit; 0 for zero."""
-    return math.floor(math.log10(abs(value))) if value else 0

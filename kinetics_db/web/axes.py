@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from kinetics_db.web.numbers import MINUS, plain
+from kinetics_db.engine.shown_numbers import PAGE, plain
 
 
 @dataclass(frozen=True)
@@ -29,7 +29,7 @@ class Axis:
         if decimals > 5 or abs(tick) >= 1e6:
             return plain(tick, digits=3)
         text = f"{tick:.{decimals}f}"
-        return text.replace("-", MINUS) if float(text) else f"{0:.{decimals}f}"
+        return text.replace("-", PAGE.minus) if float(text) else f"{0:.{decimals}f}"
 
 
 def axis(low: float, high: float, start: float, end: float, *, about: int = 5) -> Axis:

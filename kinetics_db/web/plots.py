@@ -14,9 +14,9 @@ import numpy as np
 from django.utils.safestring import SafeString, mark_safe
 from numpy.typing import NDArray
 
+from kinetics_db.engine.shown_numbers import plain
 from kinetics_db.web.axes import Axis, axis
 from kinetics_db.web.marks import colour_class, shape
-from kinetics_db.web.numbers import plain
 
 Floats = NDArray[np.float64]
 

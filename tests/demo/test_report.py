@@ -2,63 +2,14 @@
 
 from __future__ import annotations
 
-import pytest
-
 from kinetics_db.datasets.selectors import Staleness
 from kinetics_db.demo.report import (
     columns_of,
     grid_text,
-    interval_text,
     label,
     place_key,
-    with_uncertainty,
 )
 from kinetics_db.evidence.selectors import Cell, Grid, GridColumn
-
-
-@pytest.mark.parametrize(
-    ("value", "uncertainty", "text"),
-    [
-        (1.2341, 0.0056, "1.2341(56)"),
-        (0.0114, 0.00011, "1.140(11)e-2"),
-        (1.701e-4, 4.03e-7, "1.7010(40)e-4"),
-        (0.25, 0.01, "0.250(10)"),
-        (123.4, 5.6, "123.4(5.6)"),
-        (1234.0, 56.0, "1234(56)"),
-        (1234.0, 560.0, "1.23(56)e3"),
-        (-0.5, 0.02, "-0.500(20)"),
-        (9.9996e-4, 1.2e-6, "1.0000(12)e-3"),
-        (1.0, 0.0996, "1.00(10)"),
-        (2.0e-5, 4.0e-5, "2.0(4.0)e-5"),
-        (0.0, 0.02, "0.000(20)"),
-        (3.14159, None, "3.142"),
-        (3.14159, 0.0, "3.142"),
-        (3.14159, float("nan"), "3.142"),
-    ],
-)
-def test_digits_in_brackets_are_the_uncertainty_of_the_last_digits(
-    value: float, uncertainty: float | None, text: str
-) -> None:
-    assert with_uncertainty(value, uncertainty) == text
-
-
-@pytest.mark.parametrize(
-    ("low", "high", "text"),
-    [
-        (0.01118, 0.01161, "(1.118 to 1.161)e-2"),
-        (1.693e-4, 1.709e-4, "(1.693 to 1.709)e-4"),
-        (0.94e-3, 1.004e-3, "(0.940 to 1.004)e-3"),
-        (0.25, 0.31, "0.250 to 0.310"),
-        (12.0, 340.0, "12 to 340"),
-        (-1.5, 2.5, "-1.5 to 2.5"),
-        (None, 2.5, "open"),
-        (1.0, None, "open"),
-    ],
-)
-def test_both_ends_of_an_interval_are_given_to_the_same_place(
-    low: float | None, high: float | None, text: str
-) -> None:
-    assert interval_text(low, high) == text
 
 
 def test_columns_of_a_grid_are_lettered_beyond_the_alphabet() -> None:

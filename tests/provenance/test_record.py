@@ -80,13 +80,14 @@ def test_every_write_has_one_audit_entry_in_an_unbroken_chain() -> None:
     two_versions()
     verbs = list(AuditEntry.objects.order_by("sequence").values_list("verb", "record_kind"))
     assert verbs == [
+        ("made", "account"),
         ("made", "project"),
         ("made", "mechanism"),
         ("made", "mechanism version"),
         ("made", "mechanism version"),
     ]
     assert chain_breaks() == []
-    assert AuditHead.objects.get().sequence == 4
+    assert AuditHead.objects.get().sequence == 5
 
 
 def test_a_write_that_is_rolled_back_leaves_no_audit_entry() -> None:

@@ -16,7 +16,7 @@ from kinetics_db.fits.models import Fit
 from kinetics_db.fits.selectors import result_of
 from kinetics_db.jobs.selectors import job_for
 from kinetics_db.jobs.services import Claim, claim_job, fail_job, heartbeat
-from kinetics_db.web.numbers import interval, with_uncertainty
+from kinetics_db.engine.shown_numbers import interval, with_uncertainty
 from tests.factories.people import make_member, make_user
 from tests.web.study import RIGHT, WRONG, Study
 

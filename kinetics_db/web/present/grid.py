@@ -7,7 +7,8 @@ from dataclasses import dataclass, fields, replace
 from typing import TYPE_CHECKING
 
 from kinetics_db.engine.comparison import Thresholds
-from kinetics_db.web.numbers import Shown, difference, percent, probability, shown
+from kinetics_db.engine.shown_numbers import difference, percent, probability
+from kinetics_db.web.numbers import Shown, shown
 
 if TYPE_CHECKING:
     from kinetics_db.evidence.selectors import Cell, Grid, GridColumn

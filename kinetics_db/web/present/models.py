@@ -10,9 +10,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
+from kinetics_db.engine.shown_numbers import interval, plain
 from kinetics_db.fits.selectors import result_of
 from kinetics_db.web.names import name_html
-from kinetics_db.web.numbers import Shown, interval, plain, shown
+from kinetics_db.web.numbers import Shown, shown
 from kinetics_db.web.present.runs import Curve
 
 if TYPE_CHECKING:
