@@ -9,7 +9,7 @@ cause one nuisance parameter instead of counting one error many times.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Iterator, Sequence
 from dataclasses import dataclass
 from typing import NamedTuple
 
@@ -56,10 +56,7 @@ class Lot:
             problems.append(Problem(f"purity {self.purity}", field="purity", cure=cure))
         if not _not_negative(self.purity_u):
             problems.append(Problem(f"uncertainty {self.purity_u}", field="purity_u", cure="0 or more"))
-        if self.density is not None and not _positive(self.density):
-            problems.append(Problem(f"density {self.density}", field="density", cure="above 0 g/L"))
-        if not _not_negative(self.density_u):
-            problems.append(Problem(f"uncertainty {self.density_u}", field="density_u", cure="0 or more"))
+        problems += _problems_of_density(self.density, self.density_u)
         if problems:
             raise InvalidInput(problems)
 
@@ -96,10 +93,7 @@ class Stock:
             if not all(_not_negative(e.relative_u) for e in component.shared):
                 message = f"uncertainty of {component.compound} in {self.owner}"
                 problems.append(Problem(message, field="shared", cure="0 or more"))
-        if self.density is not None and not _positive(self.density):
-            problems.append(Problem(f"density {self.density}", field="density", cure="above 0 g/L"))
-        if not _not_negative(self.density_u):
-            problems.append(Problem(f"uncertainty {self.density_u}", field="density_u", cure="0 or more"))
+        problems += _problems_of_density(self.density, self.density_u)
         if problems:
             raise InvalidInput(problems)
 
@@ -329,6 +323,13 @@ def _needed(value: float | None, field: str, source: Lot | Stock) -> float:
             cure=f"give its {name}, or charge it by amount or concentration",
         )
     return value
+
+
+def _problems_of_density(density: float | None, density_u: float) -> Iterator[Problem]:
+    if density is not None and not _positive(density):
+        yield Problem(f"density {density}", field="density", cure="above 0 g/L")
+    if not _not_negative(density_u):
+        yield Problem(f"uncertainty {density_u}", field="density_u", cure="0 or more")
 
 
 def _wrong_kind(charge: Charge, accepted: str) -> InvalidInput:

@@ -2,14 +2,52 @@
 
 from __future__ import annotations
 
+import re
+from types import SimpleNamespace
+from typing import Any
+
 from kinetics_db.datasets.selectors import Staleness
 from kinetics_db.demo.report import (
     columns_of,
+    constants_text,
     grid_text,
     label,
     place_key,
 )
 from kinetics_db.evidence.selectors import Cell, Grid, GridColumn
+
+
+def constant(base: str, **changes: Any) -> dict[str, Any]:
+    whole = {
+        "base": base, "kind": "constant", "place": None, "unit": "L/mol/s", "value": 1.701e-4,
+        "standard_error": 4.03e-7, "lower": 1.693e-4, "upper": 1.709e-4,
+        "determined": True, "why_not": "", "set_by_prior": False,
+    }  # fmt: skip
+    return whole | changes
+
+
+def lines_of(*parameters: dict[str, Any]) -> list[str]:
+    fit = SimpleNamespace(mechanism_version="direct v1", dataset="all v1")
+    content = {"points": 12, "confidence": 0.95, "parameters": parameters}
+    result = SimpleNamespace(content=content, status="converged", seconds=1.25)
+    return constants_text(fit, result).splitlines()
+
+
+def test_a_constant_has_a_line_in_ascii_with_its_uncertainty_unit_and_interval() -> None:
+    title, _, line = lines_of(constant("k1"), constant("pull of r1", kind="nuisance"))
+    assert title == "direct v1 on all v1: converged in 1.2 s, 12 values"
+    assert re.split(" {2,}", line) == ["", "k1", "all runs", "1.7010(40)e-4", "L/mol/s", "(1.693 to 1.709)e-4"]
+
+
+def test_a_constant_that_is_not_determined_has_few_digits_and_the_reason() -> None:
+    loose = constant("k1", determined=False, lower=None, upper=None, why_not="only k1/k2 is determined")
+    line = lines_of(loose)[-1]
+    assert line.split()[3:5] == ["1.7e-4", "L/mol/s"]
+    assert line.endswith("not determined: only k1/k2 is determined")
+
+
+def test_a_constant_set_by_its_prior_says_so() -> None:
+    assert lines_of(constant("k1", set_by_prior=True))[-1].endswith("(1.693 to 1.709)e-4  (set by its prior)")
 
 
 def test_columns_of_a_grid_are_lettered_beyond_the_alphabet() -> None:

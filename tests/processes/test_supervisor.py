@@ -16,7 +16,13 @@ import pytest
 from kinetics_db.config.processes.failures import AlreadyRunning, ChildDied, ChildFailed, NotReady
 from kinetics_db.config.processes.guard import is_running
 from kinetics_db.config.processes.local import says
-from kinetics_db.config.processes.supervisor import Child, Supervisor, describe_status, interruptible
+from kinetics_db.config.processes.supervisor import (
+    Child,
+    Supervised,
+    Supervisor,
+    describe_status,
+    interruptible,
+)
 from tests.processes.stand_ins import CHECKOUT, HAS_A_GRANDCHILD, IGNORES_SIGTERM, RUNS_FOR_LONG, child
 from tests.services.processes import wait_until
 
@@ -295,3 +301,49 @@ def test_the_death_of_the_guard_is_noticed(tmp_path: Path) -> None:
         with pytest.raises(ChildDied, match="The guard"):
             supervisor.wait()
     assert not is_running(pid)
+
+
+class Sleepers(Supervised):
+    """Two children that run for long."""
+
+    def __init__(self, folder: Path):
+        self.folder = folder
+
+    def start(self) -> None:
+        self._supervisor = Supervisor(self.folder)
+        self._supervisor.start_together(child("first", RUNS_FOR_LONG), child("second", RUNS_FOR_LONG))
+
+    def stop(self) -> None:
+        self._end()
+
+    def kill(self, name: str) -> None:
+        self._end(kill=name)
+
+    def pid(self, name: str) -> int:
+        return self._running().pid(name)
+
+
+def test_what_is_supervised_runs_until_its_block_ends_in_whatever_way(tmp_path: Path) -> None:
+    sleepers = Sleepers(tmp_path)
+    assert not sleepers.is_running
+    with pytest.raises(ZeroDivisionError), sleepers as entered:
+        assert entered is sleepers and sleepers.is_running
+        pids = [sleepers.pid("first"), sleepers.pid("second")]
+        assert all(is_running(pid) for pid in pids)
+        _ = 1 / 0
+    assert not sleepers.is_running
+    assert not any(is_running(pid) for pid in pids)
+    sleepers.stop()
+
+
+def test_killing_one_child_of_what_is_supervised_ends_the_others_too(tmp_path: Path) -> None:
+    with Sleepers(tmp_path) as sleepers:
+        pids = [sleepers.pid("first"), sleepers.pid("second")]
+        sleepers.kill("first")
+        assert not sleepers.is_running
+        assert not any(is_running(pid) for pid in pids)
+
+
+def test_asking_for_a_process_of_what_is_not_running_says_so(tmp_path: Path) -> None:
+    with pytest.raises(RuntimeError, match="this Sleepers is not running"):
+        Sleepers(tmp_path).pid("first")

@@ -11,12 +11,12 @@ from django.db import connection
 from django.test import Client
 from django.test.utils import CaptureQueriesContext
 
+from kinetics_db.engine.shown_numbers import interval, with_uncertainty
 from kinetics_db.evidence.selectors import grid_of
 from kinetics_db.fits.models import Fit
 from kinetics_db.fits.selectors import result_of
 from kinetics_db.jobs.selectors import job_for
 from kinetics_db.jobs.services import Claim, claim_job, fail_job, heartbeat
-from kinetics_db.engine.shown_numbers import interval, with_uncertainty
 from tests.factories.people import make_member, make_user
 from tests.web.study import RIGHT, WRONG, Study
 

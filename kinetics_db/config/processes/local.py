@@ -12,10 +12,9 @@ import socket
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from types import TracebackType
 
 from .failures import PortBusy
-from .supervisor import Child, Supervisor
+from .supervisor import Child, Supervised, Supervisor
 from .valkey import broker_url, socket_path, valkey_child
 
 HOST = "127.0.0.1"
@@ -35,7 +34,7 @@ def _say_nothing(message: str) -> None:
     return
 
 
-class LocalInstallation:
+class LocalInstallation(Supervised):
     """Database, queue, worker, sweeper and web server of one machine, all below one folder.
 
     Parameters
@@ -66,7 +65,6 @@ class LocalInstallation:
         self.port = port
         self.concurrency = concurrency or min(8, os.cpu_count() or 1)
         self._say = say
-        self._supervisor: Supervisor | None = None
 
     @property
     def url(self) -> str:
@@ -131,24 +129,9 @@ class LocalInstallation:
 
     def stop(self) -> None:
         """Stop everything in order: web, worker, sweeper, and the queue last. May be called twice."""
-        if self._supervisor is not None:
-            self._supervisor.stop()
-            self._supervisor = None
+        if self.is_running:
+            self._end()
             shutil.rmtree(socket_path(self.var / "valkey").parent, ignore_errors=True)
-
-    def __enter__(self) -> LocalInstallation:
-        self.start()
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        self.stop()
-
-    def _running(self) -> Supervisor:
-        if self._supervisor is None:
-            raise RuntimeError("the installation is not running")
-        return self._supervisor
 
     def _bring_up(self, supervisor: Supervisor) -> None:
         refuse_busy_port(self.port)

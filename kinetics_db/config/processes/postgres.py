@@ -19,11 +19,10 @@ import tempfile
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
-from types import TracebackType
 from urllib.parse import quote
 
 from .failures import ServerMissing
-from .supervisor import Child, Supervisor
+from .supervisor import Child, Supervised, Supervisor
 
 OLDEST_MAJOR_VERSION = 14
 """What the web framework in use (Django 5.2) supports at least."""
@@ -123,7 +122,7 @@ def _major_version(folder: Path) -> int | None:
     return int(match.group(1)) if match else None
 
 
-class ThrowAwayPostgres:
+class ThrowAwayPostgres(Supervised):
     """A server of one's own on a unix socket, for as long as the ``with`` block lasts.
 
     As root it runs as the user ``postgres``, else ``nobody``, since the server refuses to run as root.
@@ -141,7 +140,6 @@ class ThrowAwayPostgres:
         self.max_connections = max_connections
         self.user = _user_to_run_as()
         self.folder = Path(tempfile.mkdtemp(prefix="rw-pg-", dir=_folder_reachable_by_all(self.user)))
-        self._supervisor: Supervisor | None = None
 
     @property
     def socket_folder(self) -> Path:
@@ -151,15 +149,8 @@ class ThrowAwayPostgres:
         return f"postgresql://{ROLE}@/{quote(database)}?host={quote(str(self.socket_folder), safe='')}"
 
     @property
-    def is_running(self) -> bool:
-        """Whether it has been started and not been stopped by `stop`."""
-        return self._supervisor is not None
-
-    @property
     def pid(self) -> int:
-        if self._supervisor is None:
-            raise RuntimeError("the server is not running")
-        return self._supervisor.pid("postgresql")
+        return self._running().pid("postgresql")
 
     def start(self) -> None:
         """Start the server, first making its data folder if need be; returns when it takes connections."""
@@ -175,24 +166,14 @@ class ThrowAwayPostgres:
 
     def stop(self, *, kill: bool = False) -> None:
         """Stop the server but keep its data, so that `start` goes on with them."""
-        if self._supervisor is not None:
-            if kill:
-                self._supervisor.stop_child("postgresql", kill=True)
-            self._supervisor.stop()
-            self._supervisor = None
+        self._end(kill="postgresql" if kill else None)
 
     def remove(self) -> None:
         """Stop the server and remove all its files."""
         self.stop()
         shutil.rmtree(self.folder, ignore_errors=True)
 
-    def __enter__(self) -> ThrowAwayPostgres:
-        self.start()
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
+    def __exit__(self, *_: object) -> None:
         self.remove()
 
     def _initialise(self, supervisor: Supervisor) -> None:

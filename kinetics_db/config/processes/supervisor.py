@@ -11,12 +11,14 @@ import os
 import signal
 import threading
 import time
+from abc import ABC, abstractmethod
 from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager, suppress
 from dataclasses import dataclass
 from pathlib import Path
 from subprocess import Popen, TimeoutExpired
 from types import FrameType
+from typing import Self
 
 from .failures import AlreadyRunning, ChildDied, ChildFailed, NotReady
 from .guard import Guard, group_is_running, is_running, kill_group
@@ -236,6 +238,45 @@ class Supervisor:
             if running.child.name == name:
                 return running
         raise KeyError(name)
+
+
+class Supervised(ABC):
+    """What runs its children under a supervisor of its own: from `start` to `stop`, or for a ``with`` block."""
+
+    _supervisor: Supervisor | None = None
+
+    @abstractmethod
+    def start(self) -> None:
+        """Start the children; on any failure what was started is stopped again."""
+
+    @abstractmethod
+    def stop(self) -> None:
+        """Stop the children. May be called twice."""
+
+    @property
+    def is_running(self) -> bool:
+        """Whether it has been started and not been stopped by `stop`."""
+        return self._supervisor is not None
+
+    def __enter__(self) -> Self:
+        self.start()
+        return self
+
+    def __exit__(self, *_: object) -> None:
+        self.stop()
+
+    def _running(self) -> Supervisor:
+        if self._supervisor is None:
+            raise RuntimeError(f"this {type(self).__name__} is not running")
+        return self._supervisor
+
+    def _end(self, *, kill: str | None = None) -> None:
+        """Stop all children, the one named by ``kill`` at once, and let go of the supervisor."""
+        if self._supervisor is not None:
+            if kill is not None:
+                self._supervisor.stop_child(kill, kill=True)
+            self._supervisor.stop()
+            self._supervisor = None
 
 
 def describe_status(status: int) -> str:

@@ -15,10 +15,9 @@ import stat
 import sys
 import tempfile
 from pathlib import Path
-from types import TracebackType
 
 from .failures import ServerMissing
-from .supervisor import Child, Supervisor
+from .supervisor import Child, Supervised, Supervisor
 
 LONGEST_SOCKET_PATH = 100
 """Bytes; the systems' limits are 103 (macOS) and 107 (Linux)."""
@@ -145,7 +144,7 @@ def valkey_child(data_folder: Path, *, name: str = "valkey") -> Child:
     )
 
 
-class Valkey:
+class Valkey(Supervised):
     """A server of one's own, for as long as the ``with`` block lasts.
 
     ``stop`` and ``start`` may be called in turn: what was queued is still there after a restart.
@@ -154,21 +153,13 @@ class Valkey:
     def __init__(self, data_folder: Path):
         self.data_folder = data_folder
         self.socket = socket_path(data_folder)
-        self._supervisor: Supervisor | None = None
 
     def url(self, database: int = 0) -> str:
         return broker_url(self.data_folder, database=database)
 
     @property
-    def is_running(self) -> bool:
-        """Whether it has been started and not been stopped by `stop`."""
-        return self._supervisor is not None
-
-    @property
     def pid(self) -> int:
-        if self._supervisor is None:
-            raise RuntimeError("the server is not running")
-        return self._supervisor.pid("valkey")
+        return self._running().pid("valkey")
 
     def start(self) -> None:
         child = valkey_child(self.data_folder)
@@ -182,18 +173,5 @@ class Valkey:
 
     def stop(self, *, kill: bool = False) -> None:
         """Stop the server (at once with ``kill``) and remove the socket's folder."""
-        if self._supervisor is not None:
-            if kill:
-                self._supervisor.stop_child("valkey", kill=True)
-            self._supervisor.stop()
-            self._supervisor = None
+        self._end(kill="valkey" if kill else None)
         shutil.rmtree(self.socket.parent, ignore_errors=True)
-
-    def __enter__(self) -> Valkey:
-        self.start()
-        return self
-
-    def __exit__(
-        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
-    ) -> None:
-        self.stop()
