@@ -38,4 +38,5 @@ def enqueue_on_commit(name: str, record_id: int, after_sent: Callable[[], None] 
         if send(name, record_id) and after_sent is not None:
             after_sent()
 
-    transaction.on_commit(ring)
+    # robust: what is committed is committed, whatever becomes of its message; the sweep sends it again
+    transaction.on_commit(ring, robust=True)

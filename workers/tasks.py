@@ -6,7 +6,7 @@ import logging
 
 from celery import shared_task
 
-from kinetics_db.errors import RatewrightError
+from kinetics_db.errors import RatewrightError, Unavailable
 from kinetics_db.evidence.services import compute_and_assess
 from kinetics_db.jobs import services as jobs
 from kinetics_db.task_queue import RUN_JOB, SWEEP_JOBS
@@ -28,6 +28,8 @@ def run_job(job_id: int) -> None:
         WORK[claim.kind](claim)
     except jobs.LeaseLost as lost:
         log.warning("%s", lost)
+    except Unavailable as error:
+        jobs.give_back(claim, reason=str(error))
     except RatewrightError as error:
         jobs.fail_job(claim, reason=str(error))
     except Exception as error:

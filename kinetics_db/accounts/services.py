@@ -6,26 +6,39 @@ import secrets
 
 from django.contrib.auth.password_validation import validate_password
 from django.core.exceptions import ValidationError
-from django.db import transaction
+from django.db import IntegrityError, transaction
 
 from kinetics_db.accounts.models import User
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.errors import InvalidInput
 
 
 def create_user(*, username: str, password: str, is_staff: bool = False) -> User:
     """Make a person's account; InvalidInput says what is wrong with name or password."""
+    # NFKC, as the login form reads it: a name that nobody could type would lock its owner out.
+    username = plain_text(User.normalize_username(username), field="username", longest=150, required=True)
     user = User(username=username, is_staff=is_staff)
     try:
         user.clean_fields(exclude=["password"])
+    except ValidationError as error:
+        raise InvalidInput("; ".join(error.messages), field="username") from error
+    _set_password(user, password)
+    try:
+        with transaction.atomic():  # together with its audit entry
+            user.save()
+    except IntegrityError as error:
+        raise InvalidInput(
+            f"there is an account '{username}' already", field="username", cure="another name"
+        ) from error
+    return user
+
+
+def _set_password(user: User, password: str) -> None:
+    try:
         validate_password(password, user)
     except ValidationError as error:
         raise InvalidInput("; ".join(error.messages), field="password") from error
-    if User.objects.filter(username=username).exists():
-        raise InvalidInput(f"there is an account '{username}' already", field="username", cure="another name")
     user.set_password(password)
-    with transaction.atomic():  # together with its audit entry
-        user.save()
-    return user
 
 
 def ensure_user(*, username: str) -> tuple[User, str | None]:
@@ -42,7 +55,7 @@ def set_password(*, username: str, password: str) -> User:
     user = User.objects.filter(username=username).first()
     if user is None:
         raise InvalidInput(f"there is no account '{username}'", field="username")
-    user.set_password(password)
+    _set_password(user, password)
     with transaction.atomic():
         user.save(update_fields=["password"])
     return user

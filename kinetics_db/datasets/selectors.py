@@ -9,14 +9,14 @@ from django.db.models import F, Q, QuerySet
 from kinetics_db.accounts.models import User
 from kinetics_db.datasets.models import Dataset, DatasetItem
 from kinetics_db.errors import NotFound
-from kinetics_db.projects.selectors import require_reader
+from kinetics_db.projects.selectors import NOT_VISIBLE, require_reader
 
 
 def dataset_by_id(*, user: User, dataset_id: int) -> Dataset:
     """One dataset that the person may see."""
     dataset = Dataset.objects.filter(pk=dataset_id).first()
     if dataset is None:
-        raise NotFound("there is no such dataset that you may see")
+        raise NotFound(NOT_VISIBLE)
     require_reader(user=user, project_id=dataset.project_id)
     return dataset
 

@@ -2,16 +2,19 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 
 from kinetics_db.accounts.models import User
 from kinetics_db.datasets.models import Dataset, DatasetItem
 from kinetics_db.engine.canonical import digest
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.errors import InvalidInput, Problem
 from kinetics_db.measurements.models import ConcentrationTable
 from kinetics_db.measurements.selectors import tables_by_id
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import recording, save_record
 from kinetics_db.runs.models import RunRevision
 from kinetics_db.runs.selectors import latest_revisions
@@ -44,15 +47,14 @@ def freeze_dataset(
     project, are given twice, mix mol/L with relative concentrations, or a window leaves nothing.
     """
     require_contributor(user=user, project_id=project_id)
-    name = name.strip()
-    if not name or len(name) > 120:
-        raise InvalidInput("a dataset needs a name", field="name", cure="1 to 120 characters")
+    name = plain_text(name, field="name", what="a dataset", longest=120, required=True)
     if not table_ids:
         raise InvalidInput(
             "the dataset has no tables", field="tables", cure="at least one concentration table"
         )
     windows = windows or {}
     with recording(user=user):
+        lock_project(project_id)
         tables = tables_by_id(user=user, table_ids=table_ids)
         problems = _problems(project_id, table_ids, tables, windows)
         if problems:
@@ -97,6 +99,15 @@ def freeze_dataset(
             for i, table in enumerate(ordered)
         )
     return dataset
+
+
+def _leaves_something(window: Window, table: ConcentrationTable) -> bool:
+    if window.columns is not None and not window.columns:
+        return False
+    first = -math.inf if window.start is None else window.start
+    last = math.inf if window.end is None else window.end
+    times = table.table.times
+    return bool(((times >= first) & (times <= last)).any())
 
 
 def _same_basis(tables: Sequence[ConcentrationTable], revisions: Mapping[int, RunRevision]) -> None:
@@ -163,13 +174,15 @@ def _problems(
                 found.append(
                     Problem(f"table {table} has no column '{column}'", field="windows", cure=", ".join(names))
                 )
+        if not _leaves_something(window, table):
+            found.append(Problem(f"the window leaves nothing of table {table}", field="windows"))
         for place, reason in window.left_out.items():
             column, _, row = place.rpartition("@")
-            good_row = row == "*" or (row.isdigit() and int(row) < table.rows)
+            good_row = row == "*" or (row.isascii() and row.isdecimal() and int(row) < table.rows)
             if (column not in names and column != "*") or not good_row:
                 found.append(
                     Problem(f"'{place}' is no point of table {table}", field="windows", cure="column@row")
                 )
-            if not reason.strip():
+            if not plain_text(reason, field="windows"):
                 found.append(Problem(f"point '{place}' is left out without a reason", field="windows"))
     return found

@@ -16,6 +16,9 @@ from typing import NamedTuple
 from kinetics_db.engine.units import kind_of_unit, to_stored
 from kinetics_db.errors import InvalidInput, Problem
 
+#: What is weighed or pipetted lies between these, in whatever unit; beyond them products would leave the floats.
+SMALLEST, LARGEST = 1e-30, 1e30
+
 
 class SharedError(NamedTuple):
     """A relative standard uncertainty that belongs to ``owner`` and moves all that came from it together."""
@@ -336,9 +339,13 @@ def _wrong_kind(charge: Charge, accepted: str) -> InvalidInput:
     return InvalidInput(f"a charge in '{charge.unit}' cannot be used here", field="unit", cure=accepted)
 
 
-def _positive(value: float) -> bool:
-    return math.isfinite(value) and value > 0
+def _positive(value: object) -> bool:
+    return _number(value) and SMALLEST <= value <= LARGEST  # type: ignore[operator]
 
 
-def _not_negative(value: float) -> bool:
-    return math.isfinite(value) and value >= 0
+def _not_negative(value: object) -> bool:
+    return _number(value) and (value == 0 or SMALLEST <= value <= LARGEST)  # type: ignore[operator]
+
+
+def _number(value: object) -> bool:
+    return isinstance(value, int | float) and not isinstance(value, bool) and math.isfinite(value)

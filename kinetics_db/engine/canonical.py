@@ -25,7 +25,7 @@ def plain(value: Any, path: str = "$") -> Any:
     if value is None or isinstance(value, bool):
         return value
     if isinstance(value, str):
-        return unicodedata.normalize("NFC", value)
+        return _text(value, path)
     if isinstance(value, int):
         if abs(value) <= MAX_INTEGER:
             return int(value)
@@ -42,7 +42,7 @@ def plain(value: Any, path: str = "$") -> Any:
         for key, item in value.items():
             if not isinstance(key, str):
                 raise InvalidInput(f"key {key!r} at {path} is not text", cure="text keys")
-            name = unicodedata.normalize("NFC", key)
+            name = _text(key, path)
             if name in out:
                 raise InvalidInput(f"key {name!r} stands twice at {path} once written in one Unicode form")
             out[name] = plain(item, f"{path}.{name}")
@@ -54,6 +54,14 @@ def plain(value: Any, path: str = "$") -> Any:
     raise InvalidInput(
         f"{type(value).__name__} at {path} has no canonical form", cure="text, numbers, lists, mappings"
     )
+
+
+def _text(value: str, path: str) -> str:
+    try:
+        value.encode()
+    except UnicodeEncodeError as error:
+        raise InvalidInput(f"half a character at {path}: {error.reason}", cure="whole characters") from error
+    return unicodedata.normalize("NFC", value)
 
 
 def canonical_json(value: Any) -> bytes:

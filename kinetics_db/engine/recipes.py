@@ -8,6 +8,7 @@ from collections.abc import Callable, Mapping
 from dataclasses import dataclass, fields
 from typing import Any, ClassVar
 
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.units import is_unit
 from kinetics_db.errors import InvalidInput, Problem
 
@@ -261,6 +262,11 @@ def _values(cls: type, plain: Any, where: str) -> dict[str, Any]:
         if not _TYPES.get(str(f.type), lambda _: True)(plain[name]):
             problems.append(Problem(f"{plain[name]!r} is no {f.type}", field=f"{where}{name}"))
         values[name] = plain[name]
+        if isinstance(values[name], str):
+            try:
+                values[name] = plain_text(values[name], field=f"{where}{name}", longest=120)
+            except InvalidInput as error:
+                problems.extend(error.problems)
     if problems:
         raise InvalidInput(problems)
     return values

@@ -5,9 +5,11 @@ from __future__ import annotations
 from django.db import models
 from django.db.models import Q
 
+from kinetics_db.provenance.constraints import finite
 from kinetics_db.provenance.models import ImmutableRecord
 
-VERDICTS = ("agrees", "consistent", "strained", "disagrees", "not tested")
+VERDICTS = ("not tested", "agrees", "consistent", "strained", "disagrees")
+"""From the best to the worst."""
 
 
 class ModelEvidence(ImmutableRecord):
@@ -20,6 +22,7 @@ class ModelEvidence(ImmutableRecord):
 
     class Meta:
         verbose_name = "model evidence"
+        constraints = [finite("model_evidence_is_finite", "aicc", "bic")]
 
     def __str__(self) -> str:
         return f"evidence of {self.result}"
@@ -32,12 +35,16 @@ class RunEvidence(models.Model):
     run_revision = models.ForeignKey("runs.RunRevision", on_delete=models.PROTECT, related_name="+")
     table = models.ForeignKey("measurements.ConcentrationTable", on_delete=models.PROTECT, related_name="+")
     verdict = models.CharField(max_length=12)
-    p_value = models.FloatField(null=True)
-    nrmse = models.FloatField(null=True)
+    observable = models.CharField(max_length=120, blank=True, default="", help_text="the one that decided")
+    p_value = models.FloatField(null=True, help_text="smallest adjusted p of that observable")
+    nrmse = models.FloatField(null=True, help_text="of that observable")
+    pull = models.FloatField(null=True, help_text="farthest pull of the run's nuisance parameters")
+    pull_name = models.CharField(max_length=300, blank=True, default="")
 
     class Meta:
         constraints = [
             models.UniqueConstraint(fields=["evidence", "table"], name="one_verdict_a_table"),
+            finite("run_evidence_is_finite", "p_value", "nrmse", "pull"),
             models.CheckConstraint(condition=Q(verdict__in=VERDICTS), name="verdict_is_known"),
         ]
 

@@ -5,23 +5,33 @@ from __future__ import annotations
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
+from django.db.models import Case, When
+
 from kinetics_db.accounts.models import User
 from kinetics_db.datasets.selectors import Staleness, staleness_of
 from kinetics_db.errors import NotFound
-from kinetics_db.evidence.models import ModelEvidence, RunEvidence
+from kinetics_db.evidence.models import VERDICTS, ModelEvidence, RunEvidence
+from kinetics_db.fits.selectors import fit_by_id
 from kinetics_db.projects.selectors import require_reader
 from kinetics_db.runs.models import Run
 
 
 @dataclass(frozen=True)
 class Cell:
-    """One verdict: a run under a fit result."""
+    """One verdict: a run under a fit result.
+
+    ``p_value`` and ``nrmse`` are those of ``observable``, the one that decided; ``pull`` is the farthest pull
+    among the run's nuisance parameters, in standard deviations of its prior.
+    """
 
     verdict: str
     p_value: float | None
     nrmse: float | None
     fit_id: int
     table: str
+    observable: str = ""
+    pull: float | None = None
+    pull_name: str = ""
 
 
 @dataclass(frozen=True)
@@ -36,7 +46,7 @@ class GridColumn:
     bic: float | None
     stale: Staleness
     delta_aicc: float | None
-    """AICc above the lowest of the fits to the same points with the same weights; None where there is no other."""
+    """AICc above the lowest of the converged fits to the same points with the same weights; None without another."""
 
 
 @dataclass(frozen=True)
@@ -59,15 +69,20 @@ def grid_of(*, user: User, project_id: int) -> Grid:
         ModelEvidence.objects.filter(result__fit__project_id=project_id)
         .select_related("result__fit__mechanism_version__mechanism", "result__fit__dataset")
         .defer("result__canonical", "result__fit__dataset__canonical", "canonical")
+        # Finished results come last and so win over stopped ones, the newest of them last.
+        .annotate(finished=Case(When(result__status="stopped", then=0), default=1))
         .order_by(
-            "result__fit__mechanism_version__mechanism__name", "result__fit__mechanism_version__number", "pk"
+            "result__fit__mechanism_version__mechanism__name",
+            "result__fit__mechanism_version__number",
+            "finished",
+            "pk",
         )
     )
     newest = {(e.result.fit.mechanism_version_id, e.result.fit.dataset_id): e for e in found}
     chosen = list(newest.values())
     stale = staleness_of(sorted({e.result.fit.dataset_id for e in chosen}))
     columns = tuple(_column(e, chosen, stale) for e in chosen)
-    cells = {}
+    cells: dict[tuple[str, int], Cell] = {}
     rows = RunEvidence.objects.filter(evidence__in=chosen).select_related(
         "run_revision__run", "table__run", "evidence__result"
     )
@@ -79,9 +94,20 @@ def grid_of(*, user: User, project_id: int) -> Grid:
         "evidence__result__canonical",
     ):
         fit_id = row.evidence.result.fit_id
-        cells[row.run_revision.run.code, fit_id] = Cell(
-            row.verdict, row.p_value, row.nrmse, fit_id, str(row.table)
+        cell = Cell(
+            verdict=row.verdict,
+            observable=row.observable,
+            p_value=row.p_value,
+            nrmse=row.nrmse,
+            pull=row.pull,
+            pull_name=row.pull_name,
+            fit_id=fit_id,
+            table=str(row.table),
         )
+        place = row.run_revision.run.code, fit_id
+        # A run with several tables in one dataset is judged by the worst of them.
+        if place not in cells or VERDICTS.index(cell.verdict) > VERDICTS.index(cells[place].verdict):
+            cells[place] = cell
     codes = tuple(Run.objects.filter(project_id=project_id).order_by("code").values_list("code", flat=True))
     return Grid(codes, columns, cells)
 
@@ -91,9 +117,15 @@ def _column(
 ) -> GridColumn:
     fit = evidence.result.fit
     comparable = [
-        other.aicc for other in chosen if other.aicc is not None and other.data_key == evidence.data_key
+        other.aicc
+        for other in chosen
+        if other.aicc is not None
+        and other.data_key == evidence.data_key
+        and other.result.status == "converged"
     ]
-    delta = evidence.aicc - min(comparable) if evidence.aicc is not None and len(comparable) > 1 else None
+    delta = None
+    if evidence.aicc is not None and evidence.result.status == "converged" and len(comparable) > 1:
+        delta = evidence.aicc - min(comparable)
     return GridColumn(
         fit_id=fit.pk,
         mechanism=str(fit.mechanism_version),
@@ -115,6 +147,7 @@ def evidence_of(*, user: User, fit_id: int) -> ModelEvidence:
         .first()
     )
     if found is None:
-        raise NotFound("there is no evidence for such a fit")
+        fit_by_id(user=user, fit_id=fit_id)  # tells a stranger nothing
+        raise NotFound("this fit has no evidence yet")
     require_reader(user=user, project_id=found.result.fit.project_id)
     return found

@@ -23,10 +23,10 @@ from kinetics_db.evidence.models import ModelEvidence, RunEvidence
 from kinetics_db.fits.models import Fit, FitResult
 from kinetics_db.fits.selectors import load_fit
 from kinetics_db.fits.services import Computed, compute_fit, store_result
-from kinetics_db.fits.services.compute import number
+from kinetics_db.fits.services.compute import number, result_content
 from kinetics_db.jobs.models import Job
-from kinetics_db.jobs.services import Claim, finishing
-from kinetics_db.provenance.services import recording, save_record
+from kinetics_db.jobs.services import Claim, finishing, heartbeat
+from kinetics_db.provenance.services import Prepared, prepared, recording, save_record
 
 FORMAT = "ratewright/evidence/1"
 
@@ -42,19 +42,22 @@ JOB_STATE: Mapping[str, str] = {
 def compute_and_assess(claim: Claim) -> None:
     """Compute a fit, judge it, and store result, evidence and the job's end in one transaction."""
     fit = load_fit(claim.subject_id)
+    thresholds = thresholds_of(fit)  # before the work, so that a wrong setting costs none
     computed = compute_fit(fit, claim)
     judged = bool(computed.outcome.experiments)
-    thresholds = thresholds_of(fit)
     model = evidence_of_model(computed.outcome) if judged else None
     runs = evidence_of_runs(computed.outcome, thresholds) if judged else ()
+    content = prepared(result_content(computed))
+    verdicts = prepared(_content(content.digest, model, runs, thresholds)) if model is not None else None
+    heartbeat(claim, progress=0.99, message="storing the result", heed_stop=False)
     message = f"{computed.outcome.status}: {computed.outcome.message}"
     with (
         recording(user=fit.created_by),
         finishing(claim, state=JOB_STATE[computed.outcome.status], message=message),
     ):
-        result = store_result(computed, token=claim.token)
-        if model is not None:
-            store_evidence(computed, result, model, runs, thresholds)
+        result = store_result(computed, content, token=claim.token)
+        if model is not None and verdicts is not None:
+            store_evidence(computed, result, model, runs, verdicts)
 
 
 def thresholds_of(fit: Fit) -> Thresholds:
@@ -69,22 +72,31 @@ def thresholds_of(fit: Fit) -> Thresholds:
         ) from error
 
 
+def _content(
+    result_digest: str,
+    model: EngineModelEvidence,
+    runs: tuple[EngineRunEvidence, ...],
+    thresholds: Thresholds,
+) -> dict[str, Any]:
+    """Plain values of evidence, with the thresholds that it was judged by."""
+    return {
+        "format": FORMAT,
+        "result": result_digest,
+        "thresholds": asdict(thresholds),
+        "model": finite(asdict(model)),
+        "runs": [{k: v for k, v in finite(asdict(run)).items() if k != "thresholds"} for run in runs],
+    }
+
+
 def store_evidence(
     computed: Computed,
     result: FitResult,
     model: EngineModelEvidence,
     runs: tuple[EngineRunEvidence, ...],
-    thresholds: Thresholds,
+    content: Prepared,
 ) -> ModelEvidence:
-    """Store verdicts with the thresholds they were reached by; must run inside `recording()`."""
+    """Store verdicts; must run inside `recording()`."""
     fit = computed.fit
-    content = {
-        "format": FORMAT,
-        "result": result.digest,
-        "thresholds": asdict(thresholds),
-        "model": finite(asdict(model)),
-        "runs": [{k: v for k, v in finite(asdict(run)).items() if k != "thresholds"} for run in runs],
-    }
     evidence = save_record(
         ModelEvidence(
             result=result,
@@ -106,8 +118,7 @@ def store_evidence(
             run_revision=item.run_revision,
             table=item.table,
             verdict=by_name[name].verdict,
-            p_value=_smallest(by_name[name]),
-            nrmse=_largest_error(by_name[name]),
+            **_what_decided(by_name[name]),
         )
         for item, name in zip(computed.data.items, computed.data.names, strict=True)
     )
@@ -128,17 +139,18 @@ def data_key(computed: Computed) -> str:
     )
 
 
-def _smallest(run: EngineRunEvidence) -> float | None:
-    """The smallest adjusted p of the run's tests."""
-    found = [
-        p for o in run.observables for p in (o.chi_square_p_adjusted, o.runs_p_adjusted) if p is not None
-    ]
-    return min(found, default=None)
-
-
-def _largest_error(run: EngineRunEvidence) -> float | None:
-    found = [o.nrmse for o in run.observables if o.nrmse is not None]
-    return number(max(found, default=None))
+def _what_decided(run: EngineRunEvidence) -> dict[str, Any]:
+    """The observable that decided, with its own p and error, and the pull that went farthest."""
+    decided = next((o for o in run.observables if o.observable == run.worst_observable), None)
+    farthest = max(run.pulls, key=lambda p: abs(p.pull), default=None)
+    tests = [decided.chi_square_p_adjusted, decided.runs_p_adjusted] if decided is not None else []
+    return {
+        "observable": decided.observable[:120] if decided is not None else "",
+        "p_value": min((p for p in tests if p is not None), default=None),
+        "nrmse": number(decided.nrmse) if decided is not None else None,
+        "pull": number(farthest.pull) if farthest is not None else None,
+        "pull_name": farthest.name[:300] if farthest is not None else "",
+    }
 
 
 def finite(value: Any) -> Any:

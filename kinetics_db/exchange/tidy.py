@@ -9,7 +9,10 @@ from collections.abc import Iterator
 from dataclasses import astuple, dataclass, fields
 from typing import TYPE_CHECKING
 
-from kinetics_db.datasets.selectors import dataset_by_id, items_of
+import numpy as np
+
+from kinetics_db.datasets.selectors import dataset_by_id
+from kinetics_db.fits.experiments import data_of, reason_left_out, rows_in_window
 
 if TYPE_CHECKING:
     from kinetics_db.accounts.models import User
@@ -19,7 +22,10 @@ FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 @dataclass(frozen=True)
 class TidyRow:
-    """One value of one run. ``time_s`` in s, value and uncertainty in ``unit``; None is 'missing'."""
+    """One value of one run. ``time_s`` in s, value and uncertainty in ``unit``; None is 'missing'.
+
+    ``left_out`` is the reason why the dataset leaves the point out, else empty.
+    """
 
     run: str
     run_revision: int
@@ -29,29 +35,31 @@ class TidyRow:
     value: float | None
     standard_uncertainty: float | None
     unit: str
+    left_out: str
 
 
 def tidy_rows(*, user: User, dataset_id: int) -> Iterator[TidyRow]:
-    """Rows of a dataset that the person may see, run by run, column by column, in order of time."""
+    """What a dataset chooses, run by run, column by column, in order of time."""
     dataset = dataset_by_id(user=user, dataset_id=dataset_id)
-    for item in items_of(dataset):
-        table = item.table.table
+    data = data_of(dataset)
+    for item, run in zip(data.items, data.runs, strict=True):
+        table = run.table
         tabulated = table.names("standard uncertainty")
-        for column in table.columns:
-            if column.quantity != "concentration":
-                continue
-            values = table.column(column.name, "concentration")
-            sigma = table.column(column.name, "standard uncertainty") if column.name in tabulated else None
-            for row, (time, value) in enumerate(zip(table.times, values, strict=True)):
+        rows = np.flatnonzero(rows_in_window(run))
+        for column in run.columns:
+            values = table.column(column, "concentration")
+            sigma = table.column(column, "standard uncertainty") if column in tabulated else None
+            for row in rows:
                 yield TidyRow(
-                    run=item.run_revision.run.code,
+                    run=run.code,
                     run_revision=item.run_revision.number,
                     table=item.table.number,
-                    time_s=float(time),
-                    column=column.name,
-                    value=_finite(value),
+                    time_s=float(table.times[row]),
+                    column=column,
+                    value=_finite(values[row]),
                     standard_uncertainty=None if sigma is None else _finite(sigma[row]),
-                    unit=column.unit,
+                    unit=table.columns[table.index(column, "concentration")].unit,
+                    left_out=reason_left_out(run, column, int(row)),
                 )
 
 

@@ -119,7 +119,7 @@ def experiments_of(
 
 def _experiment(name: str, run: RunOfFit, casting: Casting, causes: _Causes) -> Experiment:
     columns = [c for c in run.columns if casting.columns.get(c) is not None]
-    keep, values, sigma = _points(run.table, columns, run.window)
+    keep, values, sigma = _points(run, columns)
     temperature = run.snapshot["temperature"]
     return Experiment(
         name=name,
@@ -171,28 +171,35 @@ def groups_of(snapshot: Mapping[str, Any]) -> dict[str, str]:
     return {"temperature": f"{snapshot['temperature']['value']:.2f} K"}
 
 
+def rows_in_window(run: RunOfFit) -> NDArray[np.bool_]:
+    """Rows of a run's table whose time the dataset chooses, shape (n,)."""
+    times, window = run.table.times, run.window
+    first = -np.inf if window["start"] is None else window["start"]
+    last = np.inf if window["end"] is None else window["end"]
+    return np.asarray((times >= first) & (times <= last))
+
+
+def reason_left_out(run: RunOfFit, column: str, row: int) -> str:
+    """Why the dataset leaves a point out; empty when it counts."""
+    left_out = run.window["left_out"]
+    for place in (f"{column}@{row}", f"{column}@*", f"*@{row}", "*@*"):
+        if place in left_out:
+            return str(left_out[place])
+    return ""
+
+
 def _points(
-    table: Table, columns: Sequence[str], window: Mapping[str, Any]
+    run: RunOfFit, columns: Sequence[str]
 ) -> tuple[NDArray[np.bool_], NDArray[np.float64], NDArray[np.float64] | None]:
-    times = table.times
-    keep = np.ones(times.size, dtype=bool)
-    if window["start"] is not None:
-        keep &= times >= window["start"]
-    if window["end"] is not None:
-        keep &= times <= window["end"]
-    values = (
-        np.stack([table.column(c, "concentration") for c in columns], axis=1)
-        if columns
-        else np.empty((times.size, 0))
-    )
-    values = values.copy()
-    for place in window["left_out"]:
-        column, _, row = place.rpartition("@")
-        rows = slice(None) if row == "*" else int(row)
-        if column == "*":
-            values[rows, :] = np.nan
-        elif column in columns:  # a column that plays no part has no points to leave out
-            values[rows, list(columns).index(column)] = np.nan
+    """Rows that count, and values and standard uncertainties of these rows, shape (n, m) each."""
+    table, keep = run.table, rows_in_window(run)
+    values = np.empty((table.rows, len(columns)))
+    for i, column in enumerate(columns):
+        values[:, i] = table.column(column, "concentration")
+    if run.window["left_out"]:
+        for i, column in enumerate(columns):
+            out = [row for row in range(table.rows) if reason_left_out(run, column, row)]
+            values[out, i] = np.nan
     tabulated = table.names("standard uncertainty")
     sigma = None
     if columns and all(c in tabulated for c in columns):

@@ -5,6 +5,7 @@ from __future__ import annotations
 from django.db import models
 from django.db.models import F, Q
 
+from kinetics_db.provenance.constraints import finite
 from kinetics_db.provenance.models import ImmutableRecord
 
 
@@ -49,6 +50,7 @@ class FitResult(ImmutableRecord):
     class Meta:
         verbose_name = "fit result"
         constraints = [
+            finite("fit_result_is_finite", "cost", "residual_sum"),
             models.UniqueConstraint(fields=["fit", "attempt"], name="one_result_an_attempt"),
             models.UniqueConstraint(
                 fields=["fit"],
@@ -77,7 +79,7 @@ class FittedConstant(models.Model):
     where = models.CharField(
         max_length=120, blank=True, default="", help_text="group or run; blank: all runs"
     )
-    value = models.FloatField()
+    value = models.FloatField(null=True)
     standard_error = models.FloatField(null=True)
     low = models.FloatField(null=True)
     high = models.FloatField(null=True)
@@ -85,7 +87,10 @@ class FittedConstant(models.Model):
     determined = models.BooleanField()
 
     class Meta:
-        constraints = [models.UniqueConstraint(fields=["result", "name"], name="constant_once_a_result")]
+        constraints = [
+            models.UniqueConstraint(fields=["result", "name"], name="constant_once_a_result"),
+            finite("fitted_constant_is_finite", "value", "standard_error", "low", "high"),
+        ]
 
     def __str__(self) -> str:
         return f"{self.name} = {self.value}"

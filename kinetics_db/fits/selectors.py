@@ -14,7 +14,7 @@ from kinetics_db.datasets.selectors import stale_dataset_ids
 from kinetics_db.errors import NotFound
 from kinetics_db.fits.models import Fit, FitResult
 from kinetics_db.jobs.selectors import open_subjects
-from kinetics_db.projects.selectors import projects_visible_to, require_reader
+from kinetics_db.projects.selectors import NOT_VISIBLE, projects_visible_to, require_reader
 
 FINISHED = (FitResult.Status.CONVERGED, FitResult.Status.NOT_CONVERGED)
 
@@ -45,7 +45,7 @@ def load_fit(fit_id: int) -> Fit:
         .first()
     )
     if fit is None:
-        raise NotFound("there is no such fit that you may see")
+        raise NotFound(NOT_VISIBLE)
     return fit
 
 

@@ -35,7 +35,10 @@ class Job(models.Model):
     stop_requested = models.BooleanField(default=False)
     requested_by = models.ForeignKey(settings.AUTH_USER_MODEL, on_delete=models.PROTECT, related_name="+")
     created = models.DateTimeField(auto_now_add=True)
-    rung = models.DateTimeField(null=True, blank=True, help_text="when a message was last sent")
+    rings = models.PositiveSmallIntegerField(default=0, help_text="messages sent since it last began to wait")
+    ring_after = models.DateTimeField(
+        null=True, blank=True, help_text="when the sweep sends the next message"
+    )
     finished = models.DateTimeField(null=True, blank=True)
 
     class Meta:

@@ -3,9 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from datetime import timedelta
 
-from django.conf import settings
 from django.db.models import Q, QuerySet
 from django.db.models.functions import Now
 
@@ -47,6 +45,6 @@ def overdue() -> QuerySet[Job]:
 
 
 def unheard() -> QuerySet[Job]:
-    """Waiting jobs whose bell was last rung long ago, or never."""
-    limit = Now() - timedelta(seconds=settings.JOB_RESEND_AFTER_SECONDS)
-    return Job.objects.filter(state=Job.State.WAITING).filter(Q(rung__isnull=True) | Q(rung__lt=limit))
+    """Waiting jobs whose bell is to be rung again, those that wait longest first."""
+    due = Q(ring_after__isnull=True) | Q(ring_after__lt=Now())
+    return Job.objects.filter(state=Job.State.WAITING).filter(due).order_by("pk")

@@ -62,7 +62,20 @@ def _ring(job_id: int) -> None:
 
 
 def _rung(job_id: int) -> None:
-    Job.objects.filter(pk=job_id).update(rung=Now())
+    """Note that a message was sent; the next one follows after a pause that doubles, eightfold at most.
+
+    A message that still lies in the queue behind long work is no reason to pile up more of them.
+    """
+    for rings in Job.objects.filter(pk=job_id).values_list("rings", flat=True):
+        pause = settings.JOB_RESEND_AFTER_SECONDS * 2 ** min(rings, 3)
+        Job.objects.filter(pk=job_id).update(
+            rings=min(rings + 1, 1000), ring_after=Now() + timedelta(seconds=pause)
+        )
+
+
+def storable(text: str) -> str:
+    """Words of an error as every database takes them: no NUL, no half characters, no more than 500."""
+    return text.replace("\x00", " ").encode(errors="replace").decode()[:500]
 
 
 def worker_name() -> str:
@@ -89,21 +102,22 @@ def claim_job(job_id: int) -> Claim | None:
     return Claim(job.pk, job.kind, job.subject_id, job.attempts)
 
 
-def heartbeat(claim: Claim, *, progress: float, message: str = "") -> None:
+def heartbeat(claim: Claim, *, progress: float, message: str = "", heed_stop: bool = True) -> None:
     """Renew the lease and tell how far the work is.
 
     To be called when the work has moved, not from a timer, so that work which hangs loses its lease.
-    Raises LeaseLost when another attempt owns the job, StopAsked when somebody asked to stop.
+    Raises LeaseLost when another attempt owns the job, StopAsked when somebody asked to stop (unless the work
+    is past stopping).
     """
     kept = _held(claim).update(
         lease_until=Now() + timedelta(seconds=settings.JOB_LEASE_SECONDS),
         progress=min(max(progress, 0.0), 1.0),
-        message=message[:500],
+        message=storable(message),
     )
     if not kept:
         raise LeaseLost(f"attempt {claim.token} no longer owns job {claim.job_id}")
     Attempt.objects.filter(job_id=claim.job_id, number=claim.token).update(heartbeat=Now())
-    if Job.objects.filter(pk=claim.job_id, stop_requested=True).exists():
+    if heed_stop and Job.objects.filter(pk=claim.job_id, stop_requested=True).exists():
         raise StopAsked(f"job {claim.job_id} was asked to stop")
 
 
@@ -119,12 +133,12 @@ def finishing(claim: Claim, *, state: str = Job.State.DONE, message: str = "") -
             finished=Now(),
             lease_until=None,
             progress=1.0 if state == Job.State.DONE else F("progress"),
-            message=message[:500],
+            message=storable(message),
         )
         if not ended:
             raise LeaseLost(f"attempt {claim.token} no longer owns job {claim.job_id}")
         Attempt.objects.filter(job_id=claim.job_id, number=claim.token).update(
-            ended=Now(), outcome=state, detail=message
+            ended=Now(), outcome=state, detail=storable(message)
         )
         yield
 
@@ -141,15 +155,16 @@ def fail_job(claim: Claim, *, reason: str) -> None:
 
 def give_back(claim: Claim, *, reason: str) -> None:
     """End an attempt that broke unexpectedly: the job waits for another try, or has crashed after the last."""
+    reason = storable(reason)
     with transaction.atomic():
         job = Job.objects.get(pk=claim.job_id)
         if job.attempts >= job.attempts_allowed:
             ended = _held(claim).update(
-                state=Job.State.CRASHED, lease_until=None, finished=Now(), message=reason[:500]
+                state=Job.State.CRASHED, lease_until=None, finished=Now(), message=reason
             )
         else:
             ended = _held(claim).update(
-                state=Job.State.WAITING, lease_until=None, rung=None, message=reason[:500]
+                state=Job.State.WAITING, lease_until=None, rings=0, ring_after=None, message=reason
             )
             if ended:
                 _ring(claim.job_id)
@@ -185,7 +200,8 @@ def retry_job(*, job: Job) -> Job:
             finished=None,
             progress=0.0,
             message="",
-            rung=None,
+            rings=0,
+            ring_after=None,
             attempts_allowed=F("attempts") + settings.JOB_MAX_ATTEMPTS,
         )
         if not again:
@@ -229,7 +245,7 @@ def sweep() -> Swept:
                     message="stopped; its worker was lost",
                 )
             else:
-                count = taken.update(state=Job.State.WAITING, lease_until=None, rung=None)
+                count = taken.update(state=Job.State.WAITING, lease_until=None, rings=0, ring_after=None)
             if count:
                 lost += 1
                 Attempt.objects.filter(job=job, number=job.attempts).update(

@@ -12,6 +12,7 @@ from django.db.models import QuerySet
 from kinetics_db.accounts.models import User
 from kinetics_db.engine import amounts
 from kinetics_db.engine.canonical import digest
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.units import convert
 from kinetics_db.errors import InvalidInput, NotFound
 from kinetics_db.materials.models import (
@@ -27,6 +28,7 @@ from kinetics_db.materials.models import (
 from kinetics_db.materials.selectors import compound_named, lot_named
 from kinetics_db.materials.sources import engine_lot, stock_content
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
 
 Revision = TypeVar("Revision", bound=MaterialRevision)
@@ -56,21 +58,24 @@ def enter_compound(
 ) -> CompoundRevision:
     """Enter a compound: molar mass in g/mol, density with its unit, GHS hazard statements (H codes)."""
     require_contributor(user=user, project_id=project_id)
-    name = _name(name, "name", "a compound")
+    name = plain_text(name, field="name", what="a compound", longest=80, required=True)
+    formula = plain_text(formula, field="formula", longest=200)
+    reason = plain_text(reason, field="reason")
+    hazards = [plain_text(h, field="hazard_statements", longest=200) for h in hazard_statements]
     _positive(molar_mass, "molar_mass", "g/mol")
     content = {
         "format": "ratewright/compound/1",
         "name": name,
-        "formula": formula.strip(),
+        "formula": formula,
         "molar_mass": molar_mass,
         "density": None if density is None else float(convert(density[0], density[1], "g/L")),
-        "hazard_statements": list(hazard_statements),
+        "hazard_statements": hazards,
     }
     _positive(content["density"], "density", "g/L")  # type: ignore[arg-type]
     with recording(user=user):
+        lock_project(project_id)
         compound, made = Compound.objects.get_or_create(project_id=project_id, name=name)
         _note_if(made, "compound", compound.pk, project_id, name)
-        Compound.objects.select_for_update().get(pk=compound.pk)
         return _next_revision(
             CompoundRevision(compound=compound),
             CompoundRevision.objects.filter(compound=compound),
@@ -95,8 +100,12 @@ def enter_lot(
 ) -> LotRevision:
     """Enter a bottle: purity as a mass fraction with its standard uncertainty."""
     require_contributor(user=user, project_id=project_id)
-    code = _name(code, "code", "a lot")
+    code = plain_text(code, field="code", what="a lot", longest=80, required=True)
+    compound = plain_text(compound, field="compound", longest=80)
+    supplier_note = plain_text(supplier_note, field="supplier_note", lines=True)
+    reason = plain_text(reason, field="reason")
     with recording(user=user):
+        lock_project(project_id)
         of = compound_named(project_id=project_id, name=compound)
         amounts.Lot(code, compound, purity=purity, purity_u=purity_uncertainty)  # checks the numbers
         lot, made = Lot.objects.get_or_create(
@@ -109,7 +118,6 @@ def enter_lot(
                 cure="another code for another compound",
             )
         _note_if(made, "lot", lot.pk, project_id, code)
-        Lot.objects.select_for_update().get(pk=lot.pk)
         content = {
             "format": "ratewright/lot/1",
             "code": code,
@@ -148,13 +156,16 @@ def make_up_stock(
     ``made_on`` is an ISO date, ``temperature`` the make-up temperature in K.
     """
     require_contributor(user=user, project_id=project_id)
-    code = _name(code, "code", "a stock")
+    code = plain_text(code, field="code", what="a stock", longest=80, required=True)
+    solvent = plain_text(solvent, field="solvent", longest=200)
+    made_on = plain_text(made_on, field="made_on", longest=40)
+    reason = plain_text(reason, field="reason")
     if not portions:
         raise InvalidInput("the stock holds nothing", field="portions", cure="at least one lot or compound")
     with recording(user=user):
+        lock_project(project_id)
         stock, made = Stock.objects.get_or_create(project_id=project_id, code=code)
         _note_if(made, "stock", stock.pk, project_id, code)
-        Stock.objects.select_for_update().get(pk=stock.pk)
         resolved = [_resolve(project_id, portion) for portion in portions]
         recipe = amounts.StockRecipe(
             owner=f"stock {code}",
@@ -209,9 +220,10 @@ def _resolve(project_id: int, portion: Portion) -> tuple[CompoundRevision, LotRe
         )
     try:
         if portion.lot is not None:
-            lot = lot_named(project_id=project_id, code=portion.lot)
+            lot = lot_named(project_id=project_id, code=plain_text(portion.lot, field="portions", longest=80))
             return lot.compound_revision, lot
-        return compound_named(project_id=project_id, name=str(portion.compound)), None
+        name = plain_text(portion.compound, field="portions", longest=80)
+        return compound_named(project_id=project_id, name=name), None
     except NotFound as error:
         raise InvalidInput(str(error), field="portions") from error
 
@@ -251,13 +263,6 @@ def _note_if(made: bool, kind: str, pk: int, project_id: int, label: str) -> Non
         note_write(verb="made", record_kind=kind, record_id=pk, project_id=project_id, label=label)
 
 
-def _name(text: str, field: str, what: str) -> str:
-    name = text.strip()
-    if not name or len(name) > 80:
-        raise InvalidInput(f"{what} needs a {field}", field=field, cure="1 to 80 characters")
-    return name
-
-
 def _positive(value: float | None, field: str, unit: str) -> None:
-    if value is not None and not (math.isfinite(value) and value > 0):
+    if value is not None and not (isinstance(value, int | float) and math.isfinite(value) and value > 0):
         raise InvalidInput(f"{field.replace('_', ' ')} {value}", field=field, cure=f"above 0 {unit}")

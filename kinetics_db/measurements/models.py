@@ -6,6 +6,7 @@ from django.db import models
 from django.db.models import F, Q
 
 from kinetics_db.engine.tables import Table
+from kinetics_db.provenance.constraints import finite
 from kinetics_db.provenance.models import ImmutableRecord
 
 
@@ -61,6 +62,7 @@ class SignalTable(StoredTable):
         verbose_name = "signal table"
         constraints = [
             models.UniqueConstraint(fields=["file", "number"], name="signal_table_number"),
+            finite("signal_times_are_finite", "first_time", "last_time"),
         ]
 
     def __str__(self) -> str:
@@ -108,6 +110,7 @@ class ConcentrationTable(StoredTable):
         verbose_name = "concentration table"
         constraints = [
             models.UniqueConstraint(fields=["run", "number"], name="concentration_table_number"),
+            finite("concentration_times_are_finite", "first_time", "last_time"),
             models.UniqueConstraint(fields=["signal_table", "reduction"], name="one_table_a_reduction"),
             models.CheckConstraint(condition=Q(basis__in=["mol/L", "relative"]), name="table_basis_is_known"),
         ]

@@ -9,7 +9,7 @@ from django.db.models import QuerySet
 from kinetics_db.accounts.models import User
 from kinetics_db.errors import NotFound
 from kinetics_db.measurements.models import ConcentrationTable, InstrumentFile, SignalTable
-from kinetics_db.projects.selectors import projects_visible_to, require_reader
+from kinetics_db.projects.selectors import NOT_VISIBLE, projects_visible_to, require_reader
 from kinetics_db.provenance.selectors import read_bytes
 
 
@@ -35,7 +35,7 @@ def signal_table_by_id(*, user: User, signal_table_id: int) -> SignalTable:
     """One signal table that the person may see."""
     found = SignalTable.objects.select_related("file__run__project").filter(pk=signal_table_id).first()
     if found is None:
-        raise NotFound("there is no such signal table that you may see")
+        raise NotFound(NOT_VISIBLE)
     require_reader(user=user, project_id=found.file.project_id)
     return found
 
@@ -44,7 +44,7 @@ def file_by_id(*, user: User, file_id: int) -> InstrumentFile:
     """One instrument file that the person may see."""
     found = InstrumentFile.objects.select_related("stored", "run").filter(pk=file_id).first()
     if found is None:
-        raise NotFound("there is no such file that you may see")
+        raise NotFound(NOT_VISIBLE)
     require_reader(user=user, project_id=found.project_id)
     return found
 

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping
 from typing import Any
 
@@ -12,6 +11,7 @@ from django.db.models import Max
 from kinetics_db.accounts.models import User
 from kinetics_db.engine import calibration, reading
 from kinetics_db.engine.canonical import digest, sha256_hex
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.tables import Table
 from kinetics_db.errors import Conflict, InvalidInput
 from kinetics_db.measurements.models import (
@@ -23,11 +23,10 @@ from kinetics_db.measurements.models import (
     TableSupersession,
 )
 from kinetics_db.projects.selectors import require_contributor
-from kinetics_db.provenance.services import keep_bytes, recording, save_record
+from kinetics_db.projects.services import lock_project
+from kinetics_db.provenance.services import keep_bytes, recording, require_size, save_record
 from kinetics_db.runs.models import Run
 from kinetics_db.runs.selectors import latest_revision
-
-NAME = re.compile(r"[^\x00-\x1f/\\]{1,255}\Z")
 
 
 def preview_file(
@@ -58,14 +57,12 @@ def store_file(
     bytes under the same name read in the same way give the existing table.
     """
     require_contributor(user=user, project_id=run.project_id)
-    name = name.strip()
-    if not NAME.match(name):
-        raise InvalidInput(
-            "the file has no usable name", field="name", cure="1 to 255 characters without / or \\"
-        )
+    name = plain_text(name, field="name", what="a file", longest=255, required=True)
+    if "/" in name or "\\" in name:
+        raise InvalidInput(f"'{name}' is a path", field="name", cure="a name without / or \\")
     result = _read(data, reader, options)
     with recording(user=user):
-        Run.objects.select_for_update().get(pk=run.pk)
+        lock_project(run.project_id)
         stored = keep_bytes(data)
         file = InstrumentFile.objects.filter(run=run, stored=stored, name=name).first()
         if file is None:
@@ -123,13 +120,11 @@ def reduce_signals(
     """
     run = signal_table.file.run
     require_contributor(user=user, project_id=run.project_id)
-    name = name.strip()
-    if not name or len(name) > 120:
-        raise InvalidInput("the reduction needs a name", field="name", cure="1 to 120 characters")
+    name = plain_text(name, field="name", what="a reduction", longest=120, required=True)
     checked = calibration.recipe_from_plain(recipe)
     reduced = calibration.reduce(signal_table.table, checked)
     with recording(user=user):
-        Run.objects.select_for_update().get(pk=run.pk)
+        lock_project(run.project_id)
         reduction = _reduction(user, run.project_id, name, checked)
         existing = ConcentrationTable.objects.filter(signal_table=signal_table, reduction=reduction).first()
         if existing is not None:
@@ -191,9 +186,11 @@ def supersede_table(
         raise InvalidInput("the tables are of different runs", field="newer", cure="two tables of one run")
     if newer.number <= older.number:
         raise InvalidInput("the newer table is not newer", field="newer", cure="a table made later")
-    if not reason.strip():
+    reason = plain_text(reason, field="reason")
+    if not reason:
         raise InvalidInput("no reason is given", field="reason", cure="say why the older table is replaced")
     with recording(user=user):
+        lock_project(older.run.project_id)
         if TableSupersession.objects.filter(older=older).exists():
             raise Conflict(f"table {older.number} of run {older.run.code} has been superseded already")
         return save_record(
@@ -214,6 +211,7 @@ def supersede_table(
 
 
 def _read(data: bytes, reader: str, options: Mapping[str, Any] | None) -> reading.ReadResult:
+    require_size(data)  # before anything is parsed
     return reading.read(data, reader=reader, options=reading.ReadingOptions.from_plain(options or {}))
 
 

@@ -10,7 +10,7 @@ from kinetics_db.accounts.models import User
 from kinetics_db.engine.network import Network, parse_mechanism
 from kinetics_db.errors import NotFound
 from kinetics_db.mechanisms.models import MechanismVersion
-from kinetics_db.projects.selectors import require_reader
+from kinetics_db.projects.selectors import NOT_VISIBLE, require_reader
 
 
 def versions_in(*, user: User, project_id: int) -> QuerySet[MechanismVersion]:
@@ -27,7 +27,7 @@ def version_by_id(*, user: User, version_id: int) -> MechanismVersion:
     """One mechanism version that the person may see."""
     version = MechanismVersion.objects.select_related("mechanism").filter(pk=version_id).first()
     if version is None:
-        raise NotFound("there is no such mechanism version that you may see")
+        raise NotFound(NOT_VISIBLE)
     require_reader(user=user, project_id=version.mechanism.project_id)
     return version
 

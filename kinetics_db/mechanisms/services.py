@@ -5,9 +5,10 @@ from __future__ import annotations
 from kinetics_db.accounts.models import User
 from kinetics_db.engine.canonical import digest
 from kinetics_db.engine.network import canonical_form, parse_mechanism
-from kinetics_db.errors import InvalidInput
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.mechanisms.models import Mechanism, MechanismVersion
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
 
 
@@ -18,11 +19,11 @@ def write_version(*, user: User, project_id: int, name: str, text: str, note: st
     problem of the text with line and column; nothing is stored then.
     """
     require_contributor(user=user, project_id=project_id)
-    name = name.strip()
-    if not name or len(name) > 120:
-        raise InvalidInput("a mechanism needs a name", field="name", cure="1 to 120 characters")
+    name = plain_text(name, field="name", what="a mechanism", longest=120, required=True)
+    note = plain_text(note, field="note", lines=True)
     content = canonical_form(parse_mechanism(text))
     with recording(user=user):
+        lock_project(project_id)
         mechanism, made = Mechanism.objects.get_or_create(project_id=project_id, name=name)
         if made:
             note_write(
@@ -32,8 +33,6 @@ def write_version(*, user: User, project_id: int, name: str, text: str, note: st
                 project_id=project_id,
                 label=name,
             )
-        # The lock makes numbering safe when two people save at once.
-        mechanism = Mechanism.objects.select_for_update().get(pk=mechanism.pk)
         same = mechanism.versions.filter(digest=digest(content)).first()
         if same is not None:
             return same

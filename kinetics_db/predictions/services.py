@@ -16,8 +16,10 @@ from kinetics_db.fits.request import FitRequest
 from kinetics_db.mechanisms.selectors import network_of
 from kinetics_db.predictions.models import Prediction
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import recording, save_record
 
+MOST_TIMES = 5_000
 CAUTION = (
     "A kinetic estimate only. Heat release, gas evolution, toxicity and light exposure need the usual risk "
     "assessment, local rules and a qualified person."
@@ -42,8 +44,10 @@ def predict_run(
     require_contributor(user=user, project_id=fit.project_id)
     if result.status != FitResult.Status.CONVERGED:
         raise InvalidInput(f"the fit is {result.status}", field="result", cure="a converged fit")
-    if not len(times):
-        raise InvalidInput("there are no times", field="times", cure="at least one time in s")
+    if not 1 <= len(times) <= MOST_TIMES:
+        raise InvalidInput(f"{len(times)} times", field="times", cure=f"1 to {MOST_TIMES} times in s")
+    start = {species: _number(value, f"start.{species}") for species, value in start.items()}
+    temperature = None if temperature is None else _number(temperature, "temperature")
     content = result.content
     request = FitRequest.from_plain(fit.content)
     network = network_of(fit.mechanism_version)
@@ -54,9 +58,11 @@ def predict_run(
     ]
     constants = {c.name: c.start for c in request.constants if c.scope == "held"}
     constants.update({p["base"]: p["value"] for _, p in chosen})
+    places = sorted({p["place"] for p in content["parameters"] if p["kind"] == "constant" and p["place"]})
+    if place and place not in places:
+        raise InvalidInput(f"there is no '{place}'", field="place", cure=", ".join(places) or "leave it out")
     missing = [name for name in network.constants if name not in constants]
     if missing:
-        places = sorted({p["place"] for p in content["parameters"] if p["kind"] == "constant" and p["place"]})
         raise InvalidInput(
             f"{', '.join(missing)} differ between runs", field="place", cure=f"one of {', '.join(places)}"
         )
@@ -94,6 +100,7 @@ def predict_run(
         "caution": CAUTION,
     }
     with recording(user=user):
+        lock_project(fit.project_id)
         existing = Prediction.objects.filter(result=result, digest=digest(values)).first()
         return existing or save_record(
             Prediction(result=result, extrapolated=bool(outside)),
@@ -104,6 +111,12 @@ def predict_run(
             label=f"{fit.mechanism_version}",
             verb="predicted",
         )
+
+
+def _number(value: object, field: str) -> float:
+    if isinstance(value, bool) or not isinstance(value, int | float):
+        raise InvalidInput(f"{value!r:.80} is no number", field=field, cure="a number")
+    return float(value)
 
 
 def _outside(

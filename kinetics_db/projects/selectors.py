@@ -12,6 +12,9 @@ from kinetics_db.accounts.models import User
 from kinetics_db.errors import NotFound, NotPermitted
 from kinetics_db.projects.models import Membership, Project
 
+NOT_VISIBLE = "there is no such record that you may see"
+"""One sentence for what is not there and what is somebody else's, so that nobody learns which."""
+
 RANK = {Membership.Role.READER: 1, Membership.Role.CONTRIBUTOR: 2, Membership.Role.OWNER: 3}
 
 
@@ -45,7 +48,9 @@ def roles_remembered() -> Iterator[None]:
 
 
 def role_in(*, user: User, project_id: int) -> str | None:
-    """The person's role, or None when not a member."""
+    """The person's role, or None when not a member (or not signed in)."""
+    if not user.is_authenticated:
+        return None
     known, key = _remembered.get(), (user.pk, project_id)
     if known is not None and key in known:
         return known[key]
@@ -58,7 +63,7 @@ def role_in(*, user: User, project_id: int) -> str | None:
 def require_reader(*, user: User, project_id: int) -> None:
     """NotFound unless the person is a member."""
     if role_in(user=user, project_id=project_id) is None:
-        raise NotFound("there is no such record that you may see")
+        raise NotFound(NOT_VISIBLE)
 
 
 def require_contributor(*, user: User, project_id: int) -> None:
@@ -74,6 +79,6 @@ def require_owner(*, user: User, project_id: int) -> None:
 def _require(user: User, project_id: int, needed: Membership.Role) -> None:
     role = role_in(user=user, project_id=project_id)
     if role is None:
-        raise NotFound("there is no such record that you may see")
+        raise NotFound(NOT_VISIBLE)
     if RANK[Membership.Role(role)] < RANK[needed]:
         raise NotPermitted(f"this needs the role '{needed}' in the project; yours is '{role}'")

@@ -7,7 +7,10 @@ import re
 from collections.abc import Mapping
 from dataclasses import fields
 
+from django.db import IntegrityError, transaction
+
 from kinetics_db.accounts.models import User
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.run_evidence import Thresholds
 from kinetics_db.errors import Conflict, InvalidInput, Problem
 from kinetics_db.projects.models import Membership, Project
@@ -21,25 +24,36 @@ def create_project(
     *, user: User, slug: str, name: str, description: str = "", invented: bool = False
 ) -> Project:
     """Make a project; its maker becomes its first owner."""
-    if not SLUG.match(slug) or len(slug) > 60:
+    if not isinstance(slug, str) or not SLUG.match(slug) or len(slug) > 60:
         raise InvalidInput(
-            f"'{slug[:80]}' cannot be a project's short name",
+            f"{slug!r:.80} cannot be a project's short name",
             field="slug",
             cure="small letters, digits and single hyphens",
         )
-    if not name.strip():
-        raise InvalidInput("the project has no name", field="name", cure="any text")
+    name = plain_text(name, field="name", what="a project", longest=200, required=True)
+    description = plain_text(description, field="description", longest=20_000, lines=True)
     with recording(user=user):
-        if Project.objects.filter(slug=slug).exists():
-            raise Conflict(f"there is a project '{slug}' already")
-        project = Project.objects.create(
-            slug=slug, name=name.strip(), description=description, invented=invented, created_by=user
-        )
+        try:
+            with transaction.atomic():
+                project = Project.objects.create(
+                    slug=slug, name=name, description=description, invented=invented, created_by=user
+                )
+        except IntegrityError as error:
+            raise Conflict(f"there is a project '{slug}' already") from error
         Membership.objects.create(project=project, user=user, role=Membership.Role.OWNER)
         note_write(
             verb="made", record_kind="project", record_id=project.pk, project_id=project.pk, label=slug
         )
     return project
+
+
+def lock_project(project_id: int) -> None:
+    """Put writers of one project in line until the transaction ends; to be called before any other write.
+
+    Whatever is numbered or named once a project is written under this lock. It does not hinder rows that
+    merely point at the project.
+    """
+    Project.objects.select_for_update(no_key=True).only("pk").get(pk=project_id)
 
 
 def set_verdict_thresholds(*, user: User, project: Project, thresholds: Mapping[str, float]) -> Project:
@@ -77,11 +91,12 @@ def set_verdict_thresholds(*, user: User, project: Project, thresholds: Mapping[
 
 def set_member(*, user: User, project: Project, member: User, role: str) -> Membership:
     """Give a person a role; a project always keeps an owner."""
-    require_owner(user=user, project_id=project.pk)
     if role not in Membership.Role.values:
         raise InvalidInput(f"'{role}' is not a role", field="role", cure=", ".join(Membership.Role.values))
     with recording(user=user):
-        others = Membership.objects.select_for_update().filter(project=project, role=Membership.Role.OWNER)
+        lock_project(project.pk)
+        require_owner(user=user, project_id=project.pk)
+        others = Membership.objects.filter(project=project, role=Membership.Role.OWNER)
         if role != Membership.Role.OWNER and not others.exclude(user=member).exists():
             raise Conflict("a project keeps at least one owner; make somebody else an owner first")
         membership, _ = Membership.objects.update_or_create(

@@ -78,18 +78,19 @@ def chain_breaks(*, limit: int = 100) -> list[str]:
         if len(wrong) >= limit:
             return wrong
     head = AuditHead.objects.first()
-    if head is not None and (head.sequence, head.digest) != (sequence, previous):
+    if head is None and sequence:
+        wrong.append(f"the chain's head is missing, the last entry is {sequence}")
+    elif head is not None and (head.sequence, head.digest) != (sequence, previous):
         wrong.append(f"the chain's head says entry {head.sequence}, the last entry is {sequence}")
     return wrong
 
 
 def content_of(entry: AuditEntry) -> dict[str, object]:
     """An entry's content as it was hashed."""
-    names = "verb record_kind record_id project_id record_label reason digest_before digest_after".split()
+    names = "verb record_kind record_id project_id record_label reason digest_before digest_after actor user_id".split()
     return {
         **{name: getattr(entry, name) for name in names},
         "sequence": entry.sequence,
         "at": entry.at.isoformat(timespec="microseconds"),
-        "actor": entry.actor,
         "previous": entry.previous,
     }

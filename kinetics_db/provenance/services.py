@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import tempfile
 from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, TypeVar
 
@@ -18,16 +19,30 @@ from kinetics_db.provenance.models import Derivation, ImmutableRecord, StoredByt
 from kinetics_db.provenance.selectors import path_of
 from kinetics_db.provenance.writing import note_write, recording
 
-__all__ = ["keep_bytes", "note_write", "recording", "save_record"]
+__all__ = ["Prepared", "keep_bytes", "note_write", "prepared", "recording", "require_size", "save_record"]
 
 Record = TypeVar("Record", bound=ImmutableRecord)
+
+
+@dataclass(frozen=True)
+class Prepared:
+    """Content brought to canonical bytes beforehand, so that large content costs no time inside a transaction."""
+
+    canonical: bytes
+    digest: str
+
+
+def prepared(content: Mapping[str, Any]) -> Prepared:
+    """Canonical bytes and hash of plain values."""
+    data = canonical_json(content)
+    return Prepared(data, sha256_hex(data))
 
 
 def save_record(
     record: Record,
     *,
     user: User,
-    content: Mapping[str, Any],
+    content: Mapping[str, Any] | Prepared,
     parents: Iterable[models.Model] = (),
     project_id: int | None,
     label: str = "",
@@ -37,11 +52,11 @@ def save_record(
 ) -> Record:
     """Store an immutable record: canonical bytes and hash of `content`, the row, its lineage, its audit entry.
 
-    `content` is a mapping of plain values, hashed as RFC 8785 JSON. Parents are the records that it was made
-    from. Must run inside `recording()`.
+    `content` is a mapping of plain values, hashed as RFC 8785 JSON, or prepared already. Parents are the
+    records that it was made from. Must run inside `recording()`.
     """
-    record.canonical = canonical_json(content)
-    record.digest = sha256_hex(record.canonical)
+    ready = content if isinstance(content, Prepared) else prepared(content)
+    record.canonical, record.digest = ready.canonical, ready.digest
     record.created_by = user
     record.save()
     Derivation.objects.bulk_create(
@@ -74,12 +89,7 @@ def keep_bytes(data: bytes) -> StoredBytes:
     Bytes already kept are not written again. InvalidInput when there are too many; Unavailable when the
     folder cannot be written.
     """
-    if len(data) > settings.MAX_FILE_BYTES:
-        raise InvalidInput(
-            f"the file has {len(data):,} bytes",
-            field="file",
-            cure=f"at most {settings.MAX_FILE_BYTES:,} bytes (RATEWRIGHT_MAX_FILE_BYTES)",
-        )
+    require_size(data)
     sha256 = sha256_hex(data)
     path = path_of(sha256)
     if not (path.exists() and path.stat().st_size == len(data)):
@@ -90,6 +100,16 @@ def keep_bytes(data: bytes) -> StoredBytes:
                 f"the file store {settings.BYTE_STORE_DIR} cannot be written: {error}"
             ) from error
     return StoredBytes.objects.get_or_create(sha256=sha256, defaults={"size": len(data)})[0]
+
+
+def require_size(data: bytes) -> None:
+    """InvalidInput when a file is larger than the installation takes."""
+    if len(data) > settings.MAX_FILE_BYTES:
+        raise InvalidInput(
+            f"the file has {len(data):,} bytes",
+            field="file",
+            cure=f"at most {settings.MAX_FILE_BYTES:,} bytes (RATEWRIGHT_MAX_FILE_BYTES)",
+        )
 
 
 def _write_durably(path: Path, data: bytes) -> None:

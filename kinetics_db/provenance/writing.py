@@ -16,16 +16,20 @@ from django.db import transaction
 from django.utils import timezone
 
 from kinetics_db.engine.canonical import digest
+from kinetics_db.errors import Conflict
 
 FIRST_PREVIOUS = "0" * 64
 
 
+COMMAND_LINE = "command line"
+"""Who acts when nobody is signed in: a management command."""
+
+
 @dataclass
 class _Pending:
-    """Entries of the running outermost frame."""
+    """Entries of the running outermost frame, and who acts in the frames that are open."""
 
-    user: Any
-    actor: str
+    users: list[Any] = field(default_factory=list)
     entries: list[dict[str, Any]] = field(default_factory=list)
 
 
@@ -40,18 +44,30 @@ def require_recording(kind: str) -> None:
 
 @contextmanager
 def recording(*, user: Any) -> Iterator[None]:
-    """Transaction in which records are written and audited; may be nested, the outermost one appends."""
-    if getattr(_state, "pending", None) is not None:
-        with transaction.atomic():
-            yield
+    """Transaction in which records are written and audited; may be nested, the outermost one appends.
+
+    ``user`` is who acts; None is the command line. An inner frame that is rolled back takes its entries with it.
+    """
+    pending: _Pending | None = getattr(_state, "pending", None)
+    if pending is None:
+        _state.pending = pending = _Pending(users=[user])
+        try:
+            with transaction.atomic():
+                yield
+                _append(pending.entries)
+        finally:
+            _state.pending = None
         return
-    _state.pending = _Pending(user=user, actor=user.get_username())
+    before = len(pending.entries)
+    pending.users.append(user)
     try:
         with transaction.atomic():
             yield
-            _append(_state.pending)
+    except BaseException:
+        del pending.entries[before:]
+        raise
     finally:
-        _state.pending = None
+        pending.users.pop()
 
 
 def note_write(
@@ -67,8 +83,11 @@ def note_write(
 ) -> None:
     """Collect the audit entry of one write for the running frame."""
     require_recording(record_kind)
+    user = _state.pending.users[-1]
     _state.pending.entries.append(
         {
+            "user_id": user.pk if user is not None else None,
+            "actor": user.get_username() if user is not None else COMMAND_LINE,
             "verb": verb,
             "record_kind": record_kind,
             "record_id": record_id,
@@ -86,13 +105,14 @@ def audit_account(
 ) -> None:
     """Audit every save of an account, also by Django's own commands.
 
-    Accounts stand below the trail and so cannot write to it themselves. The date of the last login is no
-    change of the account.
+    Accounts stand below the trail and so cannot write to it themselves. Whoever acts for somebody opens the
+    frame; without one it is the command line. The date of the last login is no change of the account.
     """
     if raw or update_fields == {"last_login"}:
         return
     changed = " ".join(["changed", *sorted(update_fields or ())])
-    with recording(user=instance):
+    pending: _Pending | None = getattr(_state, "pending", None)
+    with recording(user=pending.users[-1] if pending is not None else None):
         note_write(
             verb="made" if created else changed[:40],
             record_kind="account",
@@ -107,25 +127,28 @@ def entry_digest(values: dict[str, Any]) -> str:
     return digest(values)
 
 
-def _append(pending: _Pending) -> None:
+def _append(entries: list[dict[str, Any]]) -> None:
     from kinetics_db.provenance.models import AuditEntry, AuditHead
 
-    if not pending.entries:
+    if not entries:
         return
-    AuditHead.objects.get_or_create(singleton=True)
+    _, made = AuditHead.objects.get_or_create(singleton=True)
+    if made and AuditEntry.objects.exists():
+        raise Conflict(
+            "the end of the audit chain is missing; nothing is recorded until the database is restored"
+        )
     head = AuditHead.objects.select_for_update().get(singleton=True)
     rows = []
     now = timezone.now()
-    for entry in pending.entries:
+    for entry in entries:
         head.sequence += 1
         content = {
             **entry,
             "sequence": head.sequence,
             "at": now.isoformat(timespec="microseconds"),
-            "actor": pending.actor,
             "previous": head.digest,
         }
         head.digest = entry_digest(content)
-        rows.append(AuditEntry(**{**content, "at": now}, user=pending.user, digest=head.digest))
+        rows.append(AuditEntry(**{**content, "at": now}, digest=head.digest))
     AuditEntry.objects.bulk_create(rows)
     head.save(update_fields=["sequence", "digest"])

@@ -10,7 +10,7 @@ from django.db.models import Count, F, QuerySet
 
 from kinetics_db.accounts.models import User
 from kinetics_db.errors import NotFound
-from kinetics_db.projects.selectors import projects_visible_to, require_reader
+from kinetics_db.projects.selectors import NOT_VISIBLE, projects_visible_to, require_reader
 from kinetics_db.runs.models import Run, RunCondition, RunRevision
 
 
@@ -24,7 +24,7 @@ def run_by_id(*, user: User, run_id: int) -> Run:
     """One run that the person may see."""
     run = Run.objects.select_related("project").filter(pk=run_id).first()
     if run is None:
-        raise NotFound("there is no such run that you may see")
+        raise NotFound(NOT_VISIBLE)
     require_reader(user=user, project_id=run.project_id)
     return run
 

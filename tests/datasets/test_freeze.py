@@ -52,6 +52,10 @@ def test_the_same_choice_is_the_same_dataset(project: Project) -> None:
         (Window(columns=("C",)), "has no column 'C'"),
         (Window(left_out={"A@9": "spike"}), "is no point"),
         (Window(left_out={"A": "spike"}), "is no point"),
+        (Window(left_out={"A@\u00b2": "spike"}), "is no point"),
+        (Window(start=5.0, end=1.0), "leaves nothing"),
+        (Window(columns=()), "leaves nothing"),
+        (Window(start=100.0), "leaves nothing"),
         (Window(left_out={"A@1": " "}), "without a reason"),
     ],
 )

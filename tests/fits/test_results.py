@@ -2,11 +2,14 @@
 
 from __future__ import annotations
 
+import csv
+import io
 from typing import Any
 
 import numpy as np
 import pytest
 
+from kinetics_db.datasets.services import Window, freeze_dataset
 from kinetics_db.engine.canonical import sha256_hex
 from kinetics_db.engine.fitting.problem import Constant, Settings, StartConcentration
 from kinetics_db.evidence.models import ModelEvidence
@@ -18,6 +21,7 @@ from kinetics_db.fits.services import request_fit, retry_fit
 from kinetics_db.jobs import services as jobs
 from kinetics_db.jobs.models import Job
 from kinetics_db.jobs.selectors import job_for
+from kinetics_db.jobs.services import request_stop
 from kinetics_db.mechanisms.services import write_version
 from kinetics_db.projects.services import set_verdict_thresholds
 from kinetics_db.provenance.selectors import chain_breaks
@@ -212,11 +216,67 @@ def test_fits_of_a_project_come_newest_first_with_their_results() -> None:
 
 def test_a_dataset_leaves_as_one_tidy_table() -> None:
     study = make_study()
-    rows = tidy_csv(user=study.user, dataset_id=study.dataset.pk).splitlines()
-    assert rows[0] == "run,run_revision,table,time_s,column,value,standard_uncertainty,unit"
-    assert len(rows) == 1 + 2 * 2 * 12
-    run, revision, table, time, column, value, sigma, unit = rows[1].split(",")
-    assert (run, revision, table, column, unit) == ("R-1", "1", "1", "A", "mol/L")
-    stored = study.tables[0].table
-    assert float(time) == stored.times[0] and float(value) == stored.column("A", "concentration")[0]
-    assert float(sigma) == pytest.approx(5e-5)
+    rows = list(csv.DictReader(io.StringIO(tidy_csv(user=study.user, dataset_id=study.dataset.pk))))
+    assert len(rows) == 2 * 2 * 12
+    first, stored = rows[0], study.tables[0].table
+    assert (first["run"], first["run_revision"], first["table"], first["column"]) == ("R-1", "1", "1", "A")
+    assert (first["unit"], first["left_out"]) == ("mol/L", "")
+    assert float(first["time_s"]) == stored.times[0]
+    assert float(first["value"]) == stored.column("A", "concentration")[0]
+    assert float(first["standard_uncertainty"]) == pytest.approx(5e-5)
+
+
+def test_the_tidy_table_holds_what_the_dataset_chooses() -> None:
+    study = make_study()
+    table = study.tables[0]
+    window = Window(end=150.0, columns=("A",), left_out={"A@0": "shaken late"})
+    dataset = freeze_dataset(
+        user=study.user,
+        project_id=study.project.pk,
+        name="part",
+        table_ids=[table.pk],
+        windows={table.pk: window},
+    )
+    rows = list(csv.DictReader(io.StringIO(tidy_csv(user=study.user, dataset_id=dataset.pk))))
+    assert {row["column"] for row in rows} == {"A"}
+    assert [float(row["time_s"]) for row in rows] == [t for t in table.table.times if t <= 150.0]
+    assert [row["left_out"] for row in rows] == ["shaken late"] + [""] * (len(rows) - 1)
+
+
+def test_points_outside_the_window_or_left_out_do_not_count_in_a_fit() -> None:
+    study = make_study()
+    ids = [table.pk for table in study.tables]
+    window = Window(end=150.0, columns=("A",), left_out={"A@0": "shaken late", "*@1": "bubble"})
+    dataset = freeze_dataset(
+        user=study.user, project_id=study.project.pk, name="part", table_ids=ids, windows={ids[0]: window}
+    )
+    content = fitted(study, dataset=dataset).content
+    inside = sum(1 for t in study.tables[0].table.times if t <= 150.0)
+    assert content["points"] == (inside - 2) + 24
+
+
+def test_a_stopped_fit_does_not_take_the_place_of_a_finished_one_in_the_grid() -> None:
+    study = make_study()
+    good = fitted(study)
+    fit = request_fit(
+        user=study.user,
+        dataset=study.dataset,
+        mechanism_version=study.version,
+        constants=[Constant("k", start=0.003)],
+    )
+    request_stop(job=job_for(kind="fit", subject_id=fit.pk))
+    retry_fit(user=study.user, fit=fit)
+    job = job_for(kind="fit", subject_id=fit.pk)
+    Job.objects.filter(pk=job.pk).update(stop_requested=True)
+    assert compute_now(fit).status == "stopped"
+    columns = grid_of(user=study.user, project_id=study.project.pk).columns
+    assert [column.fit_id for column in columns] == [good.fit_id]
+
+
+def test_one_text_under_two_names_is_fitted_and_shown_as_two_versions() -> None:
+    study = make_study()
+    twin = write_version(user=study.user, project_id=study.project.pk, name="twin", text="A --k--> B")
+    assert twin.digest == study.version.digest
+    first, second = fitted(study), fitted(study, mechanism_version=twin)
+    assert first.fit_id != second.fit_id
+    assert len(grid_of(user=study.user, project_id=study.project.pk).columns) == 2

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from datetime import timedelta
+from typing import Any
 
 import pytest
 from django.db.models.functions import Now
@@ -145,6 +146,31 @@ def test_a_waiting_job_whose_bell_nobody_heard_is_rung_again(
     monkeypatch.setattr(jobs, "send", lambda name, job_id: rung.append(job_id) or True)
     assert jobs.sweep().rung == 1
     assert jobs.sweep().rung == 0, "the bell was rung a moment ago"
-    Job.objects.filter(pk=job.pk).update(rung=Now() - timedelta(hours=1))
+    Job.objects.filter(pk=job.pk).update(ring_after=Now() - timedelta(hours=1))
     assert jobs.sweep().rung == 1
     assert rung == [job.pk, job.pk]
+
+
+def test_the_pause_between_bells_doubles_so_that_they_do_not_pile_up(
+    job: Job, monkeypatch: pytest.MonkeyPatch, settings: Any
+) -> None:
+    settings.JOB_RESEND_AFTER_SECONDS = 10.0
+    monkeypatch.setattr(jobs, "send", lambda name, job_id: True)
+    pauses = []
+    for _ in range(6):
+        Job.objects.filter(pk=job.pk).update(ring_after=None)
+        before = Job.objects.annotate(now=Now()).get(pk=job.pk).now
+        jobs.sweep()
+        job.refresh_from_db()
+        assert job.ring_after is not None
+        pauses.append(round((job.ring_after - before).total_seconds(), -1))
+    assert pauses == [10, 20, 40, 80, 80, 80]
+
+
+def test_an_error_text_that_no_database_takes_is_kept_as_far_as_it_can_be(job: Job) -> None:
+    claim = jobs.claim_job(job.pk)
+    assert claim
+    jobs.give_back(claim, reason="bad \x00 byte, half \ud800 character " + "x" * 1000)
+    job.refresh_from_db()
+    assert job.state == Job.State.WAITING
+    assert job.message.startswith("bad   byte, half ? character")

@@ -98,10 +98,26 @@ def test_a_file_that_cannot_be_read_leaves_nothing_behind(run: Run, data: bytes,
     assert AuditEntry.objects.count() == before
 
 
-@pytest.mark.parametrize("name", ["", "a/b.txt", "x" * 256, "tab\there"])
-def test_a_file_name_that_could_be_a_path_is_refused(run: Run, name: str) -> None:
-    with pytest.raises(InvalidInput, match="no usable name"):
+@pytest.mark.parametrize(
+    ("name", "says"),
+    [
+        ("", "needs a name"),
+        ("a/b.txt", "is a path"),
+        ("a\\b", "is a path"),
+        ("x" * 256, "at most 255"),
+        ("a\tb", "U\\+0009"),
+    ],
+)
+def test_a_file_name_that_could_be_a_path_is_refused(run: Run, name: str, says: str) -> None:
+    with pytest.raises(InvalidInput, match=says):
         store(run, name=name)
+
+
+def test_a_file_that_is_too_large_is_refused_before_it_is_parsed(run: Run, settings: Any) -> None:
+    settings.MAX_FILE_BYTES = 10
+    for take in (preview_file, lambda **given: store_file(**given, name="x.txt")):
+        with pytest.raises(InvalidInput, match="at most 10 bytes"):
+            take(user=run.created_by, run=run, data=FILE)
 
 
 def test_an_unknown_option_is_refused(run: Run) -> None:

@@ -75,7 +75,16 @@ def test_the_same_prediction_is_kept_once() -> None:
 
 
 @pytest.mark.parametrize(
-    "changes", [{"start": {"Q": 1.0}}, {"start": {"A": -1.0}}, {"times": [5.0, 1.0]}, {"times": []}]
+    "changes",
+    [
+        {"start": {"Q": 1.0}},
+        {"start": {"A": -1.0}},
+        {"times": [5.0, 1.0]},
+        {"times": []},
+        {"start": {"A": "1"}},
+        {"place": "nowhere"},
+        {"times": [1.0] * 6000},
+    ],
 )
 def test_impossible_conditions_are_refused(changes: dict[str, object]) -> None:
     study = make_study()

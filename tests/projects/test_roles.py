@@ -98,6 +98,8 @@ def test_an_account_that_exists_keeps_its_password() -> None:
     assert password and user.check_password(password)
     assert ensure_user(username="ann") == (user, None)
     set_password(username="ann", password="another long phrase 7")
+    with pytest.raises(InvalidInput):
+        set_password(username="ann", password="")
     user.refresh_from_db()
     assert user.check_password("another long phrase 7")
 
@@ -107,8 +109,8 @@ def test_what_happens_to_an_account_is_in_the_audit_trail() -> None:
     set_password(username="ann", password="another long phrase 7")
     told = AuditEntry.objects.order_by("sequence").values_list("actor", "verb", "record_kind", "record_label")
     assert list(told) == [
-        ("ann", "made", "account", "ann"),
-        ("ann", "changed password", "account", "ann"),
+        ("command line", "made", "account", "ann"),
+        ("command line", "changed password", "account", "ann"),
     ]
     call_command("createsuperuser", "--noinput", "--username", "eve", "--email", "eve@example.org")
     assert AuditEntry.objects.filter(verb="made", record_label="eve").count() == 1
@@ -128,3 +130,13 @@ def test_only_an_owner_sets_thresholds() -> None:
         set_verdict_thresholds(
             user=make_member(project, "contributor"), project=project, thresholds={"pull": 4}
         )
+
+
+def test_a_user_name_is_kept_as_the_login_form_reads_it() -> None:
+    assert create_user(username="\ufb01ona", password="a long enough phrase 9").username == "fiona"
+
+
+def test_a_bad_user_name_is_told_of_the_user_name() -> None:
+    with pytest.raises(InvalidInput) as refused:
+        create_user(username="with space", password="a long enough phrase 9")
+    assert refused.value.problems[0].field == "username"

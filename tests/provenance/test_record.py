@@ -5,6 +5,7 @@ from __future__ import annotations
 import pytest
 from django.db import transaction
 
+from kinetics_db.accounts.services import create_user
 from kinetics_db.engine.canonical import canonical_json, sha256_hex
 from kinetics_db.errors import Conflict
 from kinetics_db.mechanisms.models import MechanismVersion
@@ -12,7 +13,7 @@ from kinetics_db.mechanisms.services import write_version
 from kinetics_db.provenance import writing
 from kinetics_db.provenance.models import AuditEntry, AuditHead, Derivation
 from kinetics_db.provenance.selectors import chain_breaks, lineage
-from tests.factories.people import make_project
+from tests.factories.people import make_member, make_project
 
 pytestmark = pytest.mark.django_db
 
@@ -126,10 +127,55 @@ def test_a_nested_frame_appends_with_the_outermost_one() -> None:
     assert not transaction.get_connection().needs_rollback
 
 
-def _raw_update(model, sequence: int, field: str, value: str) -> None:  # type: ignore[no-untyped-def]
+def _raw_update(model, sequence: int, field: str, value: object) -> None:  # type: ignore[no-untyped-def]
     from django.db import connection
 
     with connection.cursor() as cursor:
         cursor.execute(
             f"UPDATE {model._meta.db_table} SET {field} = %s WHERE sequence = %s", [value, sequence]
         )
+
+
+def test_a_write_that_was_given_up_inside_another_leaves_no_entry() -> None:
+    project, _, _ = two_versions()
+    user = project.created_by
+    before = AuditEntry.objects.count()
+    with writing.recording(user=user):
+        with pytest.raises(ZeroDivisionError), writing.recording(user=user):
+            write_version(user=user, project_id=project.pk, name="gone", text="A --k--> C")
+            raise ZeroDivisionError
+        write_version(user=user, project_id=project.pk, name="kept", text="A --k--> C")
+    labels = AuditEntry.objects.filter(sequence__gt=before).values_list("record_label", flat=True)
+    assert sorted(labels) == ["kept", "kept v1"]
+    assert chain_breaks() == []
+
+
+def test_each_entry_names_who_acted_in_its_own_frame() -> None:
+    project, _, _ = two_versions()
+    other = make_member(project, "contributor")
+    with writing.recording(user=project.created_by):
+        write_version(user=other, project_id=project.pk, name="theirs", text="A --k--> C")
+    entry = AuditEntry.objects.get(record_label="theirs v1")
+    assert (entry.actor, entry.user) == (other.get_username(), other)
+
+
+def test_an_account_made_for_somebody_names_its_maker() -> None:
+    owner = make_project().created_by
+    with writing.recording(user=owner):
+        create_user(username="newcomer", password="a long enough phrase 9")
+    assert AuditEntry.objects.get(record_label="newcomer").actor == owner.get_username()
+
+
+def test_a_missing_head_is_found_and_stops_further_writes() -> None:
+    project, _, _ = two_versions()
+    AuditHead.objects.all().delete()
+    assert chain_breaks() == [f"the chain's head is missing, the last entry is {AuditEntry.objects.count()}"]
+    with pytest.raises(Conflict, match="end of the audit chain is missing"):
+        write_version(user=project.created_by, project_id=project.pk, name="a", text="A --k--> C")
+
+
+def test_a_changed_user_of_an_audit_entry_is_found() -> None:
+    project, _, _ = two_versions()
+    other = make_member(project, "reader")
+    _raw_update(AuditEntry, 3, "user_id", other.pk)
+    assert chain_breaks() == ["audit entry 3 has been changed"]

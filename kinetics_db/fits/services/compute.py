@@ -22,7 +22,7 @@ from kinetics_db.fits.request import FitRequest
 from kinetics_db.jobs import services as jobs
 from kinetics_db.jobs.services import Claim
 from kinetics_db.mechanisms.selectors import network_of
-from kinetics_db.provenance.services import save_record
+from kinetics_db.provenance.services import Prepared, save_record
 
 RESULT_FORMAT = "ratewright/fit-result/1"
 SECONDS_BETWEEN_HEARTBEATS = 0.5
@@ -88,8 +88,11 @@ def compute_fit(fit: Fit, claim: Claim) -> Computed:
     return Computed(fit, request, network, data, outcome)
 
 
-def store_result(computed: Computed, *, token: int) -> FitResult:
-    """Store an outcome; must run inside `recording()` and the transaction that ends the job."""
+def store_result(computed: Computed, content: Prepared, *, token: int) -> FitResult:
+    """Store an outcome; must run inside `recording()` and the transaction that ends the job.
+
+    ``content`` is `result_content`, prepared before the transaction began.
+    """
     fit, outcome = computed.fit, computed.outcome
     units = _units(computed)
     result = save_record(
@@ -102,7 +105,7 @@ def store_result(computed: Computed, *, token: int) -> FitResult:
             seconds=outcome.seconds,
         ),
         user=fit.created_by,
-        content=result_content(computed),
+        content=content,
         parents=[fit],
         project_id=fit.project_id,
         label=f"{fit.mechanism_version} on {fit.dataset}",
@@ -114,7 +117,7 @@ def store_result(computed: Computed, *, token: int) -> FitResult:
             name=p.name[:200],
             constant=p.base[:120],
             where=(p.place or "")[:120],
-            value=p.value,
+            value=number(p.value),
             standard_error=number(p.standard_error),
             low=number(p.lower),
             high=number(p.upper),

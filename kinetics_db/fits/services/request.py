@@ -21,6 +21,7 @@ from kinetics_db.jobs.selectors import job_for
 from kinetics_db.mechanisms.models import MechanismVersion
 from kinetics_db.mechanisms.selectors import network_of
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
 
 JOB_KIND = "fit"
@@ -65,14 +66,18 @@ def request_fit(
     )
     content = {
         "format": FORMAT,
-        "dataset": dataset.digest,
-        "mechanism": mechanism_version.digest,
+        # With names and numbers: 'which version explains which data' is asked of versions, not of texts.
+        "dataset": {"name": dataset.name, "version": dataset.number, "digest": dataset.digest},
+        "mechanism": {
+            "name": mechanism_version.mechanism.name,
+            "version": mechanism_version.number,
+            "digest": mechanism_version.digest,
+        },
         "engine": ENGINE_VERSION,
         **request.to_plain(),
     }
     with recording(user=user):
-        # One person's project row in line: two equal requests at once must find each other.
-        type(dataset).objects.select_for_update().filter(pk=dataset.pk).first()
+        lock_project(project_id)  # two equal requests at once must find each other
         fit = Fit.objects.filter(project_id=project_id, digest=digest(content)).first()
         if fit is None:
             fit = save_record(

@@ -6,22 +6,25 @@ from django.db.models.functions import Now
 
 from kinetics_db.accounts.models import User
 from kinetics_db.engine.canonical import digest
+from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.errors import Conflict, InvalidInput
 from kinetics_db.projects.selectors import require_contributor
+from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
 from kinetics_db.runs.entry import RunEntry
 from kinetics_db.runs.models import Run, RunCharge, RunCondition, RunRevision
-from kinetics_db.runs.services.snapshot import Resolved, resolve
+from kinetics_db.runs.services.snapshot import Resolved, cleaned, resolve
 
 
 def log_run(*, user: User, project_id: int, entry: RunEntry) -> RunRevision:
     """Log a new run as its first revision. InvalidInput holds every problem; nothing is stored then."""
     require_contributor(user=user, project_id=project_id)
+    entry = cleaned(entry)
     with recording(user=user):
-        codes = list(Run.objects.filter(project_id=project_id).values_list("code", flat=True))
-        if entry.code in codes:
+        lock_project(project_id)
+        if Run.objects.filter(project_id=project_id, code=entry.code).exists():
             raise InvalidInput(f"there is a run '{entry.code}' already", field="code", cure="another code")
-        resolved = resolve(entry, project_id=project_id, known_codes=codes)
+        resolved = resolve(entry, project_id=project_id)
         run = Run.objects.create(project_id=project_id, code=entry.code, created_by=user)
         note_write(verb="made", record_kind="run", record_id=run.pk, project_id=project_id, label=run.code)
         return _next_revision(run, resolved, user=user, reason="", latest=None)
@@ -34,8 +37,11 @@ def revise_run(*, user: User, run: Run, entry: RunEntry, based_on: int, reason: 
     A sealed run asks for a reason. An entry that changes nothing gives the newest revision back.
     """
     require_contributor(user=user, project_id=run.project_id)
+    entry = cleaned(entry)
+    reason = plain_text(reason, field="reason")
     with recording(user=user):
-        run = Run.objects.select_for_update().get(pk=run.pk)
+        lock_project(run.project_id)
+        run = Run.objects.get(pk=run.pk)
         if entry.code != run.code:
             raise InvalidInput("a run keeps its code", field="code", cure=run.code)
         latest = run.revisions.get(number=run.latest_number)
@@ -43,10 +49,9 @@ def revise_run(*, user: User, run: Run, entry: RunEntry, based_on: int, reason: 
             raise Conflict(
                 f"run {run.code} was changed meanwhile: you saw revision {based_on}, the newest is {latest.number}"
             )
-        if run.sealed and not reason.strip():
+        if run.sealed and not reason:
             raise InvalidInput("the run is sealed", field="reason", cure="say why it is amended")
-        codes = list(Run.objects.filter(project_id=run.project_id).values_list("code", flat=True))
-        resolved = resolve(entry, project_id=run.project_id, known_codes=codes)
+        resolved = resolve(entry, project_id=run.project_id)
         if digest(resolved.content) == latest.digest:
             return latest
         return _next_revision(run, resolved, user=user, reason=reason, latest=latest)
@@ -56,6 +61,7 @@ def seal_run(*, user: User, run: Run) -> Run:
     """Declare a run complete: later changes are amendments with a reason."""
     require_contributor(user=user, project_id=run.project_id)
     with recording(user=user):
+        lock_project(run.project_id)
         if not Run.objects.filter(pk=run.pk, sealed__isnull=True).update(sealed=Now()):
             raise Conflict(f"run {run.code} is sealed already")
         note_write(

@@ -6,17 +6,18 @@ The snapshot holds what was typed (``entered``) and what the engine reads (``sta
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from datetime import datetime
 from typing import Any
 
 from kinetics_db.engine import amounts
-from kinetics_db.engine.units import convert, kind_of_unit, to_stored
+from kinetics_db.engine.plain_text import plain_text
+from kinetics_db.engine.units import STORED_UNITS, convert, kind_of_unit, to_stored
 from kinetics_db.errors import InvalidInput, NotFound, Problem
 from kinetics_db.materials.selectors import compound_named, lot_named, stock_named
 from kinetics_db.materials.sources import Source
 from kinetics_db.runs.entry import CONTROL_KINDS, SECTIONS, Amount, ChargeEntry, RunEntry
+from kinetics_db.runs.models import Run
 
 FORMAT = "ratewright/run/1"
 
@@ -42,12 +43,59 @@ class Resolved:
         return found
 
 
-def resolve(entry: RunEntry, *, project_id: int, known_codes: Sequence[str]) -> Resolved:
+def cleaned(entry: RunEntry) -> RunEntry:
+    """The entry with every text in its stored form; InvalidInput names what cannot be stored."""
+    problems: list[Problem] = []
+
+    def text(value: object, field_name: str, longest: int, *, lines: bool = False) -> str:
+        with _collected(problems, ""):
+            return plain_text(value, field=field_name, longest=longest, lines=lines)
+        return ""
+
+    def name(value: str | None, position: int) -> str | None:
+        return None if value is None else text(value, f"charges.{position}", 80)
+
+    charges = [
+        replace(
+            charge,
+            compound=name(charge.compound, i),
+            lot=name(charge.lot, i),
+            stock=name(charge.stock, i),
+            note=text(charge.note, f"charges.{i}.note", 1000, lines=True),
+        )
+        for i, charge in enumerate(entry.charges, start=1)
+    ]
+    sections = {
+        section: {
+            key: text(value, f"sections.{section}.{key}", 2000, lines=True)
+            if isinstance(value, str)
+            else value
+            for key, value in values.items()
+        }
+        for section, values in entry.sections.items()
+    }
+    clean = replace(
+        entry,
+        code=text(entry.code, "code", 80),
+        charges=charges,
+        atmosphere=text(entry.atmosphere, "atmosphere", 200),
+        started=text(entry.started, "started", 40),
+        replicate_of=text(entry.replicate_of, "replicate_of", 80),
+        control_kind=text(entry.control_kind, "control_kind", 80),
+        notes=text(entry.notes, "notes", 100_000, lines=True),
+        sections=sections,
+    )
+    if problems:
+        raise InvalidInput(problems)
+    return clean
+
+
+def resolve(entry: RunEntry, *, project_id: int) -> Resolved:
     """Check an entry, look up its materials and compute start concentrations with their causes of error.
 
     InvalidInput holds every problem found, each with its field ('charges.2.unit' counts charges from 1).
     """
-    problems = _plain_problems(entry, known_codes)
+    problems = _plain_problems(entry, project_id)
     sources = [_source(charge, i, project_id, problems) for i, charge in enumerate(entry.charges, start=1)]
     if problems:
         raise InvalidInput(problems)
@@ -84,7 +132,7 @@ def resolve(entry: RunEntry, *, project_id: int, known_codes: Sequence[str]) -> 
         else None,
         "temperature": temperature,
         "first_contact": first_contact,
-        "atmosphere": entry.atmosphere.strip(),
+        "atmosphere": entry.atmosphere,
         "started": entry.started,
         "replicate_of": entry.replicate_of,
         "control_kind": entry.control_kind,
@@ -95,9 +143,9 @@ def resolve(entry: RunEntry, *, project_id: int, known_codes: Sequence[str]) -> 
     return Resolved(content, sources)
 
 
-def _plain_problems(entry: RunEntry, known_codes: Sequence[str]) -> list[Problem]:
+def _plain_problems(entry: RunEntry, project_id: int) -> list[Problem]:
     found = []
-    if not entry.code.strip() or len(entry.code) > 80:
+    if not entry.code:
         found.append(Problem("the run has no code", field="code", cure="1 to 80 characters"))
     if not entry.charges:
         found.append(Problem("nothing was put in", field="charges", cure="at least one charge"))
@@ -109,7 +157,8 @@ def _plain_problems(entry: RunEntry, known_codes: Sequence[str]) -> list[Problem
                 cure=", ".join(k for k in CONTROL_KINDS if k),
             )
         )
-    if entry.replicate_of and (entry.replicate_of not in known_codes or entry.replicate_of == entry.code):
+    others = Run.objects.filter(project_id=project_id).exclude(code=entry.code)
+    if entry.replicate_of and not others.filter(code=entry.replicate_of).exists():
         found.append(
             Problem(
                 f"'{entry.replicate_of}' is no other run of this project",
@@ -274,9 +323,8 @@ def _sections(entry: RunEntry, problems: list[Problem]) -> dict[str, Any]:
                 with _collected(problems, where):
                     if kind_of_unit(value.unit) != kind:
                         raise InvalidInput(f"'{value.unit}' is no unit of {kind}")
-                    stored = (
-                        value.value if kind == "pressure" else float(to_stored(value.value, value.unit, kind))
-                    )
+                    unit = "Pa" if kind == "pressure" else STORED_UNITS[kind]
+                    stored = float(convert(value.value, value.unit, unit))
                     kept.setdefault(name, {})[key] = {"value": stored, "entered": _plain(value)}
     return kept
 
@@ -294,7 +342,7 @@ class _collected:  # noqa: N801  reads as a word in 'with'
         if not isinstance(error, InvalidInput):
             return False
         for p in error.problems:
-            field_name = f"{self.where}.{p.field}" if p.field else self.where
+            field_name = ".".join(part for part in (self.where, p.field) if part)
             self.problems.append(Problem(p.message, p.line, p.column, field_name, p.cure, p.severity))
         return True
 
