@@ -1,7 +1,7 @@
 # `make help` lists what there is. Works with GNU make 3.81 (macOS) and newer.
 
-# The environment's own Python once there is one; name another with PYTHON=python3.12.
-PYTHON ?= $(if $(wildcard .venv/bin/python),.venv/bin/python,python3)
+# The environment's own Python once there is one that runs; name another with PYTHON=python3.12.
+PYTHON ?= $(shell if .venv/bin/python -c '' 2>/dev/null; then echo .venv/bin/python; else echo python3; fi)
 PORT ?= 8765
 JOBS ?= $(shell getconf _NPROCESSORS_ONLN 2>/dev/null || echo 2)
 # More arguments for pytest, for instance ARGS="-k alpha".
@@ -23,6 +23,10 @@ export OPENBLAS_NUM_THREADS := 1
 export OMP_NUM_THREADS := 1
 export MKL_NUM_THREADS := 1
 export PORT
+# Invented data stay apart from one's own, unless a folder is named.
+ifneq ($(filter demo,$(MAKECMDGOALS)),)
+export RATEWRIGHT_VAR := $(or $(RATEWRIGHT_VAR),$(CURDIR)/var/demo)
+endif
 
 .DEFAULT_GOAL := help
 .NOTPARALLEL:
@@ -37,12 +41,12 @@ help: ## list what can be made
 demo: ## the whole job on an invented project, then the web server (ONCE=1: end after the grid)
 	@$(PYTHON) $(PROCESSES)/preflight.py demo
 	@$(PYTHON) $(PROCESSES)/install.py runtime
-	@$(BIN)/python manage.py demo --port $(PORT) $(if $(ONCE),--once)
+	@$(BIN)/python manage.py demo --port $(or $(PORT),8765) $(if $(ONCE),--once)
 
 serve: ## the same installation without invented data, until Ctrl-C
 	@$(PYTHON) $(PROCESSES)/preflight.py serve
 	@$(PYTHON) $(PROCESSES)/install.py runtime
-	@$(BIN)/python manage.py serve --port $(PORT)
+	@$(BIN)/python manage.py serve --port $(or $(PORT),8765)
 
 test: static test-postgresql test-sqlite ## static checks and the whole suite, on real servers
 

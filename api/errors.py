@@ -2,11 +2,9 @@
 
 from __future__ import annotations
 
+from http import HTTPStatus
 from typing import Any
 
-from django.core.exceptions import PermissionDenied
-from django.http import Http404
-from rest_framework import exceptions
 from rest_framework.response import Response
 from rest_framework.views import exception_handler
 
@@ -19,6 +17,7 @@ STATUS: dict[type[RatewrightError], tuple[int, str]] = {
     Conflict: (409, "In conflict with the record as it is now"),
     Unavailable: (503, "A service that this needs does not answer"),
 }
+TITLES = dict(STATUS.values())
 
 
 def problem_details(error: Exception, context: dict[str, Any]) -> Response | None:
@@ -44,11 +43,7 @@ def problem_details(error: Exception, context: dict[str, Any]) -> Response | Non
             return Response(body, status=status, content_type="application/problem+json")
     response = exception_handler(error, context)
     if response is not None:
-        title = (
-            "Not found" if isinstance(error, Http404) else str(getattr(error, "default_detail", "Refused"))
-        )
-        if isinstance(error, PermissionDenied | exceptions.PermissionDenied):
-            title = "Not permitted"
+        title = TITLES.get(response.status_code) or HTTPStatus(response.status_code).phrase
         detail = response.data.get("detail", title) if isinstance(response.data, dict) else response.data
         response.data = {"title": title, "status": response.status_code, "detail": detail}
         response.content_type = "application/problem+json"

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import sys
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Collection, Sequence
 from typing import TYPE_CHECKING, TextIO
 
 from tqdm import tqdm
@@ -27,6 +27,12 @@ def try_again(fits: Sequence[Fit], *, user: User) -> None:
     for fit in fits:
         if job_for(kind="fit", subject_id=fit.pk).state in ENDED_BADLY:
             retry_fit(user=user, fit=fit)
+
+
+def still_to_do(fits: Sequence[Fit], *, known: Collection[int]) -> list[Fit]:
+    """Fits that are asked for now or not done yet; ``known`` are the ids of those asked for before."""
+    jobs = jobs_for(kind="fit", subject_ids=[fit.pk for fit in fits])
+    return [fit for fit in fits if fit.pk not in known or jobs[fit.pk].state != "done"]
 
 
 def follow(
@@ -68,12 +74,17 @@ def follow(
                 if job.state not in OPEN:
                     waiting.remove(fit_id)
                     with tqdm.external_write_mode(file=stream):
-                        say(f"fit of '{names[fit_id]}': {job.message or job.state}")
+                        say(f"fit of '{names[fit_id]}': {_end(job.state, job.message)}")
             if waiting:
                 sleep(SECONDS_BETWEEN_LOOKS)
     finally:
         for bar in bars.values():
             bar.close()
+
+
+def _end(state: str, message: str) -> str:
+    """'converged' is all that a good end needs; any other comes with its reason."""
+    return "converged" if message.startswith("converged:") else message or state
 
 
 def _now(state: str, message: str) -> str:

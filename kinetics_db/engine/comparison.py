@@ -27,13 +27,15 @@ class ModelEvidence:
     n : points
     k : effective number of parameters, estimated sigmas included
     minus_two_log_likelihood : r' C^-1 r + ln det C
-    aicc : None when n <= k + 1 (see `why_no_aicc`)
-    bic
+    sum_of_squared_pulls : over all parameters with a prior
+    aicc : of -2 ln L and the squared pulls together; None when n <= k + 1 (see `why_no_aicc`)
+    bic : of the same sum
     """
 
     n: int
     k: float
     minus_two_log_likelihood: float
+    sum_of_squared_pulls: float
     aicc: float | None
     bic: float
     why_no_aicc: str = ""
@@ -46,9 +48,9 @@ class Comparison:
     Attributes
     ----------
     evidence : by model name
-    differences : AICc less the lowest AICc; None where a model has none
+    differences : AICc less the lowest AICc; None where a model has none or its fit did not converge
     weights : Akaike weights, or None with the reason in `why_no_weights`
-    best : name of the model with the lowest AICc, None when no model has one
+    best : name of the model with the lowest AICc among the fits that converged, None without one
     """
 
     evidence: Mapping[str, ModelEvidence]
@@ -60,10 +62,11 @@ class Comparison:
 
 @dataclass(frozen=True)
 class LikelihoodRatio:
-    """Nested models: fall of -2 ln L, the parameters that it took, and the chance of as large a fall."""
+    """Nested models: fall of -2 ln L and squared pulls together, the additional free parameters that it took,
+    and the chance of as large a fall."""
 
     statistic: float
-    degrees_of_freedom: float
+    degrees_of_freedom: int
     p: float
 
 
@@ -81,6 +84,21 @@ def effective_parameters(fit: FitOutcome) -> float:
         else:
             total += min(max(1.0 - float(precision * fit.covariance[i, i]), 0.0), 1.0)
     return total
+
+
+def sum_of_squared_pulls(fit: FitOutcome) -> float:
+    """Sum of ((theta - mean) / sd)^2 over the parameters with a prior, on the fitted scale.
+
+    It is what `minus_two_log_prior` holds beside the normalisation of the priors, which is the same for every
+    model of the same causes of error.
+    """
+    precision = fit.prior_precision[fit.prior_precision > 0.0]
+    return max(fit.minus_two_log_prior + float(np.sum(np.log(precision))), 0.0)
+
+
+def _penalised(fit: FitOutcome) -> float:
+    """-2 ln L and the squared pulls: a model pays for bending what was weighed."""
+    return fit.minus_two_log_likelihood + sum_of_squared_pulls(fit)
 
 
 def aicc(minus_two_log_likelihood: float, n: int, k: float) -> float | None:
@@ -107,21 +125,30 @@ def akaike_weights(values: Sequence[float]) -> list[float]:
 
 
 def evidence_of_model(fit: FitOutcome) -> ModelEvidence:
-    """AICc and BIC of a fit. InvalidInput when the fit has no result."""
+    """AICc and BIC of a fit, of -2 ln L and the squared pulls together. InvalidInput without a result."""
     if not fit.experiments:
         raise InvalidInput(f"the fit has no result to judge: {fit.message}")
     k, n = effective_parameters(fit), fit.n_points
-    likelihood = fit.minus_two_log_likelihood
-    value = aicc(likelihood, n, k)
+    penalised = _penalised(fit)
+    value = aicc(penalised, n, k)
     why = "" if value is not None else f"{n} points are too few for {k:.3g} parameters"
-    return ModelEvidence(n, k, likelihood, value, bic(likelihood, n, k), why)
+    return ModelEvidence(
+        n,
+        k,
+        fit.minus_two_log_likelihood,
+        sum_of_squared_pulls(fit),
+        value,
+        bic(penalised, n, k),
+        why,
+    )
 
 
 def compare(fits: Mapping[str, FitOutcome], thresholds: Thresholds | None = None) -> Comparison:
     """Models fitted to the same points with the same weights, side by side.
 
-    No Akaike weights are given when the residuals of the best model still run in one direction for too long
-    (runs test), since -2 ln L then counts the same information more than once.
+    A fit that did not converge is not ranked, and no Akaike weights are given then: its -2 ln L is not that of
+    its model. None are given either when the residuals of the best model still run in one direction for too
+    long (runs test), since -2 ln L then counts the same information more than once.
 
     Raises
     ------
@@ -137,14 +164,18 @@ def compare(fits: Mapping[str, FitOutcome], thresholds: Thresholds | None = None
         if difference:
             what = f"{names[0]} and {name} were not fitted to the same data: {difference}"
             raise InvalidInput(what, cure="fits of one dataset with one error model")
-    known = {name: e.aicc for name, e in evidence.items() if e.aicc is not None}
+    unfinished = [name for name in names if fits[name].status != "converged"]
+    known = {n: e.aicc for n, e in evidence.items() if e.aicc is not None and n not in unfinished}
     best = min(known, key=lambda name: known[name]) if known else None
     differences = {
         name: (known[name] - known[best] if best is not None and name in known else None) for name in names
     }
-    if len(known) < len(names):
-        missing = ", ".join(name for name in names if name not in known)
-        return Comparison(evidence, differences, None, best, f"AICc is undefined for {missing}")
+    reasons = [f"{name} is {fits[name].status}: {fits[name].message}" for name in unfinished]
+    undefined = [name for name in names if evidence[name].aicc is None]
+    if undefined:
+        reasons.append(f"AICc is undefined for {', '.join(undefined)}")
+    if reasons:
+        return Comparison(evidence, differences, None, best, "; ".join(reasons))
     limits = thresholds or Thresholds()
     if best is not None and _autocorrelated(fits[best], limits):
         why = f"the residuals of {best} are correlated in time; compare by leaving runs out instead"
@@ -156,23 +187,28 @@ def compare(fits: Mapping[str, FitOutcome], thresholds: Thresholds | None = None
 def likelihood_ratio(
     full: FitOutcome, reduced: FitOutcome, *, constant_at_zero: bool = False
 ) -> LikelihoodRatio:
-    """Chance of as large a fall of -2 ln L if the reduced model were true (Wilks 1938).
+    """Chance of as large a fall of -2 ln L and squared pulls together if the reduced model were true (Wilks 1938).
 
-    With one extra constant whose reduced value, zero, is the edge of its range, p is half as large
+    The degrees of freedom are the additional free parameters, those with a prior counted as any other. With one
+    extra constant whose reduced value, zero, is the edge of its range, p is half as large
     (Self & Liang, J. Am. Statist. Assoc. 82 (1987) 605).
 
     Raises
     ------
     InvalidInput
-        When the data differ or the full model has no more parameters than the reduced one.
+        When the data differ, a fit did not converge, or the full model has no more parameters than the
+        reduced one.
     """
+    for which, fit in (("full", full), ("reduced", reduced)):
+        if fit.status != "converged":
+            raise InvalidInput(f"the fit of the {which} model is {fit.status}: {fit.message}")
     difference = _difference_of_data(full, reduced)
     if difference:
         raise InvalidInput(f"the models were not fitted to the same data: {difference}")
-    freedom = effective_parameters(full) - effective_parameters(reduced)
+    freedom = len(full.parameters) - len(reduced.parameters)
     if freedom <= 0:
         raise InvalidInput("the full model has no more parameters than the reduced one")
-    statistic = max(reduced.minus_two_log_likelihood - full.minus_two_log_likelihood, 0.0)
+    statistic = max(_penalised(reduced) - _penalised(full), 0.0)
     p = float(stats.chi2.sf(statistic, freedom))
     return LikelihoodRatio(statistic, freedom, p / 2.0 if constant_at_zero else p)
 

@@ -5,7 +5,7 @@ All numbers come from a `FitOutcome`; nothing is integrated again.
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 from typing import Literal
 
@@ -13,8 +13,9 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
-from kinetics_db.engine.fitting.outcome import ExperimentFit, FitOutcome, NuisancePull
-from kinetics_db.engine.fitting.uncertainty import curvature
+from kinetics_db.engine.fitting.blocks import curvature_and_leverage
+from kinetics_db.engine.fitting.outcome import ExperimentFit, FitOutcome
+from kinetics_db.engine.fitting.problem import Settings
 from kinetics_db.engine.residual_tests import durbin_watson, holm, runs_test
 from kinetics_db.errors import InvalidInput
 
@@ -23,6 +24,8 @@ Verdict = Literal["agrees", "consistent", "strained", "disagrees", "not tested"]
 FROM_BEST_TO_WORST: tuple[Verdict, ...] = ("not tested", "agrees", "consistent", "strained", "disagrees")
 TOO_LARGE = "uncertainties too large to test"
 SMALLEST_FREEDOM = 0.5  # degrees of freedom below which a run is used up by its own parameters
+# Multiple of the relative tolerance up to which a residual is the integrator's; a fitted sigma has the same floor.
+INTEGRATION_ERROR = 100.0
 
 
 @dataclass(frozen=True)
@@ -33,9 +36,9 @@ class Thresholds:
     ----------
     chi_square_p, runs_p : smallest Holm-adjusted p that still counts as agreement
     nrmse : largest normalised root mean square error that makes a failed test 'strained' only
-    pull : largest nuisance pull, in standard deviations of its prior
+    pull : largest pull of a nuisance parameter that the run uses, in standard deviations of its prior
     too_good_p : chi-square p above which the uncertainties are too large to test anything
-    fewest_points_for_runs : fewest points for a runs test
+    fewest_points_for_runs : fewest points for a runs test, those that the model meets exactly not counted
     """
 
     chi_square_p: float = 0.01
@@ -79,14 +82,28 @@ class ObservableEvidence:
 
 
 @dataclass(frozen=True)
+class PullOnRun:
+    """A nuisance parameter that a run uses: its value, and how far it is from its prior in prior deviations.
+
+    `used_by` counts the experiments that share it.
+    """
+
+    name: str
+    owner: str
+    value: float
+    pull: float
+    used_by: int
+
+
+@dataclass(frozen=True)
 class RunEvidence:
-    """One run: its observables, the nuisance pulls that are its own, and the worst verdict."""
+    """One run: its observables, the pulls of all nuisance parameters it uses or owns, and the worst verdict."""
 
     experiment: str
     verdict: Verdict
     worst_observable: str | None
     observables: tuple[ObservableEvidence, ...]
-    pulls: tuple[NuisancePull, ...]
+    pulls: tuple[PullOnRun, ...]
     thresholds: Thresholds
     note: str = ""
 
@@ -107,13 +124,29 @@ class _Raw:
     largest: float | None = None
 
 
-def evidence_of_runs(fit: FitOutcome, thresholds: Thresholds | None = None) -> tuple[RunEvidence, ...]:
+def evidence_of_runs(
+    fit: FitOutcome,
+    thresholds: Thresholds | None = None,
+    on_work: Callable[[], None] | None = None,
+    *,
+    rtol: float = Settings.rtol,
+) -> tuple[RunEvidence, ...]:
     """Verdict on every run of a fit, in its order.
 
     An observable *agrees* when the chi-square and the runs test both have p >= 0.01, *strained* when one
-    fails but the error stays within 5 % of the span or when a nuisance pull of the run exceeds 3, and
-    *disagrees* otherwise. Chi-square counts only where sigma was known beforehand; with a fitted sigma the
-    strongest word is *consistent*. p-values are Holm-adjusted, each test and observable over the runs.
+    fails but the error stays within 5 % of the span or when the pull of a nuisance parameter that the run
+    uses, its own or shared, exceeds 3, and *disagrees* otherwise. Chi-square counts only where sigma was known
+    beforehand; with a fitted sigma the strongest word is *consistent*. p-values are Holm-adjusted, each test
+    and observable over the runs. A run whose own parameters take up its points is *strained* too when one of
+    them is pulled so far.
+
+    Parameters
+    ----------
+    fit : FitOutcome
+    thresholds : where the verdicts change
+    rtol : relative tolerance that the fit was integrated with; what it cannot tell from zero has no sign in
+        the runs test
+    on_work : called at least once a run, so that a caller who tells others of progress has something to tell
 
     Raises
     ------
@@ -123,50 +156,61 @@ def evidence_of_runs(fit: FitOutcome, thresholds: Thresholds | None = None) -> t
     limits = thresholds or Thresholds()
     if not fit.experiments:
         raise InvalidInput(f"the fit has no result to judge: {fit.message}")
-    leverage = _leverage_by_experiment(fit)
-    raw = [
-        _raw(e, column, h, limits)
-        for e, h in zip(fit.experiments, leverage, strict=True)
-        for column in range(len(e.observed_names))
-    ]
+    leverage = _leverage_by_experiment(fit, on_work)
+    raw: list[_Raw] = []
+    for e, h in zip(fit.experiments, leverage, strict=True):
+        raw += [_raw(e, column, h, limits, rtol) for column in range(len(e.observed_names))]
+        if on_work is not None:
+            on_work()
     chi = _adjusted_over_runs(raw, [r.chi_square_p for r in raw])
     runs = _adjusted_over_runs(raw, [r.runs_p for r in raw])
     known_sigma = fit.n_estimated_sigmas == 0
     found: list[RunEvidence] = []
-    for e in fit.experiments:
-        pulls = tuple(p for p in fit.pulls if p.owner == e.owner or p.experiments == (e.name,))
+    begin = 0
+    for e, pulls in zip(fit.experiments, _pulls_on_runs(fit), strict=True):
         pulled = any(abs(p.pull) > limits.pull for p in pulls)
         observables = tuple(
-            _judged(r, c, s, known_sigma=known_sigma, pulled=pulled, limits=limits)
-            for r, c, s in zip(raw, chi, runs, strict=True)
-            if r.experiment == e.name
+            _judged(raw[i], chi[i], runs[i], known_sigma=known_sigma, pulled=pulled, limits=limits)
+            for i in range(begin, begin + len(e.observed_names))
         )
+        begin += len(observables)
         found.append(_run(e.name, observables, pulls, limits))
     return tuple(found)
 
 
+def _pulls_on_runs(fit: FitOutcome) -> list[tuple[PullOnRun, ...]]:
+    """Of each experiment the pulls that it uses or that its run owns, in the fit's order."""
+    by_owner: dict[str, list[int]] = {}
+    by_user: dict[str, list[int]] = {}
+    found: list[PullOnRun] = []
+    for i, pull in enumerate(fit.pulls):
+        found.append(PullOnRun(pull.name, pull.owner, pull.value, pull.pull, len(pull.experiments)))
+        by_owner.setdefault(pull.owner, []).append(i)
+        for name in pull.experiments:
+            by_user.setdefault(name, []).append(i)
+    on_runs = (sorted({*by_owner.get(e.owner, []), *by_user.get(e.name, [])}) for e in fit.experiments)
+    return [tuple(found[i] for i in positions) for positions in on_runs]
+
+
 def _run(
-    name: str, observables: Sequence[ObservableEvidence], pulls: tuple[NuisancePull, ...], limits: Thresholds
+    name: str, observables: Sequence[ObservableEvidence], pulls: tuple[PullOnRun, ...], limits: Thresholds
 ) -> RunEvidence:
     if not observables:
         return RunEvidence(name, "not tested", None, (), pulls, limits)
     worst = max(observables, key=lambda o: FROM_BEST_TO_WORST.index(o.verdict))
-    return RunEvidence(
-        name,
-        worst.verdict,
-        worst.observable,
-        tuple(observables),
-        pulls,
-        limits,
-        "; ".join(_notes(observables)),
-    )
+    verdict, notes = worst.verdict, _notes(observables)
+    far = [p for p in pulls if abs(p.pull) > limits.pull]
+    notes += [f"{p.name}: a pull of {p.pull:.2g}" for p in far]
+    if far and verdict == "not tested":  # its parameters take up its points, and still one is bent
+        verdict = "strained"
+    return RunEvidence(name, verdict, worst.observable, tuple(observables), pulls, limits, "; ".join(notes))
 
 
 def _notes(observables: Sequence[ObservableEvidence]) -> list[str]:
     return [f"{o.observable}: {o.note}" for o in observables if o.note]
 
 
-def _leverage_by_experiment(fit: FitOutcome) -> list[Floats]:
+def _leverage_by_experiment(fit: FitOutcome, on_work: Callable[[], None] | None) -> list[Floats]:
     """Hat-matrix diagonal of the points of each experiment."""
     stacked = np.vstack([e.jacobian for e in fit.experiments])
     with np.errstate(divide="ignore"):
@@ -174,12 +218,13 @@ def _leverage_by_experiment(fit: FitOutcome) -> list[Floats]:
     fixed = np.array([p.at_bound for p in fit.parameters], dtype=bool)
     nothing = np.zeros(len(stacked))
     scales = np.array([1.0 if p.scale == "logarithmic" else max(abs(p.value), 1e-3) for p in fit.parameters])
-    found = curvature(stacked, nothing, prior_sds, np.zeros(len(prior_sds)), fixed, scales)
+    no_pulls = np.zeros(len(prior_sds))
+    _, leverage = curvature_and_leverage(stacked, nothing, prior_sds, no_pulls, fixed, scales, on_work)
     ends = np.cumsum([len(e.rows) for e in fit.experiments])
-    return np.split(found.leverage, ends[:-1])
+    return np.split(leverage, ends[:-1])
 
 
-def _raw(e: ExperimentFit, column: int, leverage: Floats, limits: Thresholds) -> _Raw:
+def _raw(e: ExperimentFit, column: int, leverage: Floats, limits: Thresholds, rtol: float) -> _Raw:
     name = e.observed_names[column]
     mine = e.columns == column
     n = int(mine.sum())
@@ -194,7 +239,10 @@ def _raw(e: ExperimentFit, column: int, leverage: Floats, limits: Thresholds) ->
     sigma = float(np.sqrt(np.mean(e.sigma[rows, column] ** 2)))
     span = float(observed.max() - observed.min())
     error = float(np.sqrt(np.mean(e.residuals[rows, column] ** 2)))
-    enough = n >= limits.fewest_points_for_runs
+    told_apart = np.where(
+        np.abs(e.residuals[rows, column]) > _integration_error(e, column, rtol), standardised, 0.0
+    )
+    enough = np.count_nonzero(told_apart) >= limits.fewest_points_for_runs
     return _Raw(
         e.name,
         name,
@@ -203,16 +251,25 @@ def _raw(e: ExperimentFit, column: int, leverage: Floats, limits: Thresholds) ->
         freedom,
         p,
         error / max(span, 5.0 * sigma) if max(span, sigma) > 0.0 else 0.0,
-        runs_test(standardised) if enough else None,
+        runs_test(told_apart) if enough else None,
         durbin_watson(standardised),
         float(standardised[np.argmax(np.abs(standardised))]),
     )
 
 
+def _integration_error(e: ExperimentFit, column: int, rtol: float) -> float:
+    """Size of a residual of one observable that may be the integrator's alone."""
+    points = np.maximum(np.isfinite(e.observed).sum(axis=0), 1)
+    sizes = np.sqrt(np.nansum(e.observed**2, axis=0) / points)
+    return INTEGRATION_ERROR * rtol * max(float(sizes[column]), 1e-3 * float(sizes.max()))
+
+
 def _adjusted_over_runs(raw: Sequence[_Raw], p: Sequence[float | None]) -> list[float | None]:
     adjusted: list[float | None] = [None] * len(raw)
-    for name in dict.fromkeys(r.observable for r in raw):
-        at = [i for i, r in enumerate(raw) if r.observable == name]
+    places: dict[str, list[int]] = {}
+    for i, r in enumerate(raw):
+        places.setdefault(r.observable, []).append(i)
+    for at in places.values():
         for i, value in zip(at, holm([p[i] for i in at]), strict=True):
             adjusted[i] = value
     return adjusted

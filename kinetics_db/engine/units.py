@@ -190,7 +190,9 @@ def _atom(match: re.Match[str], unit: str, *, alone: bool) -> _Unit:
     return _power(found, exponent)
 
 
-def _tokens(text: str, unit: str) -> list[re.Match[str]]:
+def _tokens(unit: str) -> list[re.Match[str]]:
+    text = re.sub(r"\bper\b", "/", _clean(unit))
+    text = re.sub(r" *([*·×./()]+) *", r"\1", text) if "a.u" not in text else text
     found: list[re.Match[str]] = []
     position = 0
     while position < len(text):
@@ -202,6 +204,31 @@ def _tokens(text: str, unit: str) -> list[re.Match[str]]:
     if sum(1 for m in found if not m["operator"]) > MAX_FACTORS:
         raise _refuse(unit, "too many factors in the unit")
     return found
+
+
+def _loose_number(matches: list[re.Match[str]]) -> bool:
+    """Whether a number stands a blank away from a factor, as in ``h 30``: a second value, not 30 hours."""
+    for i, match in enumerate(matches):
+        sides = [m["operator"] for m in (*matches[max(0, i - 1) : i], *matches[i + 1 : i + 2])]
+        whole = match["number"] == "1" and sides[-1:] == ["/"]  # M 1/s is M times 1/s
+        if match["number"] and not whole and any(side is not None and side.isspace() for side in sides):
+            return True
+    return False
+
+
+def numbers_in(unit: str) -> list[str]:
+    """Numbers among the factors of a unit, powers of ten too, and symbols with an exponent of 1 as in ``h01``.
+
+    Beside a value they would scale it unseen, or are a second value. InvalidInput for text that is no unit.
+    """
+    _parse(unit)
+    if _clean(unit) in ("", "1"):
+        return list(_clean(unit))
+    return [
+        match.group()
+        for match in _tokens(unit)
+        if match["power"] or match["number"] or re.fullmatch(r"\(?0*1\)?", match["exponent"] or "")
+    ]
 
 
 def _parse(unit: str) -> _Unit:
@@ -217,12 +244,11 @@ def _parse(unit: str) -> _Unit:
 def _read(unit: str) -> _Unit:
     if len(unit) > MAX_LENGTH:
         raise _refuse(unit, "the unit is too long", f"at most {MAX_LENGTH} characters")
-    text = _clean(unit)
-    if text in ("", "1"):
+    if _clean(unit) in ("", "1"):
         return _ONE
-    text = re.sub(r"\bper\b", "/", text)
-    text = re.sub(r" *([*·×./()]+) *", r"\1", text) if "a.u" not in text else text
-    matches = _tokens(text, unit)
+    matches = _tokens(unit)
+    if _loose_number(matches):
+        raise _refuse(unit, "a number stands beside a unit without a sign", "write 4*s, or s^2 for a power")
     alone = len(matches) == 1
     result, sign, group_sign = _ONE, 1, 1
     expects_factor, depth, slashes, closed = True, 0, 0, False
@@ -361,7 +387,8 @@ def parse_quantity(text: str) -> Quantity:
     Raises
     ------
     InvalidInput
-        for text without a number, with an unknown unit, a decimal comma or a number that is not finite.
+        for text without a number, with an unknown unit, a decimal comma, a second number (also one that a
+        unit could hold as a factor: ``12 mg 5``, ``1 mM 10*3``), or a number that is not finite.
     """
     if not isinstance(text, str) or len(text) > 2 * MAX_LENGTH:
         raise InvalidInput("not a number with a unit", field="value", cure="for example 12.3 mg")
@@ -372,11 +399,11 @@ def parse_quantity(text: str) -> Quantity:
     rest = stripped[match.end() :]
     if re.match(r"[,.]\s*\d", rest):
         raise InvalidInput(f"{text!r} has more than one decimal sign", field="value", cure="write 12.3 mg")
-    if re.match(r"\s*\d", rest):
+    if re.search(r"(?:^|\s)\d", rest):
         raise InvalidInput(f"{text!r} holds two numbers", field="value", cure="for example 12.3 mg")
     value = float(match.group())
     if not math.isfinite(value):
         raise InvalidInput(f"{match.group()} is too large for a number", field="value")
-    if rest.strip():
-        _parse(rest.strip())
+    if rest.strip() and numbers_in(rest.strip()):
+        raise InvalidInput(f"{text!r} holds two numbers", field="value", cure="for example 12.3 mg")
     return Quantity(value, rest.strip())

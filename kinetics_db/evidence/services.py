@@ -22,7 +22,7 @@ from kinetics_db.errors import InvalidInput
 from kinetics_db.evidence.models import ModelEvidence, RunEvidence
 from kinetics_db.fits.models import Fit, FitResult
 from kinetics_db.fits.selectors import load_fit
-from kinetics_db.fits.services import Computed, compute_fit, store_result
+from kinetics_db.fits.services import Computed, Pulse, compute_fit, store_result
 from kinetics_db.fits.services.compute import number, result_content
 from kinetics_db.jobs.models import Job
 from kinetics_db.jobs.services import Claim, finishing, heartbeat
@@ -43,10 +43,11 @@ def compute_and_assess(claim: Claim) -> None:
     """Compute a fit, judge it, and store result, evidence and the job's end in one transaction."""
     fit = load_fit(claim.subject_id)
     thresholds = thresholds_of(fit)  # before the work, so that a wrong setting costs none
-    computed = compute_fit(fit, claim)
+    pulse = Pulse(claim)
+    computed = compute_fit(fit, pulse)
     judged = bool(computed.outcome.experiments)
     model = evidence_of_model(computed.outcome) if judged else None
-    runs = evidence_of_runs(computed.outcome, thresholds) if judged else ()
+    runs = _judge(computed, thresholds, pulse) if judged else ()
     content = prepared(result_content(computed))
     verdicts = prepared(_content(content.digest, model, runs, thresholds)) if model is not None else None
     heartbeat(claim, progress=0.99, message="storing the result", heed_stop=False)
@@ -58,6 +59,12 @@ def compute_and_assess(claim: Claim) -> None:
         result = store_result(computed, content, token=claim.token)
         if model is not None and verdicts is not None:
             store_evidence(computed, result, model, runs, verdicts)
+
+
+def _judge(computed: Computed, thresholds: Thresholds, pulse: Pulse) -> tuple[EngineRunEvidence, ...]:
+    return evidence_of_runs(
+        computed.outcome, thresholds, rtol=computed.request.settings.rtol, on_work=pulse.judging
+    )
 
 
 def thresholds_of(fit: Fit) -> Thresholds:

@@ -72,7 +72,10 @@ def test_a_second_load_uses_what_is_there() -> None:
     exports = what_happened(another.PLAN, another.TRUTH, 7)
     first = load(another.PLAN, exports, another.RIVALS, user=user)
     counts = [model.objects.count() for model in models]
-    second = load(another.PLAN, exports, another.RIVALS, user=user)
+    said: list[str] = []
+    second = load(another.PLAN, exports, another.RIVALS, user=user, say=said.append)
+    assert first.is_new and not second.is_new
+    assert said == []  # nothing was done
     assert [model.objects.count() for model in models] == counts
     assert second.dataset == first.dataset
     assert [version for _, version in second.versions] == [version for _, version in first.versions]
@@ -93,7 +96,15 @@ def test_a_load_that_was_broken_off_is_completed_by_the_next() -> None:
     exports = what_happened(another.PLAN, another.TRUTH, 7)
     begun = replace(another.PLAN, runs=another.PLAN.runs[:2])
     load(begun, exports[:2], another.RIVALS[:1], user=user)
-    loaded = load(another.PLAN, exports, another.RIVALS, user=user)
+    said: list[str] = []
+    loaded = load(another.PLAN, exports, another.RIVALS, user=user, say=said.append)
+    assert loaded.is_new
+    assert said == [
+        "3 runs logged",
+        "3 files read and reduced, 180 concentrations",
+        "1 mechanism version written",
+        "the dataset of 5 runs frozen",
+    ]
     assert Run.objects.count() == len(another.PLAN.runs)
     assert len(data_of(loaded.dataset).items) == len(another.PLAN.runs)
 
@@ -111,6 +122,7 @@ def test_tern_in_the_database_is_the_tern_whose_recovery_is_tested() -> None:
     stages: list[str] = []
     loaded = load_tern(user=make_user(), say=stages.append)
     assert "24 files read and reduced, 1728 concentrations" in stages
+    assert loaded.is_new and loaded.runs == 24
     assert loaded.project.invented
     assert_same_problem(problem_in_database(loaded, "standard", MECHANISM), tern_problem(SEED))
 
@@ -157,7 +169,7 @@ def test_a_project_whose_fits_have_not_run_reports_what_they_wait_for() -> None:
     user = loaded.project.created_by
     ask_for_fits(another.PLAN, loaded, user=user)
     report = report_of(user=user, project=loaded.project)
-    assert "by way of quinal v1 on all runs v1: waiting" in report
+    assert "by way of quinal v1 on the dataset 'all runs', version 1: waiting" in report
     assert "No fit has a result yet." in report
 
 

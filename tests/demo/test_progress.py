@@ -11,7 +11,7 @@ import pytest
 from kinetics_db.config.processes.failures import ChildDied
 from kinetics_db.demo.invented.loading import ask_for_fits, load
 from kinetics_db.demo.invented.reality import what_happened
-from kinetics_db.demo.progress import follow, try_again
+from kinetics_db.demo.progress import follow, still_to_do, try_again
 from kinetics_db.fits.models import Fit
 from kinetics_db.fits.services import stop_fit
 from kinetics_db.jobs.models import Job
@@ -54,7 +54,7 @@ def test_following_ends_when_every_fit_has_ended_with_a_line_for_each(fits: list
         "fit of 'by way of quinal v1'",
         "fit of 'both at once v1'",
     ]
-    assert all(": converged" in line for line in lines)
+    assert all(line.endswith(": converged") for line in lines)
 
 
 def test_bars_are_drawn_on_a_terminal_only(fits: list[Fit]) -> None:
@@ -104,6 +104,14 @@ def test_the_death_of_a_child_ends_the_following(fits: list[Fit], tmp_path: Path
 
     with pytest.raises(ChildDied, match="worker has died"):
         follow(fits, check=check, say=lambda _: None, stream=Terminal())
+
+
+def test_fits_that_an_earlier_start_has_computed_are_not_followed_again(fits: list[Fit]) -> None:
+    known = {fit.pk for fit in fits}
+    compute_now(fits[0])
+    assert still_to_do(fits, known=known) == [fits[1]]
+    # One that is asked for now and is done at once has still been computed now.
+    assert still_to_do(fits, known={fits[1].pk}) == fits
 
 
 def test_a_fit_that_was_stopped_is_tried_again_and_one_that_waits_is_left(fits: list[Fit]) -> None:

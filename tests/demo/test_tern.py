@@ -91,11 +91,11 @@ def test_the_right_version_agrees_with_nearly_every_run() -> None:
 
 
 @pytest.mark.parametrize("name", WRONG)
-def test_a_wrong_version_is_ruled_out_by_some_runs_though_it_agrees_with_others(name: str) -> None:
+def test_a_wrong_version_is_ruled_out_by_some_runs_though_not_by_all(name: str) -> None:
     outcome = fitted(name, SEED)
     assert outcome.status == "converged"
     words = verdicts(name, SEED)
-    assert "disagrees" in words and "agrees" in words
+    assert 5 <= words.count("disagrees") < len(words)
     difference = compare({RIGHT: fitted(RIGHT, SEED), name: outcome}).differences[name]
     assert difference is not None and difference > 10
 

@@ -6,7 +6,7 @@ import contextlib
 import io
 import math
 import re
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
@@ -58,14 +58,27 @@ def blocks_in_docs(*kinds: str) -> list[Block]:
     return [block for page in pages() for block in blocks_of(page) if block.kind in kinds]
 
 
-def run_page(page: Path, after_each: Callable[[], None] = lambda: None) -> dict[str, Any]:
+def blocks_under(page: Path, heading: str) -> list[Block]:
+    """Blocks between that heading of the second level and the next."""
+    lines = page.read_text(encoding="utf-8").splitlines()
+    begin = lines.index(f"## {heading}") + 1
+    later = (
+        number for number, line in enumerate(lines, start=1) if number > begin and line.startswith("## ")
+    )
+    end = next(later, len(lines) + 1)
+    return [block for block in blocks_of(page) if begin < block.line < end]
+
+
+def run_page(
+    page: Path, after_each: Callable[[], None] = lambda: None, *, blocks: Iterable[Block] | None = None
+) -> dict[str, Any]:
     """Run a page's Python blocks in one namespace; a block of text right after one is what it prints.
 
-    ``after_each`` is called after every Python block.
+    ``after_each`` is called after every Python block; ``blocks`` runs these of the page, in this order.
     """
     namespace: dict[str, Any] = {"__name__": page.stem}
     printed: str | None = None
-    for block in blocks_of(page):
+    for block in blocks_of(page) if blocks is None else blocks:
         if block.kind == "python":
             out = io.StringIO()
             # Blank lines before it, so that a traceback names the line of the page.

@@ -2,14 +2,17 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
 
 from kinetics_db.accounts.services import ensure_user
+from kinetics_db.errors import Conflict
 from kinetics_db.fits.models import FitResult
 from kinetics_db.jobs.models import Job
-from tests.docs.fences import DOCS, blocks_in_docs, run_page, same_output
+from kinetics_db.provenance.models import AuditEntry
+from tests.docs.fences import DOCS, blocks_in_docs, blocks_of, blocks_under, run_page, same_output
 
 TUTORIAL = DOCS / "tutorial" / "first-fit.md"
 
@@ -29,6 +32,40 @@ def test_the_tutorial_leads_from_files_to_verdicts() -> None:
     assert names["job"].state == Job.State.DONE
     results = FitResult.objects.filter(fit__in=[names["fit_1"], names["fit_2"]])
     assert [r.status for r in results] == ["converged", "converged"]
+
+
+@pytest.mark.django_db
+def test_the_tutorial_can_be_taken_up_again_in_a_new_shell_and_makes_nothing_twice() -> None:
+    ensure_user(username="admin")
+    first = run_page(TUTORIAL, after_each=do_waiting_work)
+    entries = AuditEntry.objects.count()
+    again = blocks_under(TUTORIAL, "Take it up again")
+    whole = list(blocks_of(TUTORIAL))
+    begin = whole.index(blocks_under(TUTORIAL, "The files")[0])
+    second = run_page(TUTORIAL, blocks=[*again, *whole[begin:]])
+    assert (second["fit_1"], second["fit_2"]) == (first["fit_1"], first["fit_2"])
+    assert second["table_2"] == first["table_2"]
+    assert AuditEntry.objects.count() == entries
+
+
+@pytest.mark.django_db
+def test_the_tutorials_materials_may_be_entered_again_and_its_project_may_not() -> None:
+    ensure_user(username="admin")
+    cupboard = blocks_under(TUTORIAL, "A project and what is in the cupboard")
+    begun = [*blocks_under(TUTORIAL, "Before you begin"), *cupboard]
+    names = run_page(TUTORIAL, blocks=begun)
+    entries = AuditEntry.objects.count()
+    with pytest.raises(Conflict, match="there is a project 'aminolysis' already"):
+        run_page(TUTORIAL, blocks=begun)
+    found, *rest = (block for block in cupboard if block.kind == "python")
+    assert "create_project" in found.text
+    taken_up = (
+        "from kinetics_db.projects.selectors import project_named\n"
+        "project = project_named(user=user, slug='aminolysis')\n"
+    )
+    second = run_page(TUTORIAL, blocks=[begun[0], replace(found, text=taken_up), *rest])
+    assert second["flask"] == names["flask"]
+    assert AuditEntry.objects.count() == entries
 
 
 WITHOUT_DATABASE = [

@@ -17,7 +17,7 @@ from kinetics_db.engine.comparison import (
     evidence_of_runs,
     likelihood_ratio,
 )
-from kinetics_db.engine.fitting.problem import Charge, Constant, Experiment, Nuisance, Settings
+from kinetics_db.engine.fitting.problem import Charge, Constant, Experiment, Nuisance, Prior, Settings
 from kinetics_db.errors import InvalidInput
 
 CHAIN = parse_mechanism("A --k_1--> B\nB --k_2--> C")
@@ -119,6 +119,80 @@ def test_a_large_pull_of_a_runs_own_nuisance_makes_it_strained():
     assert evidence[2].pulls[0].pull > 3
 
 
+def charged_from_a_stock(factor, stated, runs=RUNS):
+    """Runs whose charge is stated too low by a factor, all from one stock with its stated uncertainty."""
+    runs = [replace(r, charges=(Charge("A", 1.0 / factor, ("stock",)),)) for r in runs]
+    return fit(CHAIN, runs, nuisances=[Nuisance("stock", "stock", stated)])
+
+
+def test_a_large_pull_of_a_shared_cause_makes_every_run_strained_that_uses_it():
+    apart = replace(made("apart", seed=50), charges=(Charge("A", 1.0, ("weighing",)),))
+    runs = [replace(r, charges=(Charge("A", 0.9, ("stock",)),)) for r in RUNS[:2]]
+    nuisances = [Nuisance("stock", "stock", 0.02), Nuisance("weighing", "apart", 0.02)]
+    evidence = evidence_of_runs(fit(CHAIN, [*runs, apart], nuisances=nuisances))
+    assert [run.verdict for run in evidence] == ["strained", "strained", "agrees"]
+    assert [[p.name for p in run.pulls] for run in evidence] == [["stock"], ["stock"], ["weighing"]]
+    assert evidence[0].pulls[0].used_by == 2
+    assert evidence[0].pulls == evidence[1].pulls
+    assert evidence[0].pulls[0].pull > 3
+    assert "stock: a pull of " in evidence[0].note
+    assert evidence[2].note == ""
+
+
+def test_a_small_pull_of_a_shared_cause_is_listed_and_strains_nothing():
+    evidence = evidence_of_runs(charged_from_a_stock(1.01, 0.02))
+    assert [run.verdict for run in evidence] == ["agrees"] * 4
+    assert all(0 < abs(run.pulls[0].pull) < 3 for run in evidence)
+
+
+def test_a_run_taken_up_by_its_own_parameters_is_strained_when_one_of_them_is_pulled_far():
+    network = parse_mechanism("A --k--> B")
+    one = Experiment(
+        "one",
+        (Charge("A", 1.0, ("charge",)),),
+        np.array([0.0]),
+        ("A",),
+        np.array([[1.2]]),
+        np.array([[1e-4]]),
+    )
+    times = np.linspace(1.0, 10.0, 12)
+    other = Experiment(
+        "other", (Charge("A", 1.0),), times, ("A",), np.exp(-0.3 * times)[:, None], np.full((12, 1), 0.01)
+    )
+    found = fit_globally(
+        network, [one, other], [Constant("k", 0.2)], nuisances=[Nuisance("charge", "one", 0.02)]
+    )
+    evidence = evidence_of_runs(found)
+    assert evidence[0].observables[0].verdict == "not tested"
+    assert evidence[0].verdict == "strained"
+
+
+@pytest.mark.parametrize(
+    ("error_model", "verdict"), [("as tabulated", "agrees"), ("one sigma", "consistent")]
+)
+def test_a_fit_without_noise_is_not_strained_by_the_error_of_its_integration(error_model, verdict):
+    """The values are those of the closed form, so that all residuals are the integrator's."""
+    values = np.exp(-0.5 * TIMES)[:, None]
+    run = Experiment("r", (Charge("A", 1.0),), TIMES, ("A",), values, np.full(values.shape, 0.01))
+    network = parse_mechanism("A --k--> B")
+    found = fit_globally(
+        network, [run], [Constant("k", 0.4)], settings=Settings(error_model=error_model, rtol=1e-6)
+    )
+    strict = evidence_of_runs(found, rtol=1e-13)[0].observables[0]
+    assert strict.runs_p < 0.01, "the residuals have long runs of like sign"
+    (evidence,) = evidence_of_runs(found, rtol=1e-6)
+    assert evidence.observables[0].runs_p is None
+    assert evidence.verdict == verdict
+
+
+def test_residuals_that_an_integration_can_tell_from_zero_keep_their_signs():
+    """A bend of 1e-4 of the values, a hundred times the error of integration, under a sigma ten times larger."""
+    values = np.exp(-0.5 * TIMES)[:, None] * (1.0 + 1e-4 * np.sin(TIMES[:, None]))
+    run = Experiment("r", (Charge("A", 1.0),), TIMES, ("A",), values, np.full(values.shape, 1e-3))
+    found = fit_globally(parse_mechanism("A --k--> B"), [run], [Constant("k", 0.4)])
+    assert evidence_of_runs(found)[0].verdict == "strained"
+
+
 def test_a_run_that_alone_determines_its_constants_is_not_tested():
     one = Experiment(
         "one", (Charge("A", 1.0),), np.array([2.0]), ("A",), np.array([[0.4]]), np.array([[0.01]])
@@ -207,6 +281,96 @@ def test_the_likelihood_ratio_of_nested_models_counts_the_extra_constants():
     assert likelihood_ratio(apart, tied, constant_at_zero=True).p == pytest.approx(ratio.p / 2)
     with pytest.raises(InvalidInput):
         likelihood_ratio(tied, apart)
+
+
+def test_the_criteria_are_of_the_likelihood_and_the_squared_pulls_together():
+    stock = charged_from_a_stock(1.05, 0.02)
+    evidence = evidence_of_model(stock)
+    pull = np.log(stock.parameter("stock").value) / 0.02
+    assert abs(pull) > 2
+    assert evidence.sum_of_squared_pulls == pytest.approx(pull**2)
+    assert evidence.minus_two_log_likelihood == stock.minus_two_log_likelihood
+    paid = stock.minus_two_log_likelihood + pull**2
+    assert evidence.aicc == pytest.approx(aicc(paid, evidence.n, evidence.k))
+    assert evidence.bic == pytest.approx(bic(paid, evidence.n, evidence.k))
+    assert evidence_of_model(fit(CHAIN, RUNS)).sum_of_squared_pulls == 0.0
+
+
+def test_a_prior_on_a_constant_is_paid_like_a_nuisance_and_its_normalisation_is_left_out():
+    constants = [Constant("k_1", 0.4, prior=Prior(0.45, 0.05)), Constant("k_2", 0.3, prior=Prior(0.2, 10.0))]
+    found = fit_globally(CHAIN, RUNS, constants)
+    pulls = [
+        np.log(found.parameter(name).value / mean) / sd
+        for name, mean, sd in (("k_1", 0.45, 0.05), ("k_2", 0.2, 10.0))
+    ]
+    assert evidence_of_model(found).sum_of_squared_pulls == pytest.approx(sum(p**2 for p in pulls))
+
+
+FORKED = parse_mechanism("S --k--> P\nS --q--> Q")
+
+
+def forked_runs(seed, q, sigma=0.005, stock=1.0):
+    """P alone is seen: a second product and a stock that is too weak look the same but for the stock's price."""
+    random = np.random.default_rng(seed)
+    times = np.array([50.0, 100.0, 200.0, 300.0, 400.0, 600.0, 800.0, 1000.0])
+    exact = stock * 0.01 / (0.01 + q) * -np.expm1(-(0.01 + q) * times)
+    return [
+        Experiment(
+            f"r{i}",
+            (Charge("S", 1.0, ("stock",)),),
+            times,
+            ("P",),
+            (exact + sigma * random.normal(size=8))[:, None],
+            np.full((8, 1), sigma),
+        )
+        for i in range(3)
+    ]
+
+
+def with_and_without_the_fork(runs):
+    nuisances = [Nuisance("stock", "stock", 0.05)]
+    free = [Constant("k", 0.01), Constant("q", 1e-4, positive=False)]
+    held = [Constant("k", 0.01), Constant("q", 0.0, "held")]
+    return tuple(fit_globally(FORKED, runs, c, nuisances=nuisances) for c in (free, held))
+
+
+def test_a_wrong_model_pays_for_the_stock_that_it_bends():
+    """Without the second path the stock has to be 20 % too weak, over four deviations of its prior."""
+    forked, plain = with_and_without_the_fork(forked_runs(5, q=0.0025))
+    assert plain.parameter("stock").value == pytest.approx(0.8, abs=0.01)
+    assert plain.minus_two_log_likelihood - forked.minus_two_log_likelihood < 1.0, (
+        "free of charge in ln L alone"
+    )
+    comparison = compare({"forked": forked, "plain": plain})
+    assert comparison.best == "forked"
+    assert comparison.differences["plain"] > 15
+    ratio = likelihood_ratio(forked, plain)
+    assert ratio.degrees_of_freedom == 1
+    assert ratio.p < 1e-4
+
+
+def test_the_likelihood_ratio_rejects_a_true_model_as_often_as_its_level_says():
+    """60 simulated sets with an error of the stock: at 5 % at most 8 rejections (binomial, p = 0.005), median 0.5."""
+    p = []
+    for seed in range(60):
+        stock = np.exp(0.05 * np.random.default_rng(10_000 + seed).normal())
+        forked, plain = with_and_without_the_fork(forked_runs(seed, q=0.0, stock=stock))
+        p.append(likelihood_ratio(forked, plain).p)
+    assert sum(value < 0.05 for value in p) <= 8
+    assert 0.3 < np.median(p) < 0.7
+
+
+def test_a_fit_that_did_not_converge_is_not_ranked_and_no_weights_are_given():
+    stuck = fit_globally(DIRECT, RUNS, CONSTANTS, settings=Settings(max_iterations=1))
+    assert stuck.status == "not converged"
+    comparison = compare({"stuck": stuck, "chain": fit(CHAIN, RUNS)})
+    assert comparison.best == "chain"
+    assert comparison.differences == {"stuck": None, "chain": 0.0}
+    assert comparison.weights is None
+    assert "stuck is not converged" in comparison.why_no_weights
+    assert compare({"stuck": stuck}).best is None
+    with pytest.raises(InvalidInput, match="reduced model is not converged"):
+        likelihood_ratio(fit(CHAIN, RUNS), stuck)
 
 
 def test_chi_square_p_values_are_spread_evenly_when_the_model_is_true():

@@ -14,6 +14,7 @@ from kinetics_db.engine.units import (
     convert,
     is_unit,
     kind_of_unit,
+    numbers_in,
     parse_quantity,
     to_stored,
 )
@@ -222,11 +223,32 @@ def test_quantities_are_read_as_typed(text: str, value: float, unit: str) -> Non
 
 
 @pytest.mark.parametrize(
-    "text", ["", "mg", "12,3 mg", "1.2.3 mg", "1e999 mg", "nan mg", "5 blobs", "9**9 s", "1 2 s"]
-)
+    "text",
+    [
+        "", "mg", "12,3 mg", "1.2.3 mg", "1e999 mg", "nan mg", "5 blobs", "9**9 s", "1 2 s", "12 mg 5", "1 h 30",
+        "12 mg*5", "12 mg/5", "3/4", "1h01", "1 h(1)", "1h30", "1 mM 10*3", "1 200 g", "5 a.u. 3",
+    ],
+)  # fmt: skip
 def test_texts_that_are_no_quantity_are_refused(text: str) -> None:
     with pytest.raises(InvalidInput):
         parse_quantity(text)
+
+
+def test_a_number_a_blank_away_from_a_unit_is_no_factor_of_it() -> None:
+    for unit in ("h 30", "mg 5", "200 s", "a.u. 3", "mg/mL 5", "s 2"):
+        with pytest.raises(InvalidInput, match="a number stands beside a unit without a sign"):
+            kind_of_unit(unit)
+    assert convert(1.0, "4 * s", "s") == 4.0
+    assert kind_of_unit("M 1/s") == "rate"
+
+
+def test_numbers_that_would_scale_a_value_unseen_are_found_in_a_unit() -> None:
+    assert numbers_in("4.s/m") == ["4"]
+    assert numbers_in("mol 10*3/s") == ["10*3"]
+    assert numbers_in("mM/h01") == ["h01"]
+    assert numbers_in("1") == ["1"]
+    for unit in ("", "mM", "L mol-1 s-1", "cm3", "mol·dm⁻³", "a.u.", "M^0.5/s"):
+        assert numbers_in(unit) == []
 
 
 def test_stored_units_are_of_their_own_kind() -> None:

@@ -119,7 +119,7 @@ def test_two_computations_of_one_request_give_equal_bytes() -> None:
         constants=[Constant("k", start=0.002)],
     )
     first = compute_now(fit)
-    from kinetics_db.fits.services.compute import compute_fit, result_content
+    from kinetics_db.fits.services.compute import Pulse, compute_fit, result_content
 
     claim = jobs.Claim(
         job_id=job_for(kind="fit", subject_id=fit.pk).pk, kind="fit", subject_id=fit.pk, token=1
@@ -127,7 +127,7 @@ def test_two_computations_of_one_request_give_equal_bytes() -> None:
     Job.objects.filter(pk=claim.job_id).update(
         state="running", lease_until="2100-01-01T00:00:00Z", finished=None
     )
-    again = result_content(compute_fit(Fit.objects.get(pk=fit.pk), claim))
+    again = result_content(compute_fit(Fit.objects.get(pk=fit.pk), Pulse(claim)))
     assert again == first.content
 
 

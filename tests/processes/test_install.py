@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import fcntl
 import hashlib
 import io
 import re
 import subprocess
 import sys
+import threading
 import zipfile
 from pathlib import Path
 
@@ -14,6 +16,7 @@ import pytest
 
 from kinetics_db.config.processes.install import InstallationError, install, main, stamp
 from tests.processes.stand_ins import CHECKOUT
+from tests.services.processes import wait_until
 
 
 def make_wheel(folder: Path, version: str) -> str:
@@ -90,6 +93,25 @@ def test_an_environment_that_cannot_be_made_is_told_with_the_reason(
     monkeypatch.setattr(sys, "executable", str(broken))
     with pytest.raises(InstallationError, match="ensurepip is not available"):
         install("runtime", checkout, out=io.StringIO())
+
+
+def test_a_second_make_says_that_it_waits_for_the_first(
+    checkout: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    monkeypatch.setattr("kinetics_db.config.processes.install._make_environment", lambda *_: False)
+    (checkout / ".venv").mkdir()
+    stamp(checkout / ".venv", "runtime", checkout).touch()
+    out = io.StringIO()
+    waiting = threading.Thread(target=install, args=("runtime", checkout), kwargs={"out": out})
+    with (checkout / "requirements.lock").open() as held:
+        fcntl.flock(held, fcntl.LOCK_EX)
+        waiting.start()
+        wait_until(out.getvalue, within=10, what="it says something")
+        assert out.getvalue() == "Another make is installing here; waiting ...\n"
+        waiting.join(0.2)
+        assert waiting.is_alive()
+    waiting.join(10)
+    assert not waiting.is_alive()
 
 
 def test_what_to_install_has_to_be_said(capsys: pytest.CaptureFixture[str]) -> None:

@@ -10,11 +10,14 @@ import socket
 import stat
 import subprocess
 import sys
+import threading
 from collections.abc import Iterator
+from http.server import BaseHTTPRequestHandler, ThreadingHTTPServer
 from pathlib import Path
 
 import pytest
 
+from kinetics_db.accounts.services import set_password
 from kinetics_db.config.processes.failures import AlreadyRunning, ChildDied, PortBusy
 from kinetics_db.config.processes.guard import group_is_running, is_running
 from kinetics_db.config.processes.local import (
@@ -24,7 +27,9 @@ from kinetics_db.config.processes.local import (
     refuse_busy_port,
     says,
 )
+from kinetics_db.config.processes.supervisor import Child
 from kinetics_db.config.processes.valkey import answers, socket_path
+from kinetics_db.web.management.commands.serve import account_line
 from tests.processes.stand_ins import CHECKOUT
 from tests.services.processes import children_of, free_port, wait_until
 
@@ -83,6 +88,58 @@ def test_a_port_where_nobody_or_a_stranger_listens_is_not_healthy() -> None:
         assert not is_healthy(listener.getsockname()[1], timeout=0.2)
 
 
+def test_a_port_that_is_taken_while_the_database_is_made_ready_is_refused_before_the_web_server_starts(
+    tmp_path: Path,
+) -> None:
+    with socket.socket() as listener:
+        port = free_port()
+
+        def take_the_port(stage: str) -> None:
+            if stage.startswith("Starting the sweeper"):
+                listener.bind(("127.0.0.1", port))
+                listener.listen()
+
+        installation = LocalInstallation(
+            checkout=CHECKOUT, var=tmp_path / "var", port=port, say=take_the_port
+        )
+        with pytest.raises(PortBusy, match=f"Port {port} is taken"):
+            installation.start()
+    assert not (tmp_path / "var" / "log" / "web.log").exists()
+
+
+class AnswersEverything(BaseHTTPRequestHandler):
+    """A web server of somebody else, healthy at every address."""
+
+    def do_GET(self) -> None:
+        self.send_response(200)
+        self.end_headers()
+
+    def log_message(self, *_: object) -> None:
+        return
+
+
+class Overtaken(LocalInstallation):
+    """Somebody else's web server takes the port in the last moment."""
+
+    def web_child(self, log: Path) -> Child:
+        self.stranger = ThreadingHTTPServer(("127.0.0.1", self.port), AnswersEverything)
+        threading.Thread(target=self.stranger.serve_forever).start()
+        return super().web_child(log)
+
+
+@pytest.mark.processes
+def test_the_answer_of_another_web_server_on_the_port_is_not_taken_for_its_own(tmp_path: Path) -> None:
+    installation = Overtaken(checkout=CHECKOUT, var=tmp_path / "var", port=free_port(), concurrency=1)
+    try:
+        with pytest.raises(PortBusy, match=f"Port {installation.port} is taken"):
+            installation.start()
+        assert is_healthy(installation.port)
+        assert not installation.is_running
+    finally:
+        installation.stranger.shutdown()
+        installation.stranger.server_close()
+
+
 @pytest.mark.processes
 def test_it_comes_up_is_watched_and_goes_down_without_a_trace(installation: LocalInstallation) -> None:
     installation.start()
@@ -96,9 +153,10 @@ def test_it_comes_up_is_watched_and_goes_down_without_a_trace(installation: Loca
         LocalInstallation(checkout=CHECKOUT, var=installation.var, port=free_port()).start()
 
     os.kill(pids["worker"], signal.SIGKILL)
-    with pytest.raises(ChildDied, match=r"The worker has died \(killed by SIGKILL\)"):
+    with pytest.raises(
+        ChildDied, match=r"^The worker was killed by SIGKILL; everything else has been stopped\. L"
+    ):
         installation.wait()
-    installation.stop()
     assert not any(group_is_running(pid) for pid in pids.values())
     assert not any(is_running(pid) for pid in pool)
     assert not is_healthy(installation.port)
@@ -157,7 +215,7 @@ def test_serve_tells_the_address_and_a_password_that_only_its_user_can_read(serv
     password = re.search(r"Log in as admin with the password (\S+) ", said)
     assert password is not None
     kept = serve.var / "first_account.txt"
-    assert f"password: {password.group(1)}\n" in kept.read_text()
+    assert kept.read_text() == f"name: admin\npassword: {password.group(1)}\n"
     for secret in (kept, serve.var / "secret_key"):
         assert stat.S_IMODE(secret.stat().st_mode) == 0o600
     assert stat.S_IMODE(serve.var.stat().st_mode) == 0o700
@@ -181,6 +239,24 @@ def test_serve_tells_the_address_and_a_password_that_only_its_user_can_read(serv
         assert password.group(1) not in said
         again.process.terminate()
         again.read_until("Stopped")
+
+
+@pytest.mark.django_db
+def test_the_file_of_the_first_password_is_named_only_while_it_fits(
+    installation: LocalInstallation, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    # The transaction of a test must not lose its connection.
+    monkeypatch.setattr("kinetics_db.web.management.commands.serve.connection.close", lambda: None)
+    installation.var.mkdir()
+    file = installation.first_account_file
+    assert f"(kept in {file})" in account_line(installation)
+    assert f"the first password is in {file}" in account_line(installation)
+    set_password(username="admin", password="another-good-one")
+    for _ in ("does not fit", "is gone"):
+        said = account_line(installation)
+        assert str(file) not in said
+        assert "manage.py changepassword admin" in said
+        file.unlink(missing_ok=True)
 
 
 @pytest.mark.processes
@@ -207,7 +283,11 @@ def test_serve_ends_with_one_clear_line_when_a_child_dies(serve: Serve) -> None:
         int(pid) for pid, parent, command in rows if int(parent) == serve.process.pid and "sweep" in command
     ]
     os.kill(sweeper, signal.SIGKILL)
-    said = serve.read_until("The sweeper has died (killed by SIGKILL).")
-    assert str(serve.var / "log" / "sweeper.log") in said
+    assert serve.process.stdout is not None
+    (line,) = serve.process.stdout.read().splitlines()
+    assert line == (
+        "CommandError: The sweeper was killed by SIGKILL; everything else has been stopped. "
+        f"Start again: make serve. Log: {serve.var / 'log' / 'sweeper.log'}"
+    )
     assert serve.process.wait(40) == 1
     assert not any(is_running(pid) for pid in pids)

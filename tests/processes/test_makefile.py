@@ -5,6 +5,7 @@ from __future__ import annotations
 import os
 import re
 import subprocess
+from pathlib import Path
 
 import pytest
 
@@ -13,11 +14,11 @@ from tests.processes.stand_ins import CHECKOUT
 MAKEFILE = (CHECKOUT / "Makefile").read_text()
 
 
-def make(*arguments: str) -> str:
+def make(*arguments: str, folder: Path = CHECKOUT) -> str:
     ours = ("MAKE", "MFLAGS", "PORT", "ONCE", "JOBS", "ARGS", "PYTHON")
     inherited = {key: value for key, value in os.environ.items() if not key.startswith(ours)}
     return subprocess.run(
-        ["make", *arguments], cwd=CHECKOUT, env=inherited, capture_output=True, text=True, check=True
+        ["make", *arguments], cwd=folder, env=inherited, capture_output=True, text=True, check=True
     ).stdout
 
 
@@ -39,6 +40,28 @@ def test_once_and_port_reach_the_demo() -> None:
     commands = make("--dry-run", "demo", "ONCE=1", "PORT=9000").splitlines()
     assert commands[-1].split()[1:] == ["manage.py", "demo", "--port", "9000", "--once"]
     assert make("--dry-run", "demo").split()[-4:] == ["manage.py", "demo", "--port", "8765"]
+
+
+def test_an_empty_port_is_the_usual_one() -> None:
+    for target in ("demo", "serve"):
+        assert make("--dry-run", target, "PORT=").split()[-2:] == ["--port", "8765"]
+
+
+@pytest.mark.parametrize(
+    ("interpreter", "chosen"),
+    [("/bin/sh", ".venv/bin/python"), ("/nowhere/python", "python3"), ("", "python3")],
+)
+def test_the_python_of_the_environment_is_taken_only_if_it_runs(
+    tmp_path: Path, interpreter: str, chosen: str
+) -> None:
+    (tmp_path / "Makefile").write_text(MAKEFILE)
+    if interpreter:
+        python = tmp_path / ".venv" / "bin" / "python"
+        python.parent.mkdir(parents=True)
+        python.write_text(f"#!{interpreter}\n")
+        python.chmod(0o755)
+    preflight, install = make("--dry-run", "serve", folder=tmp_path).splitlines()[:2]
+    assert preflight.split()[0] == install.split()[0] == chosen
 
 
 def test_the_preflight_comes_before_anything_is_installed() -> None:

@@ -75,10 +75,10 @@ def test_an_unsuitable_python_is_named_with_the_cure_and_nothing_else(
     monkeypatch: pytest.MonkeyPatch, version: tuple[int, int]
 ) -> None:
     monkeypatch.setattr(sys, "version_info", (*version, 0, "final", 0))
-    (line,) = preflight.problems("demo")
+    (line,) = preflight.problems("serve")
     assert line.startswith(f"Python {version[0]}.{version[1]} at {sys.executable} cannot be used")
     assert "3.11 to 3.14" in line
-    assert "make demo PYTHON=python3.12" in line
+    assert "make serve PYTHON=python3.12" in line
 
 
 @pytest.mark.parametrize("module", ["venv", "ensurepip"])
@@ -141,11 +141,12 @@ def test_a_busy_port_is_named_with_another_choice(checkout: Path) -> None:
         listener.bind(("127.0.0.1", 0))
         listener.listen()
         port = listener.getsockname()[1]
-        done = run(checkout, PORT=str(port))
-        assert done.returncode == 1
-        assert done.stderr.startswith(
-            f"* Port {port} is taken by another program. Choose another one: make demo PORT="
-        )
+        for purpose in ("demo", "serve"):
+            done = run(checkout, purpose, PORT=str(port))
+            assert done.returncode == 1
+            assert done.stderr.startswith(
+                f"* Port {port} is taken by another program. Choose another one: make {purpose} PORT="
+            )
         assert run(checkout, "test", PORT=str(port)).returncode == 0
 
 
@@ -156,15 +157,31 @@ def test_what_is_no_usable_port_is_told_so(checkout: Path, port: str) -> None:
     assert done.returncode == 1
 
 
-def test_an_installation_that_runs_already_is_named_with_its_process(checkout: Path, tmp_path: Path) -> None:
+def test_an_installation_that_runs_already_is_named_with_address_and_process(
+    checkout: Path, tmp_path: Path
+) -> None:
     var = tmp_path / "var"
-    with Supervisor(var / "log", lock=var / "supervisor.lock"):
+    with Supervisor(var / "log", lock=var / "supervisor.lock", address="http://127.0.0.1:9000/"):
         done = run(checkout, RATEWRIGHT_VAR=str(var))
     assert done.stderr == (
-        f"* Ratewright already runs from {var} as process {os.getpid()}. "
+        f"* Ratewright already runs from {var} at http://127.0.0.1:9000/ as process {os.getpid()}. "
         f"Use that one, or stop it: kill {os.getpid()}\n"
     )
     assert run(checkout, RATEWRIGHT_VAR=str(var)).returncode == 0
+
+
+def test_an_installation_of_which_only_the_process_is_known_is_named_all_the_same(tmp_path: Path) -> None:
+    with Supervisor(tmp_path / "log", lock=tmp_path / "supervisor.lock"):
+        line = preflight.already_running(tmp_path)
+    assert line is not None
+    assert line.startswith(f"Ratewright already runs from {tmp_path} as process {os.getpid()}. ")
+
+
+@pytest.mark.parametrize(("purpose", "folder"), [("demo", "var/demo"), ("serve", "var")])
+def test_each_command_looks_at_its_own_folder(checkout: Path, purpose: str, folder: str) -> None:
+    with Supervisor(checkout / folder / "log", lock=checkout / folder / "supervisor.lock"):
+        assert f"already runs from {checkout / folder} " in run(checkout, purpose).stderr
+        assert run(checkout, "serve" if purpose == "demo" else "demo").returncode == 0
 
 
 def test_asking_does_not_take_the_lock_away(tmp_path: Path) -> None:
@@ -207,10 +224,10 @@ def test_a_network_file_system_is_refused_with_the_way_out(
     tmp_path: Path, monkeypatch: pytest.MonkeyPatch
 ) -> None:
     monkeypatch.setattr(preflight, "file_system_of", lambda folder: "nfs4")
-    line = preflight.unfit_sqlite(tmp_path)
+    line = preflight.unfit_sqlite(tmp_path, "serve")
     assert line is not None
     assert "network file system (nfs4)" in line
-    assert "RATEWRIGHT_VAR=/local/folder" in line
+    assert "RATEWRIGHT_VAR=/local/folder make serve" in line
 
 
 def test_an_old_sqlite_is_named_with_the_version_needed(
@@ -218,7 +235,7 @@ def test_an_old_sqlite_is_named_with_the_version_needed(
 ) -> None:
     monkeypatch.setattr(sqlite3, "sqlite_version_info", (3, 22, 0))
     monkeypatch.setattr(sqlite3, "sqlite_version", "3.22.0")
-    assert preflight.unfit_sqlite(tmp_path) == (
+    assert preflight.unfit_sqlite(tmp_path, "demo") == (
         "SQLite 3.22.0 is too old: 3.31.0 or newer is needed. A newer Python brings one."
     )
 

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import os
+import pty
 import signal
 import subprocess
 import sys
@@ -20,11 +21,10 @@ from kinetics_db.config.processes.supervisor import (
     Child,
     Supervised,
     Supervisor,
-    describe_status,
     interruptible,
 )
 from tests.processes.stand_ins import CHECKOUT, HAS_A_GRANDCHILD, IGNORES_SIGTERM, RUNS_FOR_LONG, child
-from tests.services.processes import wait_until
+from tests.services.processes import children_of, wait_until
 
 pytestmark = pytest.mark.filterwarnings("error")
 
@@ -60,16 +60,34 @@ def test_a_dead_child_is_named_with_its_exit_status_and_its_last_words(tmp_path:
             supervisor.start(child("worker", "print('no queue'); raise SystemExit(3)"))
             supervisor.wait()
     first_line, *words = str(caught.value).splitlines()
-    assert first_line == f"The worker has died (exit status 3). The last lines of {tmp_path / 'worker.log'}:"
+    assert first_line == f"The worker ended with exit status 3. The last lines of {tmp_path / 'worker.log'}:"
     assert words == ["    no queue"]
     assert (caught.value.name, caught.value.exit_status) == ("worker", 3)
 
 
-def test_a_child_killed_from_outside_is_reported_with_the_name_of_the_signal(tmp_path: Path) -> None:
-    with Supervisor(tmp_path) as supervisor:
-        os.kill(supervisor.start(child("worker", RUNS_FOR_LONG)), signal.SIGKILL)
-        with pytest.raises(ChildDied, match=r"The worker has died \(killed by SIGKILL\)"):
+def test_a_child_killed_from_outside_is_reported_in_one_line_with_the_consequence_and_no_advice(
+    tmp_path: Path,
+) -> None:
+    with Supervisor(tmp_path, consequence="; the rest goes on") as supervisor:
+        log = supervisor.log("valkey")
+        server = child(
+            "valkey",
+            RUNS_FOR_LONG,
+            called="The queue",
+            hint="Remove it.",
+            is_ready=lambda: says(log, "running"),
+        )
+        os.kill(supervisor.start(server), signal.SIGKILL)
+        with pytest.raises(ChildDied) as caught:
             supervisor.wait()
+    assert str(caught.value) == f"The queue was killed by SIGKILL; the rest goes on. Log: {log}"
+
+
+def test_advice_stands_with_a_child_that_ended_by_itself(tmp_path: Path) -> None:
+    message = r"^The valkey ended with exit status 1\. Remove it\. The last lines"
+    with Supervisor(tmp_path) as supervisor, pytest.raises(ChildDied, match=message):
+        supervisor.start(child("valkey", "print('broken'); raise SystemExit(1)", hint="Remove it."))
+        supervisor.wait()
 
 
 def test_a_child_that_is_silent_when_it_dies_is_said_to_have_written_nothing(tmp_path: Path) -> None:
@@ -97,7 +115,7 @@ def test_the_death_of_another_child_ends_the_wait_for_a_slow_one(tmp_path: Path)
     with Supervisor(tmp_path) as supervisor:
         supervisor.start(child("valkey", "import time; time.sleep(0.3)"))
         begun = time.monotonic()
-        with pytest.raises(ChildDied, match="The valkey has died"):
+        with pytest.raises(ChildDied, match="The valkey ended with exit status 0"):
             supervisor.start(child("web", RUNS_FOR_LONG, is_ready=lambda: False, ready_timeout=60))
         assert time.monotonic() - begun < 10
 
@@ -172,12 +190,13 @@ def test_a_step_that_takes_too_long_is_stopped(tmp_path: Path) -> None:
         assert supervisor.names() == []
 
 
-def test_a_second_supervisor_of_the_same_folder_is_refused_with_the_process_of_the_first(
+def test_a_second_supervisor_of_the_same_folder_is_refused_with_process_and_address_of_the_first(
     tmp_path: Path,
 ) -> None:
     lock = tmp_path / "supervisor.lock"
-    refused = pytest.raises(AlreadyRunning, match=f"already runs from {tmp_path} as process {os.getpid()};")
-    with Supervisor(tmp_path / "log", lock=lock), refused:
+    message = f"already runs from {tmp_path} at http://127.0.0.1:8765/ as process {os.getpid()}; use that one"
+    refused = pytest.raises(AlreadyRunning, match=message)
+    with Supervisor(tmp_path / "log", lock=lock, address="http://127.0.0.1:8765/"), refused:
         Supervisor(tmp_path / "log", lock=lock)
     with Supervisor(tmp_path / "log", lock=lock):
         pass
@@ -221,14 +240,6 @@ def test_a_supervisor_in_a_thread_leaves_the_signals_alone(tmp_path: Path) -> No
     thread.start()
     thread.join()
     assert problems == []
-
-
-@pytest.mark.parametrize(
-    ("status", "words"),
-    [(0, "exit status 0"), (3, "exit status 3"), (-9, "killed by SIGKILL"), (-11, "killed by SIGSEGV")],
-)
-def test_an_exit_status_is_said_in_words(status: int, words: str) -> None:
-    assert describe_status(status) == words
 
 
 SUPERVISOR_TO_BE_KILLED = """
@@ -281,6 +292,41 @@ def test_nothing_is_left_running_however_the_supervisor_ends(tmp_path: Path, num
             within=20,
             what="all children and the guard have ended",
         )
+
+
+LEADER_OF_A_SESSION = """
+import os, subprocess, sys
+# Like make: waits for its command, and dies of the hang-up without telling it.
+subprocess.run([sys.executable, "-c", *sys.argv[1:]], check=False)
+"""
+
+
+@pytest.mark.processes
+def test_nothing_is_left_running_when_the_terminal_is_closed_and_only_the_leader_hears_of_it(
+    tmp_path: Path,
+) -> None:
+    leader, terminal = pty.fork()
+    if leader == 0:
+        os.chdir(CHECKOUT)
+        code = SUPERVISOR_TO_BE_KILLED
+        arguments = [sys.executable, "-c", LEADER_OF_A_SESSION, code, str(tmp_path)]
+        os.execve(sys.executable, arguments, {**os.environ, "PYTHONPATH": str(CHECKOUT)})
+    words = b""
+    while b"\n" not in words:
+        words += os.read(terminal, 1000)
+    pids = [int(word) for word in words.split()]
+    pids += [number_in(tmp_path / "log" / f"{name}.log") for name in ("valkey", "worker")]
+    (supervisor,) = children_of(leader)
+    assert all(is_running(pid) for pid in pids)
+    time.sleep(0.5)
+    assert is_running(supervisor), "an open terminal is no reason to stop"
+    os.close(terminal)
+    wait_until(
+        lambda: not any(is_running(pid) for pid in [*pids, supervisor]),
+        within=20,
+        what="the supervisor, its children and the guard have ended",
+    )
+    os.waitpid(leader, 0)
 
 
 @pytest.mark.processes

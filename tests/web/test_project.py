@@ -11,12 +11,14 @@ from django.db import connection
 from django.test import Client
 from django.test.utils import CaptureQueriesContext
 
-from kinetics_db.engine.shown_numbers import interval, with_uncertainty
-from kinetics_db.evidence.selectors import grid_of
+from kinetics_db.engine.shown_numbers import interval, percent, probability, with_uncertainty
+from kinetics_db.evidence.models import RunEvidence
+from kinetics_db.evidence.selectors import evidence_of, grid_of
 from kinetics_db.fits.models import Fit
 from kinetics_db.fits.selectors import result_of
 from kinetics_db.jobs.selectors import job_for
 from kinetics_db.jobs.services import Claim, claim_job, fail_job, heartbeat
+from kinetics_db.web.words import message_text
 from tests.factories.people import make_member, make_user
 from tests.web.study import RIGHT, WRONG, Study
 
@@ -74,20 +76,25 @@ def test_no_curve_is_drawn_where_no_such_fit_is(browser: Client, fitted: Study, 
 
 
 def test_constants_stand_with_their_intervals_by_temperature(browser: Client, fitted: Study) -> None:
-    text = text_of(html_of(browser))
+    html = html_of(browser)
+    text = text_of(html)
     fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
     result = result_of(fit)
     assert result is not None
     constants = result.constants.all()
     assert {c.where for c in constants} == {"298.15 K", "308.15 K"}
+    celsius = {"298.15 K": "25 °C", "308.15 K": "35 °C"}  # as at the runs; K to point at and to copy
     for c in constants:
         value, limits = with_uncertainty(c.value, c.standard_error, "1/s"), interval(c.low, c.high, "1/s")
-        assert f"k ox {c.where} {value} {limits}" in text
-    assert text.index("k ox 298.15 K") < text.index("k ox 308.15 K")
+        assert f"k ox {celsius[c.where]} {value} {limits}" in text
+    assert text.index("k ox 25 °C") < text.index("k ox 35 °C")
+    assert '<data value="298.15" title="298.15 K">25 °C</data>' in html
     assert "95 % interval" in text
 
 
-def test_the_grid_shows_verdict_p_and_error_of_every_cell(browser: Client, fitted: Study) -> None:
+def test_the_grid_shows_the_verdict_of_every_cell_with_p_and_error_of_one_observable(
+    browser: Client, fitted: Study
+) -> None:
     html = html_of(browser)
     grid = grid_of(user=fitted.user, project_id=fitted.project.pk)
     assert len(grid.cells) == 4
@@ -97,11 +104,51 @@ def test_the_grid_shows_verdict_p_and_error_of_every_cell(browser: Client, fitte
     for code, cells in rows:
         shown = re.findall(r"<b>(\w[\w ]+)</b>", cells)
         assert shown == [verdicts[code, column.fit_id] for column in grid.columns]
+        for column, cell in zip(grid.columns, cells.split("</td>")[1:], strict=False):
+            evidence = evidence_of(user=fitted.user, fit_id=column.fit_id)
+            (run,) = (r for r in evidence.content["runs"] if r["experiment"] == code)
+            (one,) = (o for o in run["observables"] if o["observable"] == run["worst_observable"])
+            p = min(one["chi_square_p_adjusted"], one["runs_p_adjusted"])
+            expected = f"{one['observable']}: p {probability(p)}, NRMSE {percent(one['nrmse'])}"
+            assert expected in text_of(cell)
     assert len(rows) == 2
     deltas = [c.delta_aicc for c in grid.columns if c.delta_aicc is not None]
     assert len(deltas) == 2
     assert min(deltas) == 0.0
     assert f"{max(deltas):,.1f}".replace(",", "\N{NARROW NO-BREAK SPACE}") in html
+
+
+def test_a_strain_by_a_pull_names_what_was_pulled_and_how_far(browser: Client, fitted: Study) -> None:
+    fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
+    rows = RunEvidence.objects.filter(evidence__result__fit=fit)
+    pulled = {"verdict": "strained", "pull": 10.06, "pull_name": "run K01: charge 1"}
+    assert "charge 1 pulled" not in text_of(html_of(browser))
+    rows.filter(run_revision__run__code="K01").update(**pulled)
+    rows.filter(run_revision__run__code="K02").update(**pulled | {"pull": -3.3, "pull_name": "lot L purity"})
+    text = text_of(html_of(browser))
+    assert "strained charge 1 pulled +10.1 u alcohol: p " in text
+    assert "strained lot L purity pulled −3.3 u alcohol: p " in text
+    rows.update(verdict="disagrees")  # what a test decided is not put down to a pull
+    assert "charge 1 pulled" not in text_of(html_of(browser))
+
+
+def test_a_pull_within_the_projects_own_threshold_is_not_shown(browser: Client, fitted: Study) -> None:
+    RunEvidence.objects.update(verdict="strained", pull=4.0, pull_name="run K01: charge 1")
+    assert "charge 1 pulled +4 u" in text_of(html_of(browser))
+    type(fitted.project).objects.filter(pk=fitted.project.pk).update(verdict_thresholds={"pull": 4.5})
+    assert "charge 1 pulled" not in text_of(html_of(browser))
+
+
+def test_how_a_fit_converged_is_a_detail_in_the_margin(browser: Client, fitted: Study) -> None:
+    html = html_of(browser)
+    work = re.sub(r'<aside class="margin".*?</aside>', "", html, flags=re.DOTALL)
+    assert text_of(work).count("Fitted to the dataset 'all', version 1: converged") == 2
+    for fit in Fit.objects.all():
+        result = result_of(fit)
+        assert result is not None
+        detail = message_text(result.content["message"])
+        assert f"converged: {detail}" in text_of(html)
+        assert detail not in text_of(work)
 
 
 def test_every_verdict_is_explained_with_the_projects_own_thresholds(browser: Client, fitted: Study) -> None:
@@ -119,7 +166,7 @@ def test_the_margin_says_where_things_come_from(browser: Client, fitted: Study) 
     fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
     for expected in (
         "made by mira", "written by mira", "table 1 from nmr.txt", "reduction: against the standard v1",
-        f"engine {fit.engine_version}", "dataset all v1", fit.dataset.digest[:10], "revision 1 by mira",
+        f"engine {fit.engine_version}", "dataset 'all', version 1", fit.dataset.digest[:10], "revision 1 by mira",
     ):  # fmt: skip
         assert expected in margins
     assert f"{fit.created:%Y-%m-%d}" in margins

@@ -35,7 +35,7 @@ def install(what: str, checkout: Path, *, out: TextIO) -> bool:
     lock = checkout / LOCK_FILES[what]
     folder = checkout / ".venv"
     with lock.open() as held:
-        fcntl.flock(held, fcntl.LOCK_EX)  # two at once would break each other's half-made environment
+        _wait_for_others(held, out)
         made = _make_environment(folder, out)
         if not made and stamp(folder, what, checkout).exists():
             return False
@@ -45,6 +45,16 @@ def install(what: str, checkout: Path, *, out: TextIO) -> bool:
                 old.unlink()
             stamp(folder, name, checkout).touch()
     return True
+
+
+def _wait_for_others(held: TextIO, out: TextIO) -> None:
+    """Take the lock: two at once would break each other's half-made environment."""
+    try:
+        fcntl.flock(held, fcntl.LOCK_EX | fcntl.LOCK_NB)
+    except BlockingIOError:
+        out.write("Another make is installing here; waiting ...\n")
+        out.flush()
+        fcntl.flock(held, fcntl.LOCK_EX)
 
 
 def stamp(folder: Path, what: str, checkout: Path) -> Path:

@@ -10,10 +10,11 @@ import os
 import shutil
 import socket
 import sys
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from pathlib import Path
 
-from .failures import PortBusy
+from .failures import ChildDied, PortBusy
 from .supervisor import Child, Supervised, Supervisor
 from .valkey import broker_url, socket_path, valkey_child
 
@@ -47,6 +48,8 @@ class LocalInstallation(Supervised):
         Where the web server listens on 127.0.0.1.
     concurrency : int, optional
         Number of worker processes; by default one per core, at most 8.
+    start_again : str
+        The command that starts it anew, for the message about a child that died.
     say : callable
         Told in a line what is being done.
     """
@@ -58,12 +61,14 @@ class LocalInstallation(Supervised):
         var: Path,
         port: int = DEFAULT_PORT,
         concurrency: int | None = None,
+        start_again: str = "",
         say: Callable[[str], None] = _say_nothing,
     ):
         self.checkout = checkout.resolve()
         self.var = var.resolve()
         self.port = port
         self.concurrency = concurrency or min(8, os.cpu_count() or 1)
+        self.start_again = start_again
         self._say = say
 
     @property
@@ -108,7 +113,13 @@ class LocalInstallation(Supervised):
         lock = self.var / "supervisor.lock"
         if not lock.exists():
             self.var.chmod(0o700)  # the first start: whoever made the folder, the data are this user's only
-        self._supervisor = Supervisor(self.var / "log", lock=lock)
+        again = f". Start again: {self.start_again}" if self.start_again else ""
+        self._supervisor = Supervisor(
+            self.var / "log",
+            lock=lock,
+            address=self.url,
+            consequence=f"; everything else has been stopped{again}",
+        )
         try:
             self._bring_up(self._supervisor)
         except BaseException:
@@ -116,12 +127,20 @@ class LocalInstallation(Supervised):
             raise
 
     def check(self) -> None:
-        """Raise ChildDied, with its last words, if any child has ended."""
-        self._running().check()
+        """If any child has ended, stop the others and raise ChildDied with its last words."""
+        with self._all_or_none():
+            self._running().check()
 
     def wait(self) -> None:
-        """Watch the children until Ctrl-C (KeyboardInterrupt) or the death of one (ChildDied)."""
-        self._running().wait()
+        """Watch the children until Ctrl-C (KeyboardInterrupt) or the death of one.
+
+        Raises
+        ------
+        ChildDied
+            When a child has ended; the others have been stopped then.
+        """
+        with self._all_or_none():
+            self._running().wait()
 
     def pid(self, name: str) -> int:
         """Process id of 'web', 'worker', 'sweeper' or 'valkey'."""
@@ -141,12 +160,27 @@ class LocalInstallation(Supervised):
         supervisor.guard.remove_when_orphaned(socket_path(self.var / "valkey").parent)
         supervisor.start(valkey_child(self.var / "valkey"))
         self._say("Starting the sweeper, the worker and the web server ...")
-        # Named in the reverse of the order in which they have to stop.
-        supervisor.start_together(
-            self._child("sweeper", *self._manage("sweep")),
-            self.worker_child(supervisor.log("worker")),
-            self.web_child(),
-        )
+        refuse_busy_port(self.port)  # somebody may have been faster meanwhile
+        try:
+            # Named in the reverse of the order in which they have to stop.
+            supervisor.start_together(
+                self._child("sweeper", *self._manage("sweep")),
+                self.worker_child(supervisor.log("worker")),
+                self.web_child(supervisor.log("web")),
+            )
+        except ChildDied as death:
+            if death.name == "web":
+                refuse_busy_port(self.port)  # what the web server died of, in fewer words
+            raise
+
+    @contextmanager
+    def _all_or_none(self) -> Iterator[None]:
+        """Within this block the death of one child ends the others, before anybody is told."""
+        try:
+            yield
+        except ChildDied:
+            self.stop()
+            raise
 
     def worker_child(self, log: Path) -> Child:
         command = [sys.executable, "-m", "celery", "-A", "workers.celery_app:app", "worker"]
@@ -163,12 +197,19 @@ class LocalInstallation(Supervised):
             grace=15.0,
         )
 
-    def web_child(self) -> Child:
+    def web_child(self, log: Path) -> Child:
         command = [sys.executable, "-m", "gunicorn", "kinetics_db.config.wsgi:application"]
         command += ["--bind", f"{HOST}:{self.port}", "--worker-class", "gthread", "--workers", "1"]
         command += ["--threads", "8", "--graceful-timeout", "5", "--no-control-socket"]
+        command += ["--log-level", "info"]  # which says when it listens
         return self._child(
-            "web", *command, is_ready=lambda: is_healthy(self.port), ready_timeout=120.0, role="web"
+            "web",
+            *command,
+            # On a port that it could not get, somebody else's web server may answer.
+            is_ready=lambda: says(log, "Listening at: ") and is_healthy(self.port),
+            ready_timeout=120.0,
+            role="web",
+            called="The web server",
         )
 
     def _manage(self, *arguments: str) -> list[str]:
@@ -181,6 +222,7 @@ class LocalInstallation(Supervised):
         is_ready: Callable[[], bool] | None = None,
         ready_timeout: float = 30.0,
         role: str = "worker",
+        called: str = "",
     ) -> Child:
         return Child(
             name=name,
@@ -189,6 +231,7 @@ class LocalInstallation(Supervised):
             folder=self.checkout,
             is_ready=is_ready,
             ready_timeout=ready_timeout,
+            called=called,
         )
 
 

@@ -27,15 +27,17 @@ def checkout() -> Path:
     return Path(__file__).resolve().parents[3]
 
 
-def var_folder() -> Path:
-    return Path(os.environ.get("RATEWRIGHT_VAR") or checkout() / "var").absolute()
+def var_folder(purpose: str) -> Path:
+    """Where the data are kept: invented ones in a folder of their own, unless RATEWRIGHT_VAR says where."""
+    unless_set = checkout() / "var" / "demo" if purpose == "demo" else checkout() / "var"
+    return Path(os.environ.get("RATEWRIGHT_VAR") or unless_set).absolute()
 
 
 def has_environment(folder: Path) -> bool:
     return (folder / ".venv" / "bin" / "python").exists()
 
 
-def wrong_python() -> "str | None":
+def wrong_python(purpose: str) -> "str | None":
     """What is wrong with the Python that runs this, or None."""
     version = sys.version_info[:2]
     if OLDEST_PYTHON <= version < FIRST_PYTHON_TOO_NEW:
@@ -43,7 +45,7 @@ def wrong_python() -> "str | None":
     return (
         f"Python {version[0]}.{version[1]} at {sys.executable} cannot be used: it has to be "
         f"{OLDEST_PYTHON[0]}.{OLDEST_PYTHON[1]} to {FIRST_PYTHON_TOO_NEW[0]}.{FIRST_PYTHON_TOO_NEW[1] - 1}. "
-        f"Name a suitable one, for instance: make demo PYTHON=python{OLDEST_PYTHON[0]}.{OLDEST_PYTHON[1] + 1}"
+        f"Name a suitable one, for instance: make {purpose} PYTHON=python{OLDEST_PYTHON[0]}.{OLDEST_PYTHON[1] + 1}"
     )
 
 
@@ -88,7 +90,7 @@ def disk_full(folder: Path) -> "str | None":
     return f"Only {free:.0f} MB are free on the disk of {folder}; {wanted} MB are needed. Free some space."
 
 
-def wrong_port(text: str) -> "str | None":
+def wrong_port(text: str, purpose: str) -> "str | None":
     """The port is no port, is reserved, or somebody listens there."""
     import socket
 
@@ -101,7 +103,7 @@ def wrong_port(text: str) -> "str | None":
             probe.bind(("127.0.0.1", port))
         except OSError:
             other = port + 1 if port < 65535 else port - 1
-            return f"Port {port} is taken by another program. Choose another one: make demo PORT={other}"
+            return f"Port {port} is taken by another program. Choose another one: make {purpose} PORT={other}"
     return None
 
 
@@ -111,13 +113,14 @@ def already_running(var: Path) -> "str | None":
 
     try:
         with (var / "supervisor.lock").open("r+") as file:
-            holder = file.read().strip()
+            holder, _, address = file.read().partition("\n")
+            where = f" at {address.strip()}" if address.strip() else ""
             try:
                 fcntl.flock(file, fcntl.LOCK_EX | fcntl.LOCK_NB)
             except OSError:
                 if holder.isdigit() and is_alive(int(holder)):
                     return (
-                        f"Ratewright already runs from {var} as process {holder}. "
+                        f"Ratewright already runs from {var}{where} as process {holder}. "
                         f"Use that one, or stop it: kill {holder}"
                     )
     except OSError:
@@ -153,7 +156,7 @@ def file_system_of(folder: str, mounts: str = "/proc/mounts") -> str:
     return kind
 
 
-def unfit_sqlite(var: Path) -> "str | None":
+def unfit_sqlite(var: Path, purpose: str) -> "str | None":
     """SQLite is missing or too old, or this disk cannot hold its database safely."""
     try:
         import sqlite3
@@ -166,7 +169,7 @@ def unfit_sqlite(var: Path) -> "str | None":
         needed = ".".join(str(part) for part in OLDEST_SQLITE)
         found = sqlite3.sqlite_version
         return f"SQLite {found} is too old: {needed} or newer is needed. A newer Python brings one."
-    elsewhere = "Put the data on a local disk: RATEWRIGHT_VAR=/local/folder make demo"
+    elsewhere = f"Put the data on a local disk: RATEWRIGHT_VAR=/local/folder make {purpose}"
     kind = file_system_of(str(var))
     if kind in NETWORK_FILE_SYSTEMS:
         return f"{var} lies on a network file system ({kind}), where SQLite can lose data. {elsewhere}"
@@ -224,18 +227,18 @@ def missing_postgresql() -> "str | None":
 
 def problems(purpose: str) -> "list[str]":
     """Everything that stands in the way of 'demo' (or 'serve') or 'test', a line each."""
-    python = wrong_python()
+    python = wrong_python(purpose)
     if python:
         return [python]  # the rest would be about a Python that is not going to be used
-    folder, var = checkout(), var_folder()
+    folder, var = checkout(), var_folder(purpose)
     found = [missing_venv(folder), not_writable(folder, "the programs are installed"), disk_full(folder)]
     found.append(missing_queue_server())
     if purpose == "test":
         found.append(missing_postgresql())
     else:
         unwritable = not_writable(var, "the data are kept")
-        found.append(unwritable or unfit_sqlite(var))
-        found.append(already_running(var) or wrong_port(os.environ.get("PORT") or DEFAULT_PORT))
+        found.append(unwritable or unfit_sqlite(var, purpose))
+        found.append(already_running(var) or wrong_port(os.environ.get("PORT") or DEFAULT_PORT, purpose))
     return [line for line in found if line]
 
 

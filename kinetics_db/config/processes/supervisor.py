@@ -6,7 +6,7 @@ Children get their own process group (so that Ctrl-C reaches the supervisor alon
 
 from __future__ import annotations
 
-import fcntl
+import errno
 import os
 import signal
 import threading
@@ -20,10 +20,12 @@ from subprocess import Popen, TimeoutExpired
 from types import FrameType
 from typing import Self
 
-from .failures import AlreadyRunning, ChildDied, ChildFailed, NotReady
-from .guard import Guard, group_is_running, is_running, kill_group
+from .failures import ChildDied, ChildFailed, NotReady
+from .guard import Guard, group_is_running, kill_group
+from .last_words import describe_status, ending, evidence
+from .lock import hold
 
-LINES_SHOWN = 15
+STDIN = 0
 ENDING_SIGNALS = (signal.SIGINT, signal.SIGTERM, signal.SIGHUP)
 
 
@@ -33,7 +35,8 @@ class Child:
 
     ``is_ready`` answers whether it can be used now, within ``ready_timeout`` seconds of its start;
     ``grace`` is how long, in seconds, it may take to stop before its whole group is killed;
-    ``user`` is a user and group id to run as.
+    ``user`` is a user and group id to run as; ``called`` is what people call it ('The queue (valkey)');
+    ``hint`` is advice for the case that it ends by itself.
     """
 
     name: str
@@ -46,6 +49,12 @@ class Child:
     stop_signal: int = signal.SIGTERM
     user: tuple[int, int] | None = None
     hint: str = ""
+    called: str = ""
+
+    @property
+    def subject(self) -> str:
+        """How a sentence about it begins."""
+        return self.called or f"The {self.name}"
 
 
 @dataclass
@@ -67,6 +76,10 @@ class Supervisor:
         Where the children's output goes, a file each.
     lock : Path, optional
         A file which only one supervisor at a time can hold; it contains the holder's process id.
+    address : str, optional
+        Where people reach what runs here (a URL), for those who find the lock taken.
+    consequence : str, optional
+        How the sentence about a dead child goes on: 'The worker was killed by SIGKILL' + consequence + '.'
 
     Raises
     ------
@@ -74,11 +87,15 @@ class Supervisor:
         When another supervisor holds the lock; the message gives its process id.
     """
 
-    def __init__(self, log_folder: Path, *, lock: Path | None = None):
+    def __init__(
+        self, log_folder: Path, *, lock: Path | None = None, address: str = "", consequence: str = ""
+    ):
         self.log_folder = log_folder
+        self.consequence = consequence
+        self._has_terminal = os.isatty(STDIN)
         log_folder.mkdir(parents=True, exist_ok=True)
         self._running: list[_Running] = []
-        self._lock = _hold(lock) if lock is not None else None
+        self._lock = hold(lock, address=address) if lock is not None else None
         # The guard shares the lock, so that it is free only when the last child of a killed owner is gone.
         self.guard = Guard(keep_open=() if self._lock is None else (self._lock,))
 
@@ -134,7 +151,7 @@ class Supervisor:
             if time.monotonic() > deadline:
                 self.stop_child(child.name)
                 raise NotReady(
-                    f"The step '{child.name}' did not end within {timeout:g} s." + _evidence(running.log, ""),
+                    f"The step '{child.name}' did not end within {timeout:g} s." + evidence(running.log),
                     name=child.name,
                     log=running.log,
                 )
@@ -144,27 +161,34 @@ class Supervisor:
         if status != 0:
             raise ChildFailed(
                 f"The step '{child.name}' failed ({describe_status(status)})."
-                + _evidence(running.log, child.hint),
+                + _explanation(running, status),
                 name=child.name,
                 log=running.log,
                 exit_status=status,
             )
 
     def check(self) -> None:
-        """Raise ChildDied, naming the child and its last words, if any has ended."""
+        """Raise ChildDied, naming the child and its last words, if any has ended.
+
+        A terminal that was closed meanwhile is an interrupt (KeyboardInterrupt) like Ctrl-C: the hang-up itself
+        reaches only the leader of the session, which may be a `make` that just dies of it.
+        """
+        if self._has_terminal and _terminal_is_closed():
+            raise KeyboardInterrupt
         for running in self._running:
             status = running.process.poll()
             if status is not None:
                 raise ChildDied(
-                    f"The {running.child.name} has died ({describe_status(status)})."
-                    + _evidence(running.log, running.child.hint),
+                    f"{ending(running.child.subject, status)}{self.consequence}."
+                    + _explanation(running, status),
                     name=running.child.name,
                     log=running.log,
                     exit_status=status,
                 )
         if not self.guard.is_alive():
             raise ChildDied(
-                f"The guard (process {self.guard.pid}) that cleans up after this program has died.",
+                f"The guard (process {self.guard.pid}) that cleans up after this program has died"
+                f"{self.consequence}.",
                 name="guard",
                 log=self.log_folder,
             )
@@ -199,8 +223,8 @@ class Supervisor:
     def _not_ready(self, running: _Running) -> NotReady:
         child = running.child
         return NotReady(
-            f"The {child.name} did not become ready within {child.ready_timeout:g} s."
-            + _evidence(running.log, child.hint),
+            f"{child.subject} did not become ready within {child.ready_timeout:g} s."
+            + evidence(running.log, hint=child.hint),
             name=child.name,
             log=running.log,
         )
@@ -279,49 +303,17 @@ class Supervised(ABC):
             self._supervisor = None
 
 
-def describe_status(status: int) -> str:
-    """Say in words how a process ended: 'exit status 3' or 'killed by SIGKILL'."""
-    if status >= 0:
-        return f"exit status {status}"
+def _explanation(running: _Running, status: int) -> str:
+    """A child killed from outside has nothing to say about it; one that gave up has."""
+    return f" Log: {running.log}" if status < 0 else evidence(running.log, hint=running.child.hint)
+
+
+def _terminal_is_closed() -> bool:
     try:
-        return f"killed by {signal.Signals(-status).name}"
-    except ValueError:
-        return f"killed by signal {-status}"
-
-
-def _evidence(log: Path, hint: str) -> str:
-    try:
-        lines = log.read_text(errors="replace").rstrip().splitlines()[-LINES_SHOWN:]
-    except OSError:
-        lines = []
-    advice = f" {hint}" if hint else ""
-    if not lines:
-        return f"{advice} It wrote nothing to {log}"
-    return f"{advice} The last lines of {log}:\n" + "\n".join(f"    {line}" for line in lines)
-
-
-def _hold(path: Path) -> int:
-    """Take the lock file, waiting while the children of a killed holder are being stopped."""
-    path.parent.mkdir(parents=True, exist_ok=True)
-    descriptor = os.open(path, os.O_RDWR | os.O_CREAT, 0o600)
-    deadline = time.monotonic() + 60.0
-    while True:
-        try:
-            fcntl.flock(descriptor, fcntl.LOCK_EX | fcntl.LOCK_NB)
-        except OSError as error:
-            written = os.pread(descriptor, 20, 0).strip()
-            holder = int(written) if written.isdigit() else 0
-            if (holder and is_running(holder)) or time.monotonic() > deadline:
-                os.close(descriptor)
-                raise AlreadyRunning(
-                    f"Ratewright already runs from {path.parent} as process {holder or 'unknown'}; "
-                    f"stop it first (Ctrl-C where it runs, or: kill {holder or 'PID'})."
-                ) from error
-            time.sleep(0.1)
-            continue
-        os.ftruncate(descriptor, 0)
-        os.pwrite(descriptor, f"{os.getpid()}\n".encode(), 0)
-        return descriptor
+        os.tcgetpgrp(STDIN)
+    except OSError as error:
+        return error.errno == errno.EIO  # another errno: a terminal, but not the one of this session
+    return False
 
 
 @contextmanager

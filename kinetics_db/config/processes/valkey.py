@@ -140,6 +140,7 @@ def valkey_child(data_folder: Path, *, name: str = "valkey") -> Child:
         command=command,
         folder=data_folder,
         is_ready=lambda: answers(path),
+        called=f"The queue ({name})",
         hint=f"Waiting work is in the database; if {data_folder} cannot be read, it may be removed.",
     )
 

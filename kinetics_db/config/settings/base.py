@@ -4,7 +4,7 @@ import os
 from pathlib import Path
 
 BASE_DIR = Path(__file__).resolve().parents[3]
-VAR_DIR = Path(os.environ.get("RATEWRIGHT_VAR", BASE_DIR / "var")).resolve()
+VAR_DIR = Path(os.environ.get("RATEWRIGHT_VAR") or BASE_DIR / "var").resolve()
 
 INSTALLED_APPS = [
     "django.contrib.auth",

@@ -4,11 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
+
+from django.utils import timezone
 
 from kinetics_db.datasets.services import freeze_dataset
 from kinetics_db.demo.invented.exports import export_file
-from kinetics_db.demo.invented.plan import Plan, PlannedRun, Rival
+from kinetics_db.demo.invented.plan import Plan, PlannedRun, Rival, Solution
 from kinetics_db.demo.invented.reality import Exported
 from kinetics_db.demo.invented.recipe import recipe_of, stated_noise
 from kinetics_db.engine.fitting.problem import Constant
@@ -28,21 +30,29 @@ if TYPE_CHECKING:  # entrances never import models; names of types are no import
     from kinetics_db.accounts.models import User
     from kinetics_db.datasets.models import Dataset
     from kinetics_db.fits.models import Fit
+    from kinetics_db.materials.models import LotRevision, StockRevision
     from kinetics_db.measurements.models import ConcentrationTable
     from kinetics_db.mechanisms.models import MechanismVersion
     from kinetics_db.projects.models import Project
+    from kinetics_db.provenance.models import ImmutableRecord
     from kinetics_db.runs.models import RunRevision
 
 Say = Callable[[str], None]
+R = TypeVar("R", bound="ImmutableRecord")
 
 
 @dataclass(frozen=True)
 class Loaded:
-    """What stands in the database: the frozen choice of all runs, and each rival with its version."""
+    """What stands in the database: the frozen choice of all runs, and each rival with its version.
+
+    ``runs`` counts them; ``is_new`` tells whether this call has entered anything.
+    """
 
     project: Project
     dataset: Dataset
     versions: Sequence[tuple[Rival, MechanismVersion]]
+    runs: int
+    is_new: bool
 
 
 def load(
@@ -50,32 +60,52 @@ def load(
 ) -> Loaded:
     """Enter materials and runs, upload and reduce the files, write the rivals, freeze the dataset.
 
-    May be called again: whatever is there already and unchanged is used as it is.
+    May be called again: whatever is there already and unchanged is used as it is, and ``say`` is told of
+    nothing but what was done.
     """
+    begun = timezone.now()
+
+    def new(records: Sequence[R]) -> list[R]:
+        return [record for record in records if record.created >= begun]
+
     project = _project(plan, user)
-    _enter_materials(plan, user, project.pk)
-    say(f"{len(plan.bottles)} lots and {len(plan.solutions)} solutions entered")
+    lots, stocks = _enter_materials(plan, user, project.pk)
+    bottles, solutions = len(new(lots)), len(new(stocks))
+    if bottles or solutions:
+        say(f"{counted(bottles, 'lot')} and {counted(solutions, 'solution')} entered")
     revisions = [_logged(plan, export.run, user, project.pk) for export in exports]
-    say(f"{len(revisions)} runs logged")
+    if new(revisions):
+        say(f"{counted(len(new(revisions)), 'run')} logged")
     tables = [
         _uploaded(plan, export, revision, user) for export, revision in zip(exports, revisions, strict=True)
     ]
-    points = sum(table.rows * len(plan.signals) for table in tables)
-    say(f"{len(tables)} files read and reduced, {points} concentrations")
+    if new(tables):
+        points = sum(table.rows * len(plan.signals) for table in new(tables))
+        say(f"{counted(len(new(tables)), 'file')} read and reduced, {points} concentrations")
     versions = [
-        (
-            rival,
-            write_version(
-                user=user, project_id=project.pk, name=rival.name, text=rival.text, note=rival.note
-            ),
-        )
+        write_version(user=user, project_id=project.pk, name=rival.name, text=rival.text, note=rival.note)
         for rival in rivals
     ]
+    if new(versions):
+        say(f"{counted(len(new(versions)), 'mechanism version')} written")
     dataset = freeze_dataset(
         user=user, project_id=project.pk, name="all runs", table_ids=[table.pk for table in tables]
     )
-    say(f"{len(versions)} mechanism versions written, the dataset frozen")
-    return Loaded(project, dataset, versions)
+    if new([dataset]):
+        say(f"the dataset of {counted(len(tables), 'run')} frozen")
+    every = [*lots, *stocks, *revisions, *tables, *versions, dataset]
+    return Loaded(
+        project=project,
+        dataset=dataset,
+        versions=list(zip(rivals, versions, strict=True)),
+        runs=len(revisions),
+        is_new=bool(new(every)),
+    )
+
+
+def counted(number: int, what: str) -> str:
+    """'1 run', '24 runs'."""
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"
 
 
 def ask_for_fits(plan: Plan, loaded: Loaded, *, user: User) -> list[Fit]:
@@ -108,7 +138,9 @@ def _project(plan: Plan, user: User) -> Project:
         )
 
 
-def _enter_materials(plan: Plan, user: User, project_id: int) -> None:
+def _enter_materials(
+    plan: Plan, user: User, project_id: int
+) -> tuple[list[LotRevision], list[StockRevision]]:
     for substance in plan.substances:
         enter_compound(
             user=user,
@@ -117,7 +149,7 @@ def _enter_materials(plan: Plan, user: User, project_id: int) -> None:
             formula=substance.formula,
             molar_mass=substance.molar_mass,
         )
-    for bottle in plan.bottles:
+    lots = [
         enter_lot(
             user=user,
             project_id=project_id,
@@ -126,19 +158,22 @@ def _enter_materials(plan: Plan, user: User, project_id: int) -> None:
             purity=bottle.purity,
             purity_uncertainty=bottle.purity_u,
         )
-    for solution in plan.solutions:
-        weighed, volume = solution.weighed, solution.volume
-        make_up_stock(
-            user=user,
-            project_id=project_id,
-            code=solution.code,
-            portions=[
-                Portion(weighed.value, weighed.unit, lot=solution.bottle, uncertainty=weighed.uncertainty)
-            ],
-            volume=(volume.value, volume.unit),
-            volume_uncertainty=volume.uncertainty,
-            made_on=solution.made_on,
-        )
+        for bottle in plan.bottles
+    ]
+    return lots, [_made_up(solution, user, project_id) for solution in plan.solutions]
+
+
+def _made_up(solution: Solution, user: User, project_id: int) -> StockRevision:
+    weighed, volume = solution.weighed, solution.volume
+    return make_up_stock(
+        user=user,
+        project_id=project_id,
+        code=solution.code,
+        portions=[Portion(weighed.value, weighed.unit, lot=solution.bottle, uncertainty=weighed.uncertainty)],
+        volume=(volume.value, volume.unit),
+        volume_uncertainty=volume.uncertainty,
+        made_on=solution.made_on,
+    )
 
 
 def _logged(plan: Plan, run: PlannedRun, user: User, project_id: int) -> RunRevision:

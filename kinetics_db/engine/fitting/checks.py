@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable, Iterator, Mapping, Sequence
+from collections import Counter
+from collections.abc import Callable, Iterable, Iterator, Mapping, Sequence
 
 import numpy as np
 
-from kinetics_db.engine.fitting.parameters import ParameterMap, start_value
+from kinetics_db.engine.fitting.mistyped import mistyped, text
+from kinetics_db.engine.fitting.parameters import FARTHEST, ParameterMap, start_keys, start_value
 from kinetics_db.engine.fitting.problem import (
     Constant,
     Experiment,
@@ -21,7 +23,28 @@ from kinetics_db.engine.network.model import Network
 from kinetics_db.engine.simulation.equations import equations_of
 from kinetics_db.errors import InvalidInput, Problem
 
-LARGEST_JACOBIAN = 30_000_000  # values times parameters; keeps a fit below about 1 GB
+LARGEST_JACOBIAN = 15_000_000  # values times parameters; keeps a fit below about 1 GB
+# The singular values of so many take seconds, in which nobody hears of progress: well below a background job's lease.
+MOST_PARAMETERS = 1500
+LARGEST_SIZE = 1e100  # of a start or prior, so that no square or product of it overflows
+LONGEST_SECONDS = 7 * 86_400
+ERROR_MODELS = ("as tabulated", "one sigma", "one sigma per observable")
+WHOLE_NUMBERS: Mapping[str, tuple[str, int, int]] = {
+    "starts": ("a number of starts", 1, 10_000),
+    "seed": ("a seed", 0, 2**53 - 1),  # the largest that every reader of JSON keeps
+    "max_iterations": ("a number of iterations", 1, 100_000),
+    "max_steps": ("a number of steps", 1, 10_000_000),
+}
+NUMBERS: Mapping[str, tuple[str, Callable[[float], bool], str]] = {
+    "confidence": ("a confidence", lambda value: 0 < value < 1, "between 0 and 1"),
+    "rtol": ("a relative tolerance", lambda value: 1e-13 <= value <= 1e-3, "1e-13 to 1e-3"),
+    "start_spread": ("a start spread", lambda value: 1 < value <= FARTHEST, f"above 1, up to {FARTHEST:g}"),
+    "max_seconds": (
+        "a time limit in s",
+        lambda value: 0 < value <= LONGEST_SECONDS,
+        f"above 0 s, up to {LONGEST_SECONDS} s (7 days)",
+    ),
+}
 
 
 def check_fit(
@@ -33,8 +56,13 @@ def check_fit(
     settings: Settings,
 ) -> None:
     """InvalidInput with everything that keeps the fit from starting."""
+    in_settings = list(_settings(settings))
+    # values of a wrong type come first: nothing can be compared with them
+    wrong_types = list(_wrong_types(constants, starts, nuisances))
+    if wrong_types:
+        raise InvalidInput([*in_settings, *wrong_types])
     problems = [
-        *_settings(settings),
+        *in_settings,
         *_constants(network, experiments, constants),
         *_starts(network, starts),
         *_nuisances(nuisances),
@@ -46,27 +74,41 @@ def check_fit(
         raise InvalidInput(problems)
 
 
+def _wrong_types(
+    constants: Sequence[Constant], starts: Sequence[StartConcentration], nuisances: Sequence[Nuisance]
+) -> Iterator[Problem]:
+    for i, constant in enumerate(constants, start=1):
+        yield from mistyped(constant, _place(constant.name, f"constants.{i}"))
+    for i, start in enumerate(starts, start=1):
+        yield from mistyped(start, _place(start.species, f"start_concentrations.{i}"))
+    for i, nuisance in enumerate(nuisances, start=1):
+        yield from mistyped(nuisance, _place(nuisance.name, f"nuisances.{i}"))
+
+
+def _place(name: str, position: str) -> str:
+    return position if any(text(name, position)) else name
+
+
 def _settings(settings: Settings) -> Iterator[Problem]:
-    if settings.error_model not in ("as tabulated", "one sigma", "one sigma per observable"):
-        cure = "as tabulated, one sigma, or one sigma per observable"
+    wrong = list(mistyped(settings, ""))
+    yield from wrong
+    unusable = {problem.field for problem in wrong}
+    if "error_model" not in unusable and settings.error_model not in ERROR_MODELS:
+        cure = ", ".join(ERROR_MODELS)
         yield Problem(f"unknown error model {settings.error_model!r}", field="error_model", cure=cure)
-    if not 0 < settings.confidence < 1:
-        yield Problem(f"confidence {settings.confidence:g}", field="confidence", cure="between 0 and 1")
-    if not 1e-13 <= settings.rtol <= 1e-3:
-        yield Problem(f"relative tolerance {settings.rtol:g}", field="rtol", cure="1e-13 to 1e-3")
-    if settings.starts < 1 or settings.max_iterations < 1 or settings.max_steps < 1:
-        yield Problem("starts, iterations and steps must be at least 1", field="starts")
-    if not settings.start_spread > 1:
-        yield Problem(f"start spread {settings.start_spread:g}", field="start_spread", cure="above 1")
-    if not settings.max_seconds > 0:
-        yield Problem(f"time limit {settings.max_seconds:g} s", field="max_seconds", cure="above 0 s")
+    for name, (what, low, high) in WHOLE_NUMBERS.items():
+        if name not in unusable and not low <= getattr(settings, name) <= high:
+            yield Problem(f"{what} of {getattr(settings, name)}", field=name, cure=f"{low} to {high}")
+    for name, (what, usable, cure) in NUMBERS.items():
+        if name not in unusable and not usable(getattr(settings, name)):
+            yield Problem(f"{what} of {getattr(settings, name):g}", field=name, cure=cure)
 
 
 def _constants(
     network: Network, experiments: Sequence[Experiment], constants: Sequence[Constant]
 ) -> Iterator[Problem]:
     names = [c.name for c in constants]
-    for name in sorted({n for n in names if names.count(n) > 1}):
+    for name in _repeated(names):
         yield Problem(f"constant {name} is given twice", field=name)
     for name in network.constants:
         if name not in names:
@@ -90,6 +132,7 @@ def _constants(
                 what = f"{constant.name} is grouped by {constant.group_by!r}, which these experiments lack: "
                 yield Problem(what + ", ".join(missing), field=constant.name)
                 continue
+        yield from _start_names(constant, experiments)
         free = constant.scope != "held"
         values = {constant.start, *constant.starts.values()}
         values |= {start_value(constant, e) for e in experiments}
@@ -103,7 +146,7 @@ def _constants(
 
 def _starts(network: Network, starts: Sequence[StartConcentration]) -> Iterator[Problem]:
     names = [s.species for s in starts]
-    for name in sorted({n for n in names if names.count(n) > 1}):
+    for name in _repeated(names):
         yield Problem(f"the start concentration of {name} is given twice", field=name)
     for start in starts:
         name = f"[{start.species}]0"
@@ -119,11 +162,27 @@ def _starts(network: Network, starts: Sequence[StartConcentration]) -> Iterator[
         yield from _prior(name, start.prior, True)
 
 
+def _start_names(constant: Constant, experiments: Sequence[Experiment]) -> Iterator[Problem]:
+    """Start values of a constant that nothing in the fit would take."""
+    usable = start_keys(constant, experiments)
+    unknown = [key for key in constant.starts if key not in usable]
+    if unknown:
+        named = ", ".join(str(key) for key in unknown[:20])
+        what = f"start values of {constant.name} for what it has no value of its own in: {named}"
+        if constant.scope == "same in all runs":
+            cure = "none, since it is the same in all runs; or the scope in a group, or own per run"
+        else:
+            cure = "one of " + ", ".join(usable[:20])
+        yield Problem(what, field=constant.name, cure=cure)
+
+
 def _start_in_bounds(
     name: str, value: float, lower: float | None, upper: float | None, positive: bool, free: bool
 ) -> Iterator[Problem]:
     if not math.isfinite(value):
-        yield Problem(f"start {value} of {name} is not finite", field=name)
+        yield Problem(f"start {value} of {name} is not finite", field=name, cure="a finite number")
+    elif abs(value) > LARGEST_SIZE:
+        yield Problem(f"start {value:g} of {name} is too large", field=name, cure=f"up to {LARGEST_SIZE:g}")
     elif positive and (value < 0 or (free and value == 0)):
         yield Problem(f"start {value:g} of {name} is not positive", field=name, cure="above 0")
     elif free and lower is not None and value < lower:
@@ -135,27 +194,31 @@ def _start_in_bounds(
 def _bounds(name: str, lower: float | None, upper: float | None, positive: bool) -> Iterator[Problem]:
     for bound in (lower, upper):
         if bound is not None and math.isnan(bound):
-            yield Problem(f"a bound of {name} is not a number", field=name)
+            yield Problem(f"a bound of {name} is not a number", field=name, cure="a number, or no bound")
     if lower is not None and upper is not None and not lower < upper:
         yield Problem(f"lower bound {lower:g} of {name} is not below its upper bound {upper:g}", field=name)
     if positive and upper is not None and upper <= 0:
-        yield Problem(f"upper bound {upper:g} of {name} is not positive", field=name)
+        yield Problem(f"upper bound {upper:g} of {name} is not positive", field=name, cure="above 0")
+    if positive and lower is not None and lower < 0:
+        yield Problem(
+            f"lower bound {lower:g} of {name} is negative", field=name, cure="zero or more, or none"
+        )
 
 
 def _prior(name: str, prior: Prior | None, positive: bool) -> Iterator[Problem]:
     if prior is None:
         return
-    if not (math.isfinite(prior.sd) and prior.sd > 0):
-        yield Problem(f"prior sd {prior.sd:g} of {name}", field=name, cure="above 0")
-    if not math.isfinite(prior.mean) or (positive and prior.mean <= 0):
-        yield Problem(
-            f"prior mean {prior.mean:g} of {name}", field=name, cure="a finite value, above 0 if positive"
-        )
+    if not 1.0 / LARGEST_SIZE <= prior.sd <= LARGEST_SIZE:
+        cure = f"above 0, up to {LARGEST_SIZE:g}"
+        yield Problem(f"prior sd {prior.sd:g} of {name}", field=name, cure=cure)
+    if not abs(prior.mean) <= LARGEST_SIZE or (positive and prior.mean <= 0):
+        cure = f"up to {LARGEST_SIZE:g}, above 0 if positive"
+        yield Problem(f"prior mean {prior.mean:g} of {name}", field=name, cure=cure)
 
 
 def _nuisances(nuisances: Sequence[Nuisance]) -> Iterator[Problem]:
     names = [n.name for n in nuisances]
-    for name in sorted({n for n in names if names.count(n) > 1}):
+    for name in _repeated(names):
         yield Problem(f"nuisance parameter {name} is given twice", field=name)
     for nuisance in nuisances:
         if not (math.isfinite(nuisance.sd) and nuisance.sd > 0):
@@ -170,7 +233,7 @@ def _experiments(
     names = [e.name for e in experiments]
     if not experiments:
         yield Problem("there is no experiment to fit", field="experiments")
-    for name in sorted({n for n in names if names.count(n) > 1}):
+    for name in _repeated(names):
         yield Problem(f"two experiments are called {name}", field=name)
     kinds = {n.name: n.kind for n in nuisances}
     for experiment in experiments:
@@ -258,17 +321,22 @@ def _counts(
 ) -> Iterator[Problem]:
     parameters = ParameterMap(network, experiments, constants, starts, nuisances).parameters
     names = [p.name for p in parameters]
-    clash = sorted(
-        {n.name for n in nuisances if any(p.name == n.name and p.kind != "nuisance" for p in parameters)}
-    )
-    for name in clash:
+    others = {p.name for p in parameters if p.kind != "nuisance"}
+    for name in sorted({n.name for n in nuisances} & others):
         yield Problem(f"nuisance parameter {name} has the name of another parameter", field=name)
     n = sum(int(valid_points(e, settings).sum()) for e in experiments)
     size = sum(e.values.size for e in experiments) * len(parameters)
     if size > LARGEST_JACOBIAN:
         what = f"{len(parameters)} parameters times {size // len(parameters)} values are too many for one fit"
         yield Problem(what, cure=f"at most {LARGEST_JACOBIAN:.0e} together; thin out the tables")
+    if len(parameters) > MOST_PARAMETERS:
+        what = f"{len(parameters)} parameters are too many for one fit"
+        yield Problem(what, cure=f"at most {MOST_PARAMETERS}, those of the causes of error counted")
     without_prior = sum(p.prior_sd is None for p in parameters)
     if without_prior > n:
         what = f"{without_prior} parameters without a prior are to be found from {n} values"
         yield Problem(what, cure="fewer free parameters, more data, or priors: " + ", ".join(names[:20]))
+
+
+def _repeated(names: Iterable[str]) -> list[str]:
+    return sorted(name for name, times in Counter(names).items() if times > 1)

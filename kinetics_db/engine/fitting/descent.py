@@ -2,33 +2,35 @@
 
 SciPy's trust-region reflective method (Branch, Coleman & Li, SIAM J. Sci. Comput. 21 (1999) 1) on exact
 Jacobians. It ends when a full Gauss-Newton step would no longer lower -2 ln L noticeably (in the spirit of the
-relative offset, Bates & Watts, Technometrics 23 (1981) 179); a few full steps then sharpen the point.
+relative offset, Bates & Watts, Technometrics 23 (1981) 179); a few full steps then sharpen the point. A parameter
+that comes near a bound with the step leading across is set on the bound and stays there as long as the fit would
+cross it (an active set: Nocedal & Wright, Numerical Optimization, 2006, chapter 16); the others have to satisfy
+the criterion.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
-from typing import Any, Literal
+from typing import Literal
 
 import numpy as np
 from numpy.typing import NDArray
-from scipy.optimize import least_squares
 
+from kinetics_db.engine.fitting.elsewhere import lowest_decade
 from kinetics_db.engine.fitting.objective import Objective, Point
+from kinetics_db.engine.fitting.parameters import FARTHEST
 from kinetics_db.engine.fitting.problem import Settings
 from kinetics_db.engine.fitting.residuals import Evaluation, InterruptedFitError, Model
-from kinetics_db.engine.fitting.uncertainty import Curvature, curvature, pushed_against_bounds
+from kinetics_db.engine.fitting.search import HARDLY, Search
+from kinetics_db.engine.fitting.standing import LOOSE, WEAK, Flags, Standing, standing_of
 
 Floats = NDArray[np.float64]
 DescentStatus = Literal["converged", "stopped", "not converged", "cannot start"]
 
 TIGHT = 1e-13  # further fall of -2 ln L, per point, that counts as none
-LOOSE = 1e-5  # fall of -2 ln L, 0.003 standard errors, below which the search hands over to full steps
 MOST_POLISHING_STEPS = 10
-MOST_SEARCHES = 3
-MOST_FAILURES_IN_A_ROW = 16
-HARDLY = "a full step would hardly lower the cost"
+MOST_SEARCHES = 3  # that ended nowhere
 MOST_SIGMA_ROUNDS = 60
 SIGMA_TOLERANCE = 1e-6
 
@@ -49,12 +51,22 @@ class Descent:
     iterations: int = 0
 
 
-class _StalledError(Exception):
-    """No trial point was better for a long while."""
+@dataclass(frozen=True, eq=False)
+class _End:
+    point: Point
+    converged: bool
+    message: str
 
 
 class Descender:
-    """Runs descents on one problem and remembers the best point seen."""
+    """Runs descents on one problem and remembers the best point seen.
+
+    Attributes
+    ----------
+    lower, upper, scale : ndarray, shape (p,), limits and typical steps on the fitted scale
+    best : lowest cost of this descent at its own sigmas, kept for a descent that is cut short
+    iterations : of all descents
+    """
 
     def __init__(
         self,
@@ -65,205 +77,203 @@ class Descender:
     ) -> None:
         self.model = model
         self.objective = objective
-        self.best: Point | None = None  # lowest cost at its own sigmas, kept for a search that is cut short
+        self.settings = settings
+        self.best: Point | None = None
         self.iterations = 0
+        self.lower, self.upper = objective.parameters.bounds
+        self.scale = objective.parameters.scales
         self._negligible = TIGHT * max(objective.data.n, 1)
-        self._settings = settings
         self._on_progress = on_progress
-        parameters = objective.parameters
-        self._lower, self._upper = parameters.bounds
-        self._scale = np.array([p.scale for p in parameters.parameters])
+        self._standing: Standing | None = None
+        self._first = True
 
     def descend(self, theta: Floats) -> Descent:
-        """From theta to the nearest minimum, within the settings' limits."""
+        """From theta to the nearest minimum, within the settings' limits.
+
+        The first descent, when it ends where constants have no effect, is repeated from other decades.
+        """
         begun = self.iterations
         self.best = None
+        first, self._first = self._first, False
         status: DescentStatus
         try:
             evaluation = self.model.evaluate(theta)
             if evaluation.failed is not None:
                 return Descent("cannot start", _failure(evaluation), None)
-            current, status, message = self._rounds(self._meet(evaluation), begun)
-            if status == "converged":
-                self.best = current
+            start = self.meet(evaluation)
+            end = self._rounds(start)
+            if first:
+                for point in self._elsewhere(start, end):
+                    other = self._rounds(point)
+                    end = other if other.point.cost < end.point.cost - LOOSE else end
+            end = self._judged(end)
+            status, message = "converged" if end.converged else "not converged", end.message
+            if end.converged or self.best is None or end.point.cost < self.best.cost + LOOSE:
+                self.best = end.point
         except InterruptedFitError as interruption:
             status, message = "stopped", str(interruption)
             if self.best is None:
                 message += " before the first evaluation was complete"
         return Descent(status, message, self.best, self.iterations - begun)
 
-    def _rounds(self, current: Point, begun: int) -> tuple[Point, Literal["converged", "not converged"], str]:
+    def _rounds(self, current: Point) -> _End:
         """Alternate the parameters and the profiled sigmas to their fixed point."""
+        last = self.iterations + self.settings.max_iterations
         for _ in range(MOST_SIGMA_ROUNDS):
             sigmas = current.sigmas
-            current, converged, message = self._minimise(current, sigmas, begun)
+            current, converged, message = self._minimise(current, sigmas, last)
             if not converged:
-                return current, "not converged", message
+                return _End(current, False, message)
             # with one common sigma and no prior a second round only sharpens the criterion
             if np.allclose(np.log(current.sigmas), np.log(sigmas), rtol=0, atol=SIGMA_TOLERANCE):
-                return current, "converged", message
-        return current, "not converged", "the standard uncertainties did not settle"
+                return _End(current, True, message)
+        return _End(current, False, "the standard uncertainties did not settle")
 
-    def _meet(self, evaluation: Evaluation) -> Point:
+    def _elsewhere(self, start: Point, end: _End) -> Iterator[Point]:
+        """Lower points by decades off the start, when constants have no effect or left for the limit."""
+        parameters = self.objective.parameters
+        movable = parameters.constants & parameters.positive
+        standing = self.standing(end.point, end.point.sigmas)
+        suspects = movable & ((standing.effects < WEAK) | self._at_limit(standing))
+        if not suspects.any():
+            return
+        tries = [(end.point.theta, suspects, end.point)]
+        if self._trouble(standing):
+            tries += [(start.theta, suspects, start), (start.theta, movable, start)]
+        tried: list[Floats] = []
+        for others, which, reference in tries:
+            found = lowest_decade(others, which, parameters, self._look_at)
+            if found is None or found.cost >= reference.cost - LOOSE:
+                continue
+            if not any(np.array_equal(found.theta, theta) for theta in tried):
+                tried.append(found.theta)
+                yield found
+
+    def _look_at(self, theta: Floats) -> Point | None:
+        evaluation = self.model.evaluate(theta)
+        return None if evaluation.failed is not None else self.meet(evaluation)
+
+    def _judged(self, end: _End) -> _End:
+        """No end is a minimum where no constant acts or where one still runs."""
+        if end.converged:
+            trouble = self._trouble(self.standing(end.point, end.point.sigmas))
+            return _End(end.point, False, trouble) if trouble else end
+        return end
+
+    def _trouble(self, standing: Standing) -> str:
+        parameters = self.objective.parameters
+        at_limit = self._at_limit(standing)
+        if at_limit.any():
+            names = ", ".join(parameters.parameters[i].name for i in np.flatnonzero(at_limit))
+            return (
+                f"{names} went to the limit of the search, {FARTHEST:.0e}-fold from the start: start nearer to "
+                "the truth, give a bound, or leave out the step"
+            )
+        constants = parameters.constants
+        acts = (standing.effects >= WEAK) | standing.held
+        free_of_priors = constants & np.isinf(self.objective.prior_sds)
+        if free_of_priors.any() and not acts[constants].any():
+            return (
+                "no fitted constant has an effect on any point where the fit ended: start nearer to the truth, "
+                "or from several starts"
+            )
+        return ""
+
+    def _at_limit(self, standing: Standing) -> Flags:
+        """Parameters that are pushed against a limit which nobody gave, shape (p,)."""
+        given_lower, given_upper = self.objective.parameters.bounded
+        theta = standing.point.theta
+        given = (given_lower & (theta <= self.lower)) | (given_upper & (theta >= self.upper))
+        return standing.held & ~given
+
+    def meet(self, evaluation: Evaluation) -> Point:
+        """The point of an evaluation that did not fail, remembered when it is the best so far."""
         point = self.objective.point(evaluation)
         if self.best is None or point.cost < self.best.cost:
             self.best = point
         return point
 
-    def _minimise(self, current: Point, sigmas: Floats, begun: int) -> tuple[Point, bool, str]:
+    def _minimise(self, current: Point, sigmas: Floats, last: int) -> tuple[Point, bool, str]:
         ending = HARDLY
-        if not self.hardly_falls(current, sigmas):
-            for _ in range(MOST_SEARCHES):  # a fresh trust region helps where the last one shrank away
-                current, ending = _Search(self, current, sigmas, begun).run()
-                used_up = self.iterations - begun >= self._settings.max_iterations
-                if used_up or self.hardly_falls(current, sigmas):
-                    break
-        remaining = self._curvature(current, sigmas).decrease
-        if remaining >= LOOSE:
-            what = f"{ending}, though a full step should lower -2 ln L by {remaining:.3g}"
+        searches = 0
+        for _ in range(4 * MOST_SEARCHES + 2 * len(self.scale)):  # parameters may be set on bounds one by one
+            standing = self.standing(current, sigmas)
+            if standing.crossing.any():
+                moved = self._onto_bounds(standing, standing.crossing)
+                if moved is None:
+                    return current, False, "the model fails at a bound that the fit is pushed against"
+                current = moved
+                self.accepted(current)
+                continue
+            if standing.decrease < LOOSE or searches == MOST_SEARCHES or self.iterations >= last:
+                break
+            current, ending = Search(self, standing, last).run()
+            current, reached = self._after(current, sigmas)
+            searches += not reached  # a fresh trust region helps where the last one shrank away
+        standing = self.standing(current, sigmas)
+        if standing.decrease >= LOOSE:
+            what = f"{ending}, though a full step should lower -2 ln L by {standing.decrease:.3g}"
             return current, False, what
-        current, remaining = self._polish(current, sigmas, remaining)
+        current, remaining = self._polish(current, sigmas, standing.decrease)
         return current, True, f"a full step would lower -2 ln L by {remaining:.1e} only"
+
+    def _after(self, current: Point, sigmas: Floats) -> tuple[Point, bool]:
+        """Where to go on after a search, and whether it led to a minimum or a bound."""
+        standing = self.standing(current, sigmas)
+        if standing.decrease < LOOSE or standing.crossing.any():
+            return current, True
+        if standing.beyond.any():  # the solver may creep towards a bound without getting near
+            moved = self._onto_bounds(standing, standing.beyond)
+            if moved is not None and self.sum_of_squares(moved, sigmas) < self.sum_of_squares(
+                current, sigmas
+            ):
+                self.accepted(moved)
+                return moved, True
+        return current, False
+
+    def _onto_bounds(self, standing: Standing, which: Flags) -> Point | None:
+        """The point with these parameters exactly on the bounds that a full step would cross."""
+        theta = standing.point.theta
+        there = np.where(standing.found.step > 0, self.upper, self.lower)
+        return self._look_at(np.where(which, there, theta))
 
     def _polish(self, current: Point, sigmas: Floats, decrease: float) -> tuple[Point, float]:
         """Last full steps, judged by the fall still to come, since the fall itself drowns in integration noise."""
         for _ in range(MOST_POLISHING_STEPS):
             if decrease < self._negligible:
                 break
-            theta = current.theta + self._curvature(current, sigmas).step
-            if np.any(theta < self._lower) or np.any(theta > self._upper):
+            theta = current.theta + self.standing(current, sigmas).found.step
+            if np.any(theta < self.lower) or np.any(theta > self.upper):
                 break
-            evaluation = self.model.evaluate(theta)
-            if evaluation.failed is not None:
+            point = self._look_at(theta)
+            if point is None:
                 break
-            point = self._meet(evaluation)
-            left = self._curvature(point, sigmas).decrease
+            left = self.standing(point, sigmas).decrease
             if left >= decrease:
                 break
             current, decrease = point, left
             self.accepted(current)
         return current, decrease
 
-    def _curvature(self, point: Point, sigmas: Floats) -> Curvature:
-        residuals, jacobian = self.objective.standardised(point, sigmas)
-        pulls = self.objective.prior_residuals(point.theta)
-        gradient = jacobian.T @ residuals + pulls / self.objective.prior_sds
-        fixed = pushed_against_bounds(point.theta, self._lower, self._upper, gradient, self._scale)
-        return curvature(jacobian, residuals, self.objective.prior_sds, pulls, fixed, self._scale)
+    def standing(self, point: Point, sigmas: Floats) -> Standing:
+        """How a point stands at these sigmas; the last one is remembered."""
+        last = self._standing
+        if last is not None and last.point is point and np.array_equal(last.sigmas, sigmas):
+            return last
+        self._standing = standing_of(self.objective, point, sigmas, self.model.look_up)
+        return self._standing
 
-    def hardly_falls(self, point: Point, sigmas: Floats) -> bool:
-        """Whether a full Gauss-Newton step inside the bounds would no longer lower the cost noticeably."""
-        return self._curvature(point, sigmas).decrease < LOOSE
+    def sum_of_squares(self, point: Point, sigmas: Floats) -> float:
+        """Of the standardised residuals and the pulls, at these sigmas."""
+        residuals = point.residuals / self.objective.data.sigma_of_points(sigmas)
+        pulls = self.objective.prior_residuals(point.theta)
+        return float(residuals @ residuals + pulls @ pulls)
 
     def accepted(self, point: Point) -> None:
         """Count an iteration and tell of it."""
         self.iterations += 1
         if self._on_progress is not None:
             self._on_progress(self.iterations, point.cost)
-
-
-class _Search:
-    """One call of the least-squares solver at fixed sigmas, in steps of each parameter's scale."""
-
-    def __init__(self, owner: Descender, origin: Point, sigmas: Floats, begun: int) -> None:
-        self._owner = owner
-        self._origin = origin
-        self._sigmas = sigmas
-        self._last_iteration = begun + owner._settings.max_iterations
-        self._known: list[tuple[Floats, Point]] = [(np.zeros_like(origin.theta), origin)]
-        self._accepted = origin
-        self._failures = 0
-        self._lowest = self._sum_of_squares(origin)
-
-    def run(self) -> tuple[Point, str]:
-        """The last accepted point and how the search ended, in words."""
-        owner = self._owner
-        scale, theta = owner._scale, self._origin.theta
-        lower, upper = (owner._lower - theta) / scale, (owner._upper - theta) / scale
-        try:
-            found = least_squares(
-                self._residuals,
-                np.zeros_like(theta),
-                jac=self._jacobian,
-                bounds=(lower, upper),
-                method="trf",
-                ftol=1e-12,
-                xtol=1e-10,
-                gtol=1e-14,
-                x_scale=self._steps(lower, upper),
-                max_nfev=10 * owner._settings.max_iterations,
-                callback=self._after_iteration,
-            )
-        except _StalledError:
-            return self._accepted, "no smaller step was better"
-        endings = {
-            -2: HARDLY,
-            0: f"the limit of {owner._settings.max_iterations} iterations was reached",
-            1: "the gradient vanished",
-            2: "the cost no longer fell",
-            3: "the steps became negligible",
-            4: "the cost no longer fell and the steps became negligible",
-        }
-        if found.status == -2 and owner.iterations >= self._last_iteration:
-            return self._accepted, endings[0]
-        return self._accepted, endings.get(found.status, "the search ended")
-
-    @staticmethod
-    def _steps(lower: Floats, upper: Floats) -> Floats:
-        """The solver multiplies steps by the root of the distance to a finite bound; this takes it out."""
-        nearest = np.maximum(np.minimum(-lower, upper), 1.0)
-        return np.asarray(np.where(np.isfinite(nearest), 1.0 / np.sqrt(nearest), 1.0))
-
-    def _point(self, z: Floats) -> Point | None:
-        for known, point in self._known:
-            if np.array_equal(known, z):
-                return point
-        evaluation = self._owner.model.evaluate(self._origin.theta + z * self._owner._scale)
-        if evaluation.failed is not None:
-            return None
-        point = self._owner._meet(evaluation)
-        self._known = [(z.copy(), point)]  # the solver asks for the Jacobian at its last trial point only
-        return point
-
-    def _residuals(self, z: Floats) -> Floats:
-        point = self._point(z)
-        better = False
-        if point is not None:
-            total = self._sum_of_squares(point)
-            better = total < self._lowest
-            self._lowest = min(total, self._lowest)
-        self._failures = 0 if better or z.any() == 0 else self._failures + 1
-        if self._failures > MOST_FAILURES_IN_A_ROW:
-            raise _StalledError
-        if point is None:
-            # not finite: the solver shrinks its region and tries again nearer
-            return np.full(self._owner.objective.data.n + len(z), np.inf)
-        return self._stacked(point)
-
-    def _jacobian(self, z: Floats) -> Floats:
-        point = self._point(z)
-        if point is None:  # cannot be: only finite points are accepted
-            raise _StalledError
-        self._accepted = point
-        objective = self._owner.objective
-        _, jacobian = objective.standardised(point, self._sigmas)
-        priors = np.diag(1.0 / objective.prior_sds)
-        return np.asarray(np.vstack([jacobian, priors]) * self._owner._scale)
-
-    def _stacked(self, point: Point) -> Floats:
-        objective = self._owner.objective
-        residuals, _ = objective.standardised(point, self._sigmas)
-        return np.concatenate([residuals, objective.prior_residuals(point.theta)])
-
-    def _sum_of_squares(self, point: Point) -> float:
-        return float(np.sum(self._stacked(point) ** 2))
-
-    def _after_iteration(self, intermediate_result: Any) -> None:
-        self._owner.accepted(self._accepted)
-        if self._owner.iterations >= self._last_iteration:
-            raise StopIteration
-        if self._owner.hardly_falls(self._accepted, self._sigmas):
-            raise StopIteration
 
 
 def _failure(evaluation: Evaluation) -> str:

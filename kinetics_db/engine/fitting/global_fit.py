@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable, Iterator, Sequence
 
 import numpy as np
 from numpy.typing import NDArray
@@ -16,7 +16,7 @@ from kinetics_db.engine.fitting.parameters import ParameterMap
 from kinetics_db.engine.fitting.problem import Constant, Experiment, Nuisance, Settings, StartConcentration
 from kinetics_db.engine.fitting.report import report
 from kinetics_db.engine.fitting.residuals import Data, Model
-from kinetics_db.engine.fitting.starts import distinct_minima, start_points
+from kinetics_db.engine.fitting.starts import EndPoint, distinct_minima, start_points
 from kinetics_db.engine.network.model import Network
 
 Floats = NDArray[np.float64]
@@ -49,7 +49,8 @@ def fit_globally(
     nuisances : shared by every experiment whose charges, signals or clock name them
     settings : Settings
     on_progress : called with (iteration, cost) after each accepted iteration
-    should_stop : asked between integrations; true ends the fit with status 'stopped' and its best point
+    should_stop : asked between integrations; true ends the fit with status 'stopped' and its best point. It is
+        asked on while the outcome is put together, so that the caller hears of work; the answer is idle then
 
     Returns
     -------
@@ -75,34 +76,59 @@ def fit_globally(
     )
     objective = Objective(Data(experiments, settings), parameters)
     descender = Descender(model, objective, settings, on_progress)
-    descents: list[Descent] = []
     points = start_points(
         parameters, starts=settings.starts, spread=settings.start_spread, seed=settings.seed
     )
-    for theta in points:
-        descents.append(descender.descend(theta))
-        if descents[-1].status == "stopped":
-            break
+    best, ends = _descend(descender, points)
+    on_work = None if should_stop is None else lambda: _ask(should_stop)
     return report(
-        _best(descents),
+        best,
         experiments,
         nuisances,
         objective,
         settings,
-        minima=distinct_minima(descents, parameters) if settings.starts > 1 else (),
+        minima=distinct_minima(ends, parameters, on_work) if settings.starts > 1 else (),
         iterations=descender.iterations,
         evaluations=model.evaluations,
         seconds=time.monotonic() - begun,
+        on_work=on_work,
     )
 
 
-def _best(descents: Sequence[Descent]) -> Descent:
-    """The lowest end point; a stopped descent keeps the fit 'stopped' whatever came before it."""
-    with_point = [d for d in descents if d.point is not None]
-    if not with_point:
-        return descents[-1] if descents[-1].status == "stopped" else descents[0]
-    best = min(with_point, key=lambda d: d.point.cost if d.point is not None else np.inf)
-    last = descents[-1]
-    if last.status == "stopped" and best.status == "converged":
-        return Descent("stopped", f"{last.message} before all starts were tried", best.point, best.iterations)
-    return best
+def _ask(should_stop: Callable[[], bool]) -> None:
+    """Let the caller hear of work; nothing is left to stop."""
+    should_stop()
+
+
+def _descend(descender: Descender, points: Iterator[Floats]) -> tuple[Descent, list[EndPoint]]:
+    """The lowest end point of all starts, and where each that converged ended.
+
+    Of the others only cost and place are kept, since a point carries its whole Jacobian. A stopped descent is
+    the last one and keeps the fit 'stopped' whatever came before it.
+    """
+    best = latest = descender.descend(next(points))
+    ends = _converged(latest)
+    while latest.status != "stopped":
+        theta = next(points, None)
+        if theta is None:
+            return best, ends
+        latest = descender.descend(theta)
+        ends += _converged(latest)
+        best = _lower(best, latest)
+    if best.status == "converged":
+        message = f"{latest.message} before all starts were tried"
+        best = Descent("stopped", message, best.point, best.iterations)
+    return best, ends
+
+
+def _converged(descent: Descent) -> list[EndPoint]:
+    if descent.point is None or descent.status != "converged":
+        return []
+    return [EndPoint(descent.point.cost, descent.point.theta)]
+
+
+def _lower(best: Descent, latest: Descent) -> Descent:
+    """The descent that ended lower; where neither has a point, the first, or the one that was stopped."""
+    if latest.point is None:
+        return latest if best.point is None and latest.status == "stopped" else best
+    return latest if best.point is None or latest.point.cost < best.point.cost else best

@@ -42,8 +42,10 @@ class SigmaEstimate:
     Attributes
     ----------
     observable : str or None, None when common to all points
-    value : sqrt(RSS / degrees of freedom), or None when no degree of freedom is left
-    maximum_likelihood : sqrt(RSS / n), the one in the likelihood
+    value : sqrt(RSS / degrees of freedom), the one that the intervals use; None when less than one degree of
+        freedom is left
+    maximum_likelihood : sqrt(RSS / n), the one in the likelihood. Neither is below what the tolerance of the
+        integrations can tell from zero.
     n_points : int
     degrees_of_freedom : n less the trace of the hat matrix of these points
     """
@@ -68,11 +70,13 @@ class FittedParameter:
     standard_error : of the value (first order), None when not determined
     lower, upper : interval of the confidence asked for, None when not determined
     scale : 'logarithmic' (interval symmetric in ln(value)) or 'linear'
-    at_bound : the fit pushes it against a bound
+    at_bound : the fit pushes it against a bound that was given
     determined : the data and priors fix it
     set_by_prior : its interval is more than 0.8 of its prior's
     prior_mean, prior_sd : mean as a value, sd on the fitted scale
     why_not : reason when not determined
+    degrees_of_freedom : effective ones of the standard error, by which the interval is Student's t; None when
+        it is normal since all sigmas are known, or when not determined
     """
 
     name: str
@@ -90,6 +94,7 @@ class FittedParameter:
     prior_mean: float | None = None
     prior_sd: float | None = None
     why_not: str = ""
+    degrees_of_freedom: float | None = None
 
 
 @dataclass(frozen=True)
@@ -163,7 +168,8 @@ class FitOutcome(ComparedByValue):
     covariance : ndarray, shape (p, p), fitted scale, names as in `parameters`; NaN where not determined
     prior_precision : ndarray, shape (p,), 1/sd^2 of the priors, zero without
     degrees_of_freedom : n less the trace of the hat matrix
-    quantile, quantile_kind : multiplier of the standard errors and the distribution it comes from
+    quantile, quantile_kind : multiplier of a standard error known to `degrees_of_freedom` and the distribution
+        it comes from; where sigmas were fitted an interval uses the degrees of freedom of its parameter
     experiments : tuple of ExperimentFit
     pulls : tuple of NuisancePull
     minima : distinct end points of several starts, best first

@@ -61,16 +61,31 @@ class FreeParameter:
                 math.inf if self.upper is None else self.upper,
             )
         centre, reach = math.log(self.start), math.log(FARTHEST)
-        lower = math.log(self.lower) if self.lower else centre - reach
-        upper = math.log(self.upper) if self.upper is not None and self.upper < math.inf else centre + reach
+        given = self.bounded
+        lower = math.log(self.lower) if self.lower is not None and given[0] else centre - reach
+        upper = math.log(self.upper) if self.upper is not None and given[1] else centre + reach
         return lower, upper
 
     @property
+    def bounded(self) -> tuple[bool, bool]:
+        """Whether the lower and the upper limit are bounds that were given, not just where the search ends."""
+        lowest = 0.0 if self.positive else -math.inf
+        return (
+            self.lower is not None and self.lower > lowest,
+            self.upper is not None and self.upper < math.inf,
+        )
+
+    @property
     def scale(self) -> float:
-        """A typical step on the fitted scale."""
-        if self.prior_sd is not None:
-            return self.prior_sd
-        return 1.0 if self.positive else max(abs(self.start), 1e-3)
+        """A typical step on the fitted scale; a prior may narrow it, a weak one does not widen it."""
+        return self.size if self.prior_sd is None else min(self.prior_sd, self.size)
+
+    @property
+    def size(self) -> float:
+        """A change that would matter, on the fitted scale, whatever the prior: e-fold, or as large as its start."""
+        if self.positive:
+            return 1.0
+        return max(abs(self.start), 1e-3) if self.start or self.prior_sd is None else self.prior_sd
 
 
 @dataclass(frozen=True, eq=False)
@@ -141,6 +156,27 @@ class ParameterMap:
     def bounds(self) -> tuple[Floats, Floats]:
         limits = np.array([p.limits for p in self.parameters]).reshape(-1, 2)
         return limits[:, 0], limits[:, 1]
+
+    @property
+    def bounded(self) -> tuple[NDArray[np.bool_], NDArray[np.bool_]]:
+        """Whether each lower and each upper limit was given, shape (p,) each."""
+        given = np.array([p.bounded for p in self.parameters], dtype=bool).reshape(-1, 2)
+        return given[:, 0], given[:, 1]
+
+    @property
+    def scales(self) -> Floats:
+        """A typical step of each parameter, shape (p,)."""
+        return np.array([p.scale for p in self.parameters])
+
+    @property
+    def sizes(self) -> Floats:
+        """A change of each parameter that would matter, shape (p,)."""
+        return np.array([p.size for p in self.parameters])
+
+    @property
+    def constants(self) -> NDArray[np.bool_]:
+        """Which of the parameters are constants of the mechanism, shape (p,)."""
+        return np.array([p.kind == "constant" for p in self.parameters], dtype=bool)
 
     @property
     def positive(self) -> NDArray[np.bool_]:
@@ -228,12 +264,18 @@ def place_of(constant: Constant, experiment: Experiment) -> str | None:
 
 def start_value(constant: Constant, experiment: Experiment) -> float:
     """Start of a constant in an experiment: its own, its group's, or the common one."""
-    keys = [experiment.name, *experiment.groups.values()]
-    if constant.scope == "in a group":
-        keys = [experiment.groups[constant.group_by or ""]]
-    elif constant.scope == "same in all runs":
-        keys = []
+    keys = start_keys(constant, [experiment])
     return next((constant.starts[key] for key in keys if key in constant.starts), constant.start)
+
+
+def start_keys(constant: Constant, experiments: Sequence[Experiment]) -> list[str]:
+    """Names in `Constant.starts` that mean something in these experiments, the most special first."""
+    if constant.scope == "same in all runs":
+        return []
+    if constant.scope == "in a group":
+        return list(dict.fromkeys(e.groups[constant.group_by or ""] for e in experiments))
+    names = [e.name for e in experiments]
+    return list(dict.fromkeys([*names, *(group for e in experiments for group in e.groups.values())]))
 
 
 def held_value(constant: Constant, experiment: Experiment) -> float:

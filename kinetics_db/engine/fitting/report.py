@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Literal
 
@@ -10,6 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 from scipy import stats
 
+from kinetics_db.engine.fitting.blocks import curvature_and_leverage
 from kinetics_db.engine.fitting.descent import Descent
 from kinetics_db.engine.fitting.objective import Objective, Point
 from kinetics_db.engine.fitting.outcome import (
@@ -22,11 +23,11 @@ from kinetics_db.engine.fitting.outcome import (
 )
 from kinetics_db.engine.fitting.parameters import FreeParameter
 from kinetics_db.engine.fitting.problem import Experiment, Nuisance, Settings
+from kinetics_db.engine.fitting.scatter import LEAST_FREEDOM, Trust, trust
+from kinetics_db.engine.fitting.standing import standing_of
 from kinetics_db.engine.fitting.uncertainty import (
     WIDEST_INTERVAL,
     Curvature,
-    curvature,
-    pushed_against_bounds,
     why_not_determined,
 )
 
@@ -47,8 +48,9 @@ def report(
     iterations: int,
     evaluations: int,
     seconds: float,
+    on_work: Callable[[], None] | None = None,
 ) -> FitOutcome:
-    """The outcome of the fit that ended in this descent."""
+    """The outcome of the fit that ended in this descent; ``on_work`` is called every now and then."""
     point = descent.point
     if point is None:
         return FitOutcome(
@@ -62,8 +64,8 @@ def report(
             seconds=seconds,
         )
     data = objective.data
-    spread = _spread(point, objective)
-    quantile, kind = _quantile(spread, settings, estimated=bool(data.group_names))
+    spread = _spread(point, objective, on_work)
+    quantile, kind = _quantile(spread.degrees_of_freedom, settings, estimated=bool(data.group_names))
     standardised = point.residuals / spread.sigma_of_points
     return FitOutcome(
         status=descent.status,
@@ -78,7 +80,7 @@ def report(
         error_model=settings.error_model,
         confidence=settings.confidence,
         sigmas=spread.estimates,
-        parameters=_parameters(point, objective, spread, quantile, settings),
+        parameters=_parameters(point, objective, spread, settings),
         theta=point.theta,
         covariance=spread.curvature.covariance,
         prior_precision=1.0 / objective.prior_sds**2,
@@ -98,22 +100,21 @@ def report(
 class _Spread:
     curvature: Curvature
     at_bound: NDArray[np.bool_]
+    trust: Trust
     estimates: tuple[SigmaEstimate, ...]
     sigma_of_points: Floats  # (v,)
     degrees_of_freedom: float
 
 
-def _spread(point: Point, objective: Objective) -> _Spread:
+def _spread(point: Point, objective: Objective, on_work: Callable[[], None] | None) -> _Spread:
     """Sigmas with their degrees of freedom, and the curvature at them."""
     data, parameters = objective.data, objective.parameters
     pulls = objective.prior_residuals(point.theta)
+    at_bound, scale = standing_of(objective, point, point.sigmas, on_work).held, parameters.scales
     residuals, jacobian = objective.standardised(point, point.sigmas)
-    gradient = jacobian.T @ residuals + pulls / objective.prior_sds
-    lower, upper = parameters.bounds
-    scale = np.array([p.scale for p in parameters.parameters])
-    at_bound = pushed_against_bounds(point.theta, lower, upper, gradient, scale)
-    found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound, scale)
-    leverage = found.leverage
+    found, leverage = curvature_and_leverage(
+        jacobian, residuals, objective.prior_sds, pulls, at_bound, scale, on_work
+    )
     estimates: list[SigmaEstimate] = []
     sigmas = point.sigmas.copy()
     for g, name in enumerate(data.group_names):
@@ -121,35 +122,41 @@ def _spread(point: Point, objective: Objective) -> _Spread:
         n = int(mine.sum())
         freedom = n - float(leverage[mine].sum())
         rss = float(np.sum(point.residuals[mine] ** 2))
-        value = float(np.sqrt(rss / freedom)) if freedom > 1e-6 * n else None
-        if value is not None:
-            sigmas[g] = max(value, data.smallest_sigmas[g])
+        value = None
+        if freedom >= LEAST_FREEDOM:
+            value = sigmas[g] = max(float(np.sqrt(rss / freedom)), float(data.smallest_sigmas[g]))
         estimates.append(SigmaEstimate(name, value, float(point.sigmas[g]), n, freedom))
     if data.group_names:
         residuals, jacobian = objective.standardised(point, sigmas)
-        found = curvature(jacobian, residuals, objective.prior_sds, pulls, at_bound, scale)
-        if any(e.value is None for e in estimates):  # no scatter left to judge the points by
-            nothing = np.full_like(found.covariance, np.nan)
-            found = replace(found, covariance=nothing, determined=np.zeros_like(found.determined))
-    freedom = data.n - float(found.leverage.sum())
-    return _Spread(found, at_bound, tuple(estimates), data.sigma_of_points(sigmas), freedom)
+        found, leverage = curvature_and_leverage(
+            jacobian, residuals, objective.prior_sds, pulls, at_bound, scale, on_work
+        )
+    worth = trust(point, objective, sigmas, estimates, found, at_bound, on_work)
+    untold = np.array([bool(why) for why in worth.why_not], dtype=bool)
+    if untold.any():  # no scatter to judge these by
+        covariance = found.covariance.copy()
+        covariance[untold] = np.nan
+        covariance[:, untold] = np.nan
+        found = replace(found, covariance=covariance, determined=found.determined & ~untold)
+    freedom = data.n - float(leverage.sum())
+    return _Spread(found, at_bound, worth, tuple(estimates), data.sigma_of_points(sigmas), freedom)
 
 
 def _quantile(
-    spread: _Spread, settings: Settings, *, estimated: bool
+    degrees_of_freedom: float, settings: Settings, *, estimated: bool
 ) -> tuple[float, Literal["normal", "Student's t"]]:
     level = 0.5 + settings.confidence / 2.0
-    if estimated and spread.degrees_of_freedom > 1e-6:
-        return float(stats.t.ppf(level, spread.degrees_of_freedom)), "Student's t"
-    return float(stats.norm.ppf(level)), "normal"
+    if estimated and 1e-6 < degrees_of_freedom < np.inf:
+        return float(stats.t.ppf(level, degrees_of_freedom)), "Student's t"
+    return _normal(settings), "normal"
 
 
 def _parameters(
-    point: Point, objective: Objective, spread: _Spread, quantile: float, settings: Settings
+    point: Point, objective: Objective, spread: _Spread, settings: Settings
 ) -> tuple[FittedParameter, ...]:
     values = objective.parameters.values(point.theta)
     return tuple(
-        _parameter(i, p, float(values[i]), float(point.theta[i]), objective, spread, quantile, settings)
+        _parameter(i, p, float(values[i]), float(point.theta[i]), objective, spread, settings)
         for i, p in enumerate(objective.parameters.parameters)
     )
 
@@ -161,19 +168,20 @@ def _parameter(
     theta: float,
     objective: Objective,
     spread: _Spread,
-    quantile: float,
     settings: Settings,
 ) -> FittedParameter:
     found = spread.curvature
+    freedom = float(spread.trust.degrees_of_freedom[i])
+    quantile, _ = _quantile(freedom, settings, estimated=True)
     error = float(np.sqrt(found.covariance[i, i])) if found.determined[i] else np.inf
     wide = parameter.positive and parameter.prior_sd is None and quantile * error > WIDEST_INTERVAL
     determined = bool(found.determined[i]) and not wide
-    why = ""
-    if any(e.value is None for e in spread.estimates):
-        why = "no degree of freedom is left to estimate the scatter"
-    elif not determined:
-        partners = [] if found.inert[i] or spread.at_bound[i] else _partners(i, objective, found)
-        why = why_not_determined(parameter.name, bool(found.inert[i]), bool(spread.at_bound[i]), partners)
+    at_bound = bool(spread.at_bound[i])
+    given = _bound_given(parameter, theta)
+    why = spread.trust.why_not[i]
+    if not determined and not why:
+        partners = [] if found.inert[i] or at_bound else _partners(i, objective, found)
+        why = why_not_determined(parameter.name, bool(found.inert[i]), at_bound, partners, bound_given=given)
     prior_width = None
     if parameter.prior_sd is not None:
         prior_width = float(objective.prior_sds[i] * _normal(settings))
@@ -188,13 +196,20 @@ def _parameter(
         lower=parameter.value(theta - quantile * error) if determined else None,
         upper=parameter.value(theta + quantile * error) if determined else None,
         scale="logarithmic" if parameter.positive else "linear",
-        at_bound=bool(spread.at_bound[i]),
+        at_bound=at_bound and given,
         determined=determined,
         set_by_prior=prior_width is not None and determined and quantile * error > SET_BY_PRIOR * prior_width,
         prior_mean=None if prior_mean is None else parameter.value(prior_mean),
         prior_sd=parameter.prior_sd,
         why_not=why,
+        degrees_of_freedom=freedom if determined and freedom < np.inf else None,
     )
+
+
+def _bound_given(parameter: FreeParameter, theta: float) -> bool:
+    """Whether the nearer limit of a parameter is a bound that was given."""
+    lower, upper = parameter.limits
+    return parameter.bounded[0 if theta - lower < upper - theta else 1]
 
 
 def _normal(settings: Settings) -> float:
@@ -259,7 +274,10 @@ def _pulls(
 ) -> tuple[NuisancePull, ...]:
     pulls = objective.prior_residuals(point.theta)
     values = objective.parameters.values(point.theta)
-    users = {n.name: [e.name for e in experiments if n.name in nuisances_of(e)] for n in nuisances}
+    users: dict[str, list[str]] = {n.name: [] for n in nuisances}
+    for experiment in experiments:
+        for name in nuisances_of(experiment):
+            users[name].append(experiment.name)
     found = []
     for nuisance in nuisances:
         i = objective.parameters.index(nuisance.name)

@@ -81,17 +81,18 @@ class Model:
         values = self.parameters.values(theta)
         models, jacobians = [], []
         for view in self._views:
-            self._look_up()
+            self.look_up()
             remaining = max(self._deadline - time.monotonic(), 1e-3)
             found = view.evaluate(values, self._settings, min(INTEGRATION_SECONDS, remaining))
             if isinstance(found, str):
-                self._look_up()
+                self.look_up()
                 return Evaluation(theta, failed=view.experiment.name, reason=found)
             models.append(found[0])
             jacobians.append(found[1])
         return Evaluation(theta, tuple(models), tuple(jacobians))
 
-    def _look_up(self) -> None:
+    def look_up(self) -> None:
+        """Raise InterruptedFitError when the fit is to stop or its time is up."""
         if self._should_stop is not None and self._should_stop():
             raise InterruptedFitError("stopped on request")
         if time.monotonic() > self._deadline:

@@ -31,6 +31,8 @@ class Curvature:
     Attributes
     ----------
     basis : ndarray, shape (v, r), orthonormal where no priors act; hat matrix = basis @ basis.T
+    half : ndarray, shape (r, p), half.T @ half is the covariance in the directions that are determined, zero
+        in rows and columns of what does not act or is held at a bound
     covariance : ndarray, shape (p, p), NaN in rows and columns of what is not determined or held at a bound
     determined : ndarray of bool, shape (p,)
     inert : ndarray of bool, shape (p,), no effect on any point and no prior
@@ -40,6 +42,7 @@ class Curvature:
     """
 
     basis: Floats
+    half: Floats
     covariance: Floats
     determined: NDArray[np.bool_]
     inert: NDArray[np.bool_]
@@ -83,12 +86,14 @@ def curvature(
     kept = s > SMALLEST_SINGULAR_VALUE * (s[0] if s.size else 1.0)
     flat_share = np.sum(vt[~kept] ** 2, axis=0)
     fixed_by_data = flat_share < LARGEST_SHARE_OF_FLAT_DIRECTION
-    half = (vt[kept] / s[kept, None]) / norms[acting]
-    small = half.T @ half
+    small_half = (vt[kept] / s[kept, None]) / norms[acting]
+    small = small_half.T @ small_half
     small[~fixed_by_data] = np.nan
     small[:, ~fixed_by_data] = np.nan
     positions = np.flatnonzero(moving)
     at = positions[acting]
+    half = np.zeros((len(small_half), p))
+    half[:, at] = small_half
     covariance = np.full((p, p), np.nan)
     covariance[np.ix_(at, at)] = small
     determined = np.zeros(p, dtype=bool)
@@ -99,25 +104,25 @@ def curvature(
     flat = np.zeros((p, p))
     flat[np.ix_(at, at)] = vt[~kept].T @ vt[~kept]
     along = u[:, kept].T @ everything
-    step = np.zeros(p)
-    step[at] = -half.T @ along
-    return Curvature(u[:v, kept], covariance, determined, inert, flat, step, float(np.sum(along**2)))
+    step = -half.T @ along
+    return Curvature(u[:v, kept], half, covariance, determined, inert, flat, step, float(np.sum(along**2)))
 
 
 def pushed_against_bounds(
-    theta: Floats, lower: Floats, upper: Floats, gradient: Floats, scale: Floats
+    theta: Floats, lower: Floats, upper: Floats, gradient: Floats, near: Floats | float = 0.0
 ) -> NDArray[np.bool_]:
-    """Parameters within a thousandth of their scale of a bound that the fit would cross, shape (p,)."""
-    near = 1e-3 * scale
-    at_lower = (theta - lower < near) & (gradient > 0)
-    at_upper = (upper - theta < near) & (gradient < 0)
+    """Parameters at a bound, or no farther than ``near`` from it, that the fit would cross, shape (p,)."""
+    at_lower = (theta - lower <= near) & (gradient > 0)
+    at_upper = (upper - theta <= near) & (gradient < 0)
     return np.asarray(at_lower | at_upper)
 
 
-def why_not_determined(name: str, inert: bool, at_bound: bool, partners: Sequence[str]) -> str:
+def why_not_determined(
+    name: str, inert: bool, at_bound: bool, partners: Sequence[str], *, bound_given: bool = True
+) -> str:
     """Why a parameter has no interval, in words."""
     if at_bound:
-        return f"{name} is pushed against its bound"
+        return f"{name} is pushed against {'its bound' if bound_given else 'the limit of the search'}"
     if inert:
         return f"{name} has no effect on any fitted point"
     if partners:

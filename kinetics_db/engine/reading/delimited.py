@@ -12,7 +12,7 @@ from kinetics_db.engine.reading.cells import Clock
 from kinetics_db.engine.reading.decoding import lines_of
 from kinetics_db.engine.reading.headers import Header, parse_header, unit_of_cell, with_unit
 from kinetics_db.engine.reading.layout import MAX_COLUMNS, Layout, find_layout, is_comment
-from kinetics_db.engine.reading.options import ReadingOptions
+from kinetics_db.engine.reading.options import TIME_FORMATS, ReadingOptions
 from kinetics_db.engine.reading.result import ReadResult
 from kinetics_db.engine.reading.rows import Rows, read_rows
 from kinetics_db.engine.tables import MAX_VALUES, Column, Table
@@ -56,6 +56,7 @@ def read_delimited(data: bytes, options: ReadingOptions | None = None) -> ReadRe
             f"{len(kept)} rows of {len(headers)} values are too many", cure=f"{MAX_VALUES} values"
         )
     rows = read_rows(kept, numbers, layout, time, clock, frozenset(skipped), cut_short=cut_short)
+    clock = _settled(clock, rows, time, options, notes)
     order = _time_order(rows.values[:, time], numbers, options, notes)
     columns = [i for i in range(len(headers)) if i != time and i not in skipped]
     if not columns:
@@ -68,7 +69,7 @@ def read_delimited(data: bytes, options: ReadingOptions | None = None) -> ReadRe
         rows.values[order][:, [time, *columns]],
     )
     notes += _describe(headers, time, clock, columns, skipped, numbers, rows)
-    warnings = _warnings(table, rows, headers)
+    warnings = _unknown_units(headers, layout, options) + _warnings(table, rows, headers)
     comments = [*layout.preamble, *comments]
     return ReadResult(table, tuple(notes), tuple(warnings), _metadata(comments, options))
 
@@ -92,9 +93,8 @@ def _headers(layout: Layout, options: ReadingOptions, notes: list[str]) -> list[
             cure = "a name for every column; decimal commas cannot stand in a table separated by commas"
             raise InvalidInput(Problem(message, line=max(1, layout.first - 1), cure=cure))
         headers = [parse_header(cell) for cell in cells]
-    units = [unit_of_cell(cell) or "" for cell in layout.units_row] or [""] * len(headers)
-    if len(units) == len(headers):
-        headers = [with_unit(h, unit) for h, unit in zip(headers, units, strict=True)]
+    units = [unit_of_cell(cell) or "" for cell in layout.units_row]
+    headers = [with_unit(h, unit) for h, unit in zip(headers, units, strict=True)]
     _refuse_unnamed(headers)
     by_name = dict(options.units)
     names = [h.name for h in headers]
@@ -146,9 +146,36 @@ def _clock(header: Header, options: ReadingOptions) -> Clock:
     if unit and kind_of_unit(unit) != "time":
         message = f"the time column '{header.name}' is in '{unit}', which is no unit of time"
         raise InvalidInput(message, field="time_unit", cure="state the option time_unit: s, min, h or d")
-    if not unit and header.clock:
-        return Clock("", header.clock)
-    return Clock(unit, header.clock)
+    # 'h:mm:ss' in a header does not tell what a time with one colon is
+    in_header = header.clock if header.clock in TIME_FORMATS else ""
+    return Clock(unit, options.time_format or in_header)
+
+
+def _settled(clock: Clock, rows: Rows, time: int, options: ReadingOptions, notes: list[str]) -> Clock:
+    """The clock with the form of times with one colon; puts them right when they are h:mm.
+
+    Other cells tell it by a fraction of the last part, which only seconds have, or when the rows are in the
+    order of time in one of the two forms only.
+    """
+    colons = [row for row, _, _ in rows.one_colon]
+    if not rows.values[colons, time].any():
+        return clock  # 0:00 is zero in both
+    if any("." in text or "," in text for _, _, text in rows.one_colon):
+        notes.append("times with one colon are mm:ss: some have fractions of a second")
+        return Clock(clock.unit, "mm:ss")
+    longer = rows.values[:, time].copy()
+    longer[colons] *= 60  # h:mm is 60 times what mm:ss is
+    minutes, hours = (bool((np.diff(times) > 0).all()) for times in (rows.values[:, time], longer))
+    if minutes == hours or options.sort_times:
+        _, line, text = next(cell for cell in rows.one_colon if rows.values[cell[0], time])
+        message = f"the time '{text}' can be h:mm or mm:ss, and no other cell tells which"
+        cure = "state the option time_format: 'h:mm' or 'mm:ss'"
+        raise InvalidInput(Problem(message, line=line, column=time + 1, field="time_format", cure=cure))
+    form, other = ("mm:ss", "h:mm") if minutes else ("h:mm", "mm:ss")
+    notes.append(f"times with one colon are {form}: as {other} the rows would not be in the order of time")
+    if hours:
+        rows.values[:, time] = longer
+    return Clock(clock.unit, form)
 
 
 def _data_lines(
@@ -227,7 +254,8 @@ def _describe(
         notes.append("not read, as stated: " + ", ".join(headers[i].name for i in sorted(skipped)))
     notes.append(f"{_count(len(numbers), 'row')}, lines {numbers[0]} to {numbers[-1]}")
     if rows.trailing:
-        notes.append("a delimiter at the end of lines is ignored")
+        end = "a delimiter" if rows.trailing == 1 else "empty columns"
+        notes.append(f"{end} at the end of lines {'is' if rows.trailing == 1 else 'are'} ignored")
     for cells, what in (
         (rows.missing, "missing"),
         (rows.limits, "beyond a detection limit, taken as missing"),
@@ -243,6 +271,18 @@ def _describe(
 
 def _count(number: int, what: str) -> str:
     return f"{number} {what}" if number == 1 else f"{number} {what}s"
+
+
+def _unknown_units(headers: Sequence[Header], layout: Layout, options: ReadingOptions) -> list[Problem]:
+    found = []
+    known = {*options.ignored_columns, *(name for name, _ in options.units)}
+    for column, (header, cell) in enumerate(zip(headers, layout.units_row, strict=True), start=1):
+        if unit_of_cell(cell) is None and header.name not in known:
+            message = f"'{cell}' is no unit that is known; column '{header.name}' is read without it"
+            cure = f"the option units, such as {{'{header.name}': 'a.u.'}}"
+            line = layout.units_line
+            found.append(Problem(message, line, column, field="units", cure=cure, severity="warning"))
+    return found
 
 
 def _warnings(table: Table, rows: Rows, headers: Sequence[Header]) -> list[Problem]:

@@ -5,7 +5,7 @@ from __future__ import annotations
 import re
 from typing import NamedTuple
 
-from kinetics_db.engine.units import MAX_LENGTH, is_unit, kind_of_unit
+from kinetics_db.engine.units import MAX_LENGTH, is_unit, kind_of_unit, numbers_in
 
 _TIME_WORDS = re.compile(
     r"t|t_?\d?|(?:.{0,30}[ _])?(?:time|zeit|temps|tiempo|tempo|tid|tijd|aika|zeitpunkt|reaktionszeit)"
@@ -51,9 +51,14 @@ def parse_header(text: str) -> Header:
         if _is_written_unit(unit):
             return Header(name, unit)
     words = re.fullmatch(r"(.*[^\s_,])(?:[ _]|, ?)([^\s_]{1,20})", text)
-    if words and is_unit(words[2]) and kind_of_unit(words[2]) == "time" and _TIME_WORDS.fullmatch(words[1]):
+    if (
+        words
+        and _is_written_unit(words[2])
+        and kind_of_unit(words[2]) == "time"
+        and _TIME_WORDS.fullmatch(words[1])
+    ):
         return Header(words[1], words[2])
-    if text not in ("t", "d") and is_unit(text) and kind_of_unit(text) == "time":
+    if text not in ("t", "d") and _is_written_unit(text) and kind_of_unit(text) == "time":
         return Header("time", text)
     return Header(text)
 
@@ -77,8 +82,10 @@ def _splits(text: str) -> list[tuple[str, str]]:
 
 
 def _is_written_unit(unit: str) -> bool:
-    """A unit that can stand in a header; '2' and '90 s' are values, though arithmetic could take them."""
-    return is_unit(unit) and (not unit[0].isdigit() or unit == "1" or unit.startswith(("1/", "10^", "10*")))
+    """A unit that can stand in a header; '2', '90 s' and 's*60' are values, though arithmetic could take them."""
+    if not is_unit(unit) or (unit[0].isdigit() and unit != "1" and not unit.startswith(("1/", "10^", "10*"))):
+        return False
+    return all(number == "1" or number.startswith(("10^", "10*")) for number in numbers_in(unit))
 
 
 def _is_label(text: str, bracketed: re.Match[str]) -> bool:
@@ -103,6 +110,18 @@ def unit_of_cell(cell: str) -> str | None:
     if unit in ("", "-"):
         return ""
     return unit if _is_written_unit(unit) or unit.lower() in _CLOCK_FORMS else None
+
+
+def is_time_unit(cell: str) -> bool:
+    """Whether a cell of a units row is a unit of time or a clock form."""
+    unit = unit_of_cell(cell) or ""
+    return unit != "" and (unit.lower() in _CLOCK_FORMS or kind_of_unit(unit) == "time")
+
+
+def has_unit_of_signal(cells: list[str]) -> bool:
+    """Whether a cell is a unit other than of time, and not likelier the name of a species."""
+    units = [unit_of_cell(cell) for cell in cells if not is_time_unit(cell)]
+    return any(unit and unit not in _CAPITALS and unit != "1" for unit in units)
 
 
 def with_unit(header: Header, unit: str) -> Header:

@@ -13,7 +13,13 @@ from collections.abc import Sequence
 from dataclasses import dataclass
 
 from kinetics_db.engine.reading.cells import is_number, looks_like_value
-from kinetics_db.engine.reading.headers import is_units_row, parse_header
+from kinetics_db.engine.reading.headers import (
+    has_unit_of_signal,
+    is_time_unit,
+    is_units_row,
+    parse_header,
+    unit_of_cell,
+)
 from kinetics_db.engine.reading.options import DELIMITERS, ReadingOptions
 from kinetics_db.errors import InvalidInput, Problem
 
@@ -32,16 +38,19 @@ _DELIMITER_NAMES = {
 
 @dataclass(frozen=True)
 class Layout:
-    """Line numbers count from 1; ``header`` and ``units_row`` are cells, ``first`` the first row of data."""
+    """Line numbers count from 1; ``header`` and ``units_row`` are cells, ``first`` the first row of data.
+
+    ``width`` leaves out columns at the end that have neither a name nor a value; ``units_row`` has as many cells.
+    """
 
     delimiter: str
     decimal: str
     width: int
     header: tuple[str, ...]
+    units_line: int
     units_row: tuple[str, ...]
     first: int
     preamble: tuple[tuple[int, str], ...]
-    trailing: bool
     notes: tuple[str, ...]
 
 
@@ -85,12 +94,15 @@ def find_layout(lines: Sequence[str], options: ReadingOptions) -> Layout:
         stated = DELIMITERS[options.delimiter]
     skipped = {first_line + 1} if separator else set()
     sample = _sample(lines, options, skipped)
-    delimiter, decimal, width = _best_pair(sample, stated, options)
-    search = _Search(lines, options, delimiter, decimal, width, skipped)
+    delimiter, decimal, width, most = _best_pair(sample, stated, options)
+    search = _Search(lines, options, delimiter, decimal, (width, most), skipped)
     header_line, header, units_line, units_row, first = search.header()
-    trailing = len(header) == width + 1 and header[-1] == ""
-    if len(header) == width + 1 and not trailing:
-        width += 1  # the last cell of every row is missing
+    named = without_empty_end(header)
+    if len(named) <= search.most or (options.header_line and options.columns is None):
+        width = max(width, len(named))  # columns that have a name, but no value in any row
+    if options.columns is not None and len(options.columns) <= most:
+        width = max(width, len(options.columns))
+    units_row = [*units_row, *[""] * width][:width]
     if decimal == ",":
         _refuse_thousands(lines, first, delimiter, options)
     preamble = tuple(
@@ -100,9 +112,17 @@ def find_layout(lines: Sequence[str], options: ReadingOptions) -> Layout:
     )
     notes += _describe(delimiter, decimal, header_line, units_line)
     return Layout(
-        delimiter, decimal, width, tuple(header[:width]), tuple(units_row[:width]), first, preamble, trailing,
+        delimiter, decimal, width, tuple(header[:width]), units_line, tuple(units_row), first, preamble,
         tuple(notes),
     )  # fmt: skip
+
+
+def without_empty_end(cells: Sequence[str]) -> Sequence[str]:
+    """The cells up to the last that is not empty; spreadsheets write empty columns behind the table."""
+    end = len(cells)
+    while end and cells[end - 1] == "":
+        end -= 1
+    return cells[:end]
 
 
 def is_comment(line: str, options: ReadingOptions, delimiter: str | None) -> bool:
@@ -130,14 +150,15 @@ def _sample(lines: Sequence[str], options: ReadingOptions, skipped: set[int]) ->
 
 def _best_pair(
     sample: list[tuple[int, str]], stated: str | None, options: ReadingOptions
-) -> tuple[str, str, int]:
+) -> tuple[str, str, int, int]:
+    """Delimiter, decimal sign, number of columns, and the most cells that such a row has with an empty end."""
     best: tuple[int, int, int] = (0, 0, 0)
-    found: tuple[str, str, int] | None = None
+    found: tuple[str, str, int, int] | None = None
     for delimiter in [stated] if stated else list(_DELIMITER_NAMES):
         for decimal in [options.decimal] if options.decimal else [".", ","]:
-            score, width = _score(sample, delimiter, decimal)
+            score, most = _score(sample, delimiter, decimal)
             if score > best:
-                best, found = score, (delimiter, decimal, width)
+                best, found = score, (delimiter, decimal, score[2], most)
     if found is None:
         raise InvalidInput(
             "no rows of numbers were found",
@@ -148,9 +169,10 @@ def _best_pair(
 
 
 def _score(sample: list[tuple[int, str]], delimiter: str, decimal: str) -> tuple[tuple[int, int, int], int]:
-    """(rows fully understood, rows half understood, width) and the width that most such rows have."""
+    """(rows fully understood, rows half understood, the width of most such rows), and their most cells."""
     full: Counter[int] = Counter()
     half: Counter[int] = Counter()
+    most: Counter[int] = Counter()
     for number, line in sample:
         if delimiter not in line.strip():
             continue
@@ -160,24 +182,21 @@ def _score(sample: list[tuple[int, str]], delimiter: str, decimal: str) -> tuple
             continue
         if delimiter == "," and decimal == "," and '"' not in line:
             continue  # decimal commas between commas are readable only inside quotation marks
-        if len(cells) > 2 and cells[-1] == "":
-            cells.pop()  # a trailing delimiter; a last cell that is missing gives the same width elsewhere
-            full_width = len(cells) + 1
-        else:
-            full_width = len(cells)
+        written = len(cells)
+        # empty cells at the end: none of the table, or missing values, which other rows tell
+        cells = [*without_empty_end(cells), "", ""][: max(2, len(without_empty_end(cells)))]
         known = [looks_like_value(cell, decimal) for cell in cells]
         numbers = sum(is_number(cell, decimal) for cell in cells)
-        if len(cells) < 2 or not numbers:
+        if written < 2 or not numbers:
             continue
-        for width in {len(cells), full_width}:
+        for width in range(len(cells), written + 1):
             full[width] += all(known)
             half[width] += 2 * sum(known) >= len(cells)
-    if not half:
-        return (0, 0, 0), 0
-    width = max(half, key=lambda w: (full[w], half[w], -w))
+            most[width] = max(most[width], written)
+    width = max(half, key=lambda w: (full[w], half[w], -w), default=0)
     if half[width] == 0:
         return (0, 0, 0), 0
-    return (full[width], half[width], width), width
+    return (full[width], half[width], width), most[width]
 
 
 def _refuse_thousands(lines: Sequence[str], first: int, delimiter: str, options: ReadingOptions) -> None:
@@ -211,11 +230,12 @@ class _Search:
     """The search for header, units row and first row of data."""
 
     def __init__(
-        self, lines: Sequence[str], options: ReadingOptions, delimiter: str, decimal: str, width: int,
-        skipped: set[int],
+        self, lines: Sequence[str], options: ReadingOptions, delimiter: str, decimal: str,
+        widths: tuple[int, int], skipped: set[int],
     ) -> None:  # fmt: skip
         self.lines, self.options, self.skipped = lines, options, skipped
-        self.delimiter, self.decimal, self.width = delimiter, decimal, width
+        self.delimiter, self.decimal, self.width = delimiter, decimal, widths[0]
+        self.most = max(widths[1], self.width + 1)  # cells that a header or a units row may have
 
     def header(self) -> tuple[int, list[str], int, list[str], int]:
         """Header's line (0: none), its cells, the units row's line and cells, and the first line of data."""
@@ -259,12 +279,40 @@ class _Search:
         units_line, units_row = 0, [""] * len(header)
         while following <= len(self.lines):
             cells = self._cells(following, header=True)
-            if not units_line and is_units_row(cells) and len(cells) in (self.width, self.width + 1):
+            if not units_line and self._is_units_below(number, header, following, cells):
                 units_line, units_row = following, cells
             elif not _RULE.fullmatch(self.lines[following - 1]):
                 break
             following = self._next(following)
         return number, header, units_line, units_row, following
+
+    def _is_units_below(self, number: int, header: list[str], following: int, cells: list[str]) -> bool:
+        """Whether a line below the header holds the units, of which some may be unknown.
+
+        Raises
+        ------
+        InvalidInput
+            when names and units above it could as well be a heading and it the header.
+        """
+        if not self._fits(cells):
+            return False
+        if is_units_row(cells):
+            return True
+        if any(looks_like_value(c, self.decimal) and unit_of_cell(c) is None for c in cells):
+            return False
+        times = [(h, c) for h, c in zip(map(parse_header, header), cells, strict=False) if h.is_time]
+        known = has_unit_of_signal(cells)
+        above = any(
+            (h.unit or h.clock) and unit_of_cell(c) == "" for h, c in times
+        )  # the time's unit is there
+        if not any(is_time_unit(c) for _, c in times) and not (above and known):
+            return False
+        stated = self.options.header_line is not None or self.options.columns is not None
+        if stated or known or not self._is_data(self._next(following)):
+            return True
+        message = f"lines {number} and {following} can both be the header"
+        cure = f"state the option header_line: {number} if line {following} holds units, else {following}"
+        raise InvalidInput(Problem(message, line=following, field="header_line", cure=cure))
 
     def _next(self, number: int) -> int:
         """Number of the next line that is no comment and not blank; past the end when there is none."""
@@ -291,7 +339,7 @@ class _Search:
         return cells
 
     def _fits(self, cells: list[str]) -> bool:
-        return len(cells) in (self.width, self.width + 1)
+        return self.width <= len(cells) and len(without_empty_end(cells)) <= self.most
 
     def _is_header(self, cells: list[str]) -> bool:
         if not self._fits(cells):
@@ -311,7 +359,7 @@ class _Search:
         if number > len(self.lines):
             return False
         cells = self._cells(number)
-        if not self._fits(cells) or (len(cells) > self.width and cells[-1]):
+        if len(cells) < self.width or any(cells[self.width :]):
             return False
         known = sum(looks_like_value(cell, self.decimal) for cell in cells)
         return known == len(cells) and any(is_number(cell, self.decimal) for cell in cells)

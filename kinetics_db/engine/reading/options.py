@@ -16,6 +16,8 @@ ENCODINGS = (
 )  # fmt: skip
 #: Names of the delimiters that are understood.
 DELIMITERS: Mapping[str, str] = {"tab": "\t", "semicolon": ";", "bar": "|", "comma": ",", "blanks": " "}
+#: What a time with one colon can be.
+TIME_FORMATS = ("mm:ss", "h:mm")
 
 
 @dataclass(frozen=True)
@@ -33,6 +35,7 @@ class ReadingOptions:
     columns : names of all columns in order, instead of those in the header
     time_column : name of the time column
     time_unit : unit of the numbers in the time column, over that in the header
+    time_format : what a time with one colon is, one of `TIME_FORMATS`, over the form in the header
     units : (column, unit) pairs, over those in the header
     ignored_columns : names of columns that are not read, such as remarks
     sort_times : put rows that are out of order in the order of time
@@ -46,6 +49,7 @@ class ReadingOptions:
     columns: tuple[str, ...] | None = None
     time_column: str | None = None
     time_unit: str | None = None
+    time_format: str | None = None
     units: tuple[tuple[str, str], ...] = ()
     ignored_columns: tuple[str, ...] = ()
     sort_times: bool = False
@@ -68,6 +72,12 @@ class ReadingOptions:
             refuse("header_line", f"line {self.header_line}", "a line number from 1, or 0 for no header")
         if self.time_unit is not None and not _is_time(self.time_unit):
             refuse("time_unit", f"{self.time_unit!r} is no unit of time", "s, min, h or d")
+        if self.time_format not in (None, *TIME_FORMATS):
+            refuse(
+                "time_format",
+                f"unknown form of time {self.time_format!r}",
+                "one of " + ", ".join(TIME_FORMATS),
+            )
         for name, unit in self.units:
             if unit and not is_unit(unit):
                 refuse("units", f"unknown unit {unit!r} for column '{name}'", "for example mM, a.u., %")
@@ -104,7 +114,7 @@ def _is_time(unit: str) -> bool:
 def _typed(name: str, value: Any) -> Any:
     if value is None and name in ("encoding", "delimiter", "decimal", "header_line", "columns"):
         return None
-    if value is None and name in ("time_column", "time_unit"):
+    if value is None and name in ("time_column", "time_unit", "time_format"):
         return None
     if name == "sort_times" and isinstance(value, bool):
         return value

@@ -22,13 +22,18 @@ CellNote = tuple[int, int, str]
 
 @dataclass
 class Rows:
-    """Values, shape (n, width), time in s; (line, column from 0, text) of the cells that are no number."""
+    """Values, shape (n, width), time in s; (line, column from 0, text) of the cells that are no number.
+
+    ``one_colon`` holds (row, line, text) of the times with one colon where the clock is open;
+    ``trailing`` the most cells that a row had beyond the last column, all empty.
+    """
 
     values: NDArray[np.float64]
     missing: list[CellNote] = field(default_factory=list)
     limits: list[CellNote] = field(default_factory=list)
+    one_colon: list[CellNote] = field(default_factory=list)
     own_units: int = 0
-    trailing: bool = False
+    trailing: int = 0
 
 
 def read_rows(
@@ -103,9 +108,10 @@ def _read_row(
     except InvalidInput as error:
         problems.extend(error.problems)
         return
-    if len(cells) == layout.width + 1 and cells[-1] == "":
-        cells.pop()
-        rows.trailing = True
+    beyond = len(cells) - layout.width
+    if beyond > 0 and not any(cells[layout.width :]):
+        del cells[layout.width :]
+        rows.trailing = max(rows.trailing, beyond)
     if len(cells) != layout.width:
         message = f"the row has {len(cells)} cells instead of {layout.width}"
         if last and len(cells) < layout.width:
@@ -117,6 +123,8 @@ def _read_row(
             continue
         if column == time:
             cell = time_cell(text, layout.decimal, clock)
+            if clock.is_open and cell.kind == "number" and text.count(":") == 1:
+                rows.one_colon.append((row, number, text))
             rows.own_units += ":" in text or text[-1:].isalpha()
         else:
             cell = number_cell(text, layout.decimal)

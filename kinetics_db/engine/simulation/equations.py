@@ -17,11 +17,14 @@ from scipy.sparse import csr_array
 
 from kinetics_db.engine.network.model import Network, Side
 from kinetics_db.engine.simulation.computed import ComputedConstants
-from kinetics_db.engine.simulation.tape import Tape, power
+from kinetics_db.engine.simulation.powers import SMALLEST_BASE, root, slope_of_root
+from kinetics_db.engine.simulation.tape import Tape
 
 Floats = NDArray[np.float64]
 Ints = NDArray[np.intp]
 DENSE_LIMIT = 60_000  # elements
+Power = tuple[int, float, bool]
+"""Species, order, and whether the power itself or its slope (without the factor `order`) is meant."""
 
 
 class Equations:
@@ -43,7 +46,6 @@ class Equations:
         self.computed = ComputedConstants(network)
         self.held = np.array([name in network.held for name in network.species], dtype=bool)
         self._at = {name: i for i, name in enumerate(network.species)}
-        self._powers: dict[tuple[int, float], int] = {}
         self._compile_channels()
         self._compile_laws()
 
@@ -73,7 +75,7 @@ class Equations:
         for c, (_, orders, _, _) in enumerate(channels):
             for i, order in orders.items():
                 entries.append((c, i, order))
-                rows.append(self._factors({**orders, i: order - 1.0}))
+                rows.append(self._factors({**orders, i: 0.0}) + self._slope_factors(i, order))
         self.entry_channel = np.array([e[0] for e in entries], dtype=np.intp)
         self.entry_species = np.array([e[1] for e in entries], dtype=np.intp)
         self.entry_order = np.array([e[2] for e in entries])
@@ -101,21 +103,24 @@ class Equations:
             orders[self._at[name]] = orders.get(self._at[name], 0.0) + number
         return orders
 
-    def _factors(self, orders: Mapping[int, float]) -> list[int | tuple[int, float]]:
-        factors: list[int | tuple[int, float]] = []
+    def _factors(self, orders: Mapping[int, float]) -> list[int | Power]:
+        factors: list[int | Power] = []
         for i, order in orders.items():
             if order == 0.0:
                 continue
             if order > 0 and order == int(order) and order <= 4:
                 factors.extend([i] * int(order))
             else:
-                factors.append((i, order))
+                factors.append((i, order, False))
         return factors
 
-    def _gather(self, rows: Sequence[list[int | tuple[int, float]]]) -> tuple[Ints, list[tuple[int, float]]]:
+    def _slope_factors(self, i: int, order: float) -> list[int | Power]:
+        return self._factors({i: order - 1.0}) if order == int(order) else [(i, order, True)]
+
+    def _gather(self, rows: Sequence[list[int | Power]]) -> tuple[Ints, list[Power]]:
         """Index array, shape (q, monomials), into [species..., 1, powers...]."""
         s = len(self.species)
-        slots: list[tuple[int, float]] = []
+        slots: list[Power] = []
         depth = max((len(row) for row in rows), default=1) or 1
         index = np.full((depth, len(rows)), s, dtype=np.intp)
         for column, row in enumerate(rows):
@@ -242,12 +247,27 @@ class Bound:
         self._jac = np.zeros((s, s))
         self._out = np.zeros(s)
         self._powers = equations.power_slots
-        self._tail: list[float] = [*values.tolist(), math.nan if temperature is None else temperature]
+        self._widths = [SMALLEST_BASE] * s
+        self._constants: list[float] = [*values.tolist(), math.nan if temperature is None else temperature]
+        self._tail = self._constants + [SMALLEST_BASE] * len(tape.roots)
         self._tape = tape if n_l else None
 
+    def soften_roots(self, widths: Floats, level: float) -> None:
+        """Take orders between 0 and 1 as linear in species that are within their width of zero (see `powers`).
+
+        Parameters
+        ----------
+        widths : ndarray, shape (s,), below what can be told from zero
+        level : a usual concentration, which brings the widths to roots of other than a single species
+        """
+        self._widths = widths.tolist()
+        tape = self.equations.law_tape
+        self._tail = self._constants + tape.widths([level] * self.s, self._constants, self._widths)
+
     def _load_powers(self, y: Floats) -> None:
-        for slot, (i, order) in enumerate(self._powers, start=self.s + 1):
-            self._x[slot] = power(float(y[i]), order)
+        for slot, (i, order, is_slope) in enumerate(self._powers, start=self.s + 1):
+            f = slope_of_root if is_slope else root
+            self._x[slot] = f(float(y[i]), order, self._widths[i])
 
     def rates(self, y: Floats) -> Floats:
         """d[X]/dt at y, shape (s,); the array is overwritten by the next call. Raises ArithmeticError or

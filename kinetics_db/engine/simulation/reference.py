@@ -28,7 +28,11 @@ Floats = NDArray[np.float64]
 
 # A species is followed to this fraction of the largest concentration with full relative accuracy.
 TRACE = 1e-8
+# Multiple of the absolute tolerance below which a concentration is not told from zero by a root of it.
+BLUR = 10.0
 SENSITIVITY_TRACE = 1e-3  # below 1e-6 rounding in stiff nets costs thousands of steps
+_CLOSEST = 8 * float(np.finfo(float).eps)  # relative to the time
+_SMALLEST_STEP = 1e-290  # s; the square of its inverse must not overflow
 _CLOCK_EVERY = 64  # rate evaluations between looks at the clock
 _EVALUATIONS_PER_STEP = 6
 
@@ -220,6 +224,7 @@ def integrate(
     sensitivities = np.full((len(times), s, p), np.nan)
     size = np.abs(constants[list(wanted)])
     size[size == 0.0] = 1.0
+    times = _at_the_start_or_after(times, start_time)
     stations, where = np.unique(np.concatenate([[start_time], times]), return_inverse=True)
     try:
         with np.errstate(all="ignore"):
@@ -230,6 +235,7 @@ def integrate(
     scales = np.concatenate([size, np.full(len(wanted_starts), largest)])
     if atol is None:
         atol = np.full(s, rtol * TRACE * largest)
+    bound.soften_roots(BLUR * atol, largest)
     u0 = np.zeros(s * (1 + p))
     u0[:s] = start
     for block, species in enumerate(wanted_starts):
@@ -241,6 +247,12 @@ def integrate(
     values[:] = rows[:, :s]
     sensitivities[:] = (rows[:, s:].reshape(len(times), p, s) / scales[None, :, None]).transpose(0, 2, 1)
     return values, sensitivities, outcome
+
+
+def _at_the_start_or_after(times: Floats, start_time: float) -> Floats:
+    """Times with those that rounding alone parts from the start set to it: LSODA takes no such step."""
+    apart = _CLOSEST * np.maximum(np.abs(times), abs(start_time)) + _SMALLEST_STEP
+    return np.where(times - start_time <= apart, start_time, times)
 
 
 def _largest(bound: Bound, start: Floats, duration: float) -> float:

@@ -1,7 +1,9 @@
 """Expressions as a list of operations over numbers, with common subexpressions computed once.
 
 A tape holds the values of some expressions and all their exact derivatives, so that a written-out law costs
-a fraction of a microsecond for each distinct operation in it.
+a fraction of a microsecond for each distinct operation in it. What is differentiated is the list itself,
+operation by operation (forward mode; Griewank & Walther, Evaluating Derivatives, SIAM 2008), so that the
+derivatives are those of the numbers that are computed, near zero too (see `powers`).
 """
 
 from __future__ import annotations
@@ -10,7 +12,6 @@ import math
 import operator
 from collections.abc import Callable, Sequence
 
-from kinetics_db.engine.network.expressions import derivative
 from kinetics_db.engine.network.syntax import (
     Binary,
     Call,
@@ -24,27 +25,22 @@ from kinetics_db.engine.network.syntax import (
     species_of,
     uses_temperature,
 )
+from kinetics_db.engine.simulation.powers import (
+    SMALLEST_BASE,
+    power,
+    power_by_exponent,
+    reach,
+    root,
+    root_by_exponent,
+    slope_of_power,
+    slope_of_root,
+)
 
-SMALLEST_BASE = 1e-30
-"""Below this a concentration is treated as this in a power that would be infinite at zero."""
+SMALLEST_DIVISOR = 1e-15
+"""Stands for a zero denominator in a derivative."""
 
-SMALLEST_ROOT = 1e-15
-"""Stands for a zero denominator in a derivative, such as that of sqrt([A]) at [A] = 0, which is infinite."""
-
-Operation = tuple[Callable[[float, float], float], int, int]
-
-
-def power(base: float, exponent: float) -> float:
-    """base^exponent, continued to bases below zero as an odd function unless the exponent is an integer.
-
-    A concentration that rounding leaves a hair below zero so keeps a finite rate that leads back to zero.
-    A negative power of zero is that of `SMALLEST_BASE`.
-    """
-    if exponent < 0 and abs(base) < SMALLEST_BASE:
-        base = SMALLEST_BASE
-    if base < 0 and exponent != math.floor(exponent):
-        return -math.pow(-base, exponent)
-    return math.pow(base, exponent)
+Function = Callable[[float, float], float]
+Operation = tuple[Function, int, int]
 
 
 def _minus(a: float, _: float) -> float:
@@ -59,30 +55,34 @@ def _log(a: float, _: float) -> float:
     return math.log(a)
 
 
-def _log_or_zero(a: float, _: float) -> float:
-    return math.log(abs(a)) if a != 0.0 else 0.0
-
-
-def _sqrt(a: float, _: float) -> float:
-    return power(a, 0.5)
-
-
 def _divide_in_derivative(a: float, b: float) -> float:
-    return a / (b if b != 0.0 else SMALLEST_ROOT)
+    return a / (b if b != 0.0 else SMALLEST_DIVISOR)
 
 
-_BINARY: dict[str, Callable[[float, float], float]] = {
+def _by_base(a: float, b: float) -> float:
+    return b * slope_of_power(a, b) if b != 0.0 else 0.0
+
+
+def _root_by_base(a: float, b: float) -> float:
+    return b * slope_of_root(a, b) if b != 0.0 else 0.0
+
+
+_FUNCTIONS: dict[str, Function] = {
     "+": operator.add,
     "-": operator.sub,
     "*": operator.mul,
     "/": operator.truediv,
     "^": power,
-}
-_FUNCTIONS: dict[str, Callable[[float, float], float]] = {
+    "minus": _minus,
     "exp": _exp,
     "log": _log,
-    "sqrt": _sqrt,
-    "log or zero": _log_or_zero,
+    "reach": reach,
+    "root": root,
+    "/ in derivative": _divide_in_derivative,
+    "^ by base": _by_base,
+    "^ by exponent": power_by_exponent,
+    "root by base": _root_by_base,
+    "root by exponent": root_by_exponent,
 }
 
 
@@ -95,6 +95,8 @@ class Tape:
     species_entries, name_entries : tuple of (expression, position)
         Which derivatives follow the values, by position in `species` and in `names`.
     uses_temperature : bool
+    roots : tuple of Expression
+        Bases that hold a concentration and may stand in a power between 0 and 1; each needs a width.
     """
 
     def __init__(
@@ -111,13 +113,16 @@ class Tape:
         writer = _Writer(at_species, at_names)
         self._values = [writer.place(e) for e in expressions]
         self._short = len(writer.operations)  # values need no more than these
-        writer.in_derivatives = True
-        derivatives = [derivative(expressions[n], Concentration(species[i])) for n, i in by_species]
-        derivatives += [derivative(expressions[n], Parameter(names[i])) for n, i in by_names]
-        self._all = self._values + [writer.place(e) for e in derivatives]
+        variables = [(n, ("input", i)) for n, i in by_species]
+        variables += [(n, ("input", len(species) + i)) for n, i in by_names]
+        zero = writer.number(0.0)
+        slopes = [writer.slope(self._values[n], variable) or zero for n, variable in variables]
+        self._all = self._values + slopes
         self._operations = writer.operations
         self._numbers = writer.numbers
-        self._inputs = len(species) + len(names) + 1
+        self.roots = tuple(writer.roots)
+        self._bases = Tape(self.roots, species=species, names=names) if self.roots else None
+        self._inputs = len(species) + len(names) + 1 + len(self.roots)
         # numbers stand between the inputs and the results, which are known only now
         shift = len(writer.numbers)
         self._resolve(shift)
@@ -140,7 +145,7 @@ class Tape:
 
         Parameters
         ----------
-        inputs : list of float, species, then names, then T
+        inputs : list of float, species, then names, then T, then the widths of `roots`
 
         Raises
         ------
@@ -157,26 +162,50 @@ class Tape:
             append(f(v[a], v[b]))
         return [v[i] for i in self._value_positions]
 
+    def widths(self, levels: list[float], tail: list[float], resolved: Sequence[float]) -> list[float]:
+        """How far from zero each base in `roots` is unknown: that of a species, by the slope of the base to it.
+
+        Parameters
+        ----------
+        levels : list of float, usual concentrations, at which the slopes are taken
+        tail : list of float, names, then T
+        resolved : width of each species
+        """
+        if self._bases is None:
+            return []
+        inner = self._bases.widths(levels, tail, resolved)
+        try:
+            found = self._bases.run(levels + tail + inner, derivatives=True)
+        except (ArithmeticError, ValueError):
+            return [SMALLEST_BASE] * len(self.roots)
+        widths = [0.0] * len(self.roots)
+        slopes = found[len(self.roots) :]
+        for (base, species), slope in zip(self._bases.species_entries, slopes, strict=False):
+            widths[base] += abs(slope) * resolved[species]
+        return [w if SMALLEST_BASE < w < math.inf else SMALLEST_BASE for w in widths]
+
 
 Address = tuple[str, int]
 
 
 class _Writer:
-    """Writes expressions onto one list of operations, each distinct operation once."""
+    """Writes expressions and their slopes onto one list of operations, each distinct operation once."""
 
     def __init__(self, species: dict[str, int], names: dict[str, int]) -> None:
         self._species = species
         self._names = names
         self.numbers: list[float] = []
-        self.operations: list[tuple[Callable[[float, float], float], Address, Address]] = []
-        self.in_derivatives = False
+        self.roots: list[Expression] = []
+        self.operations: list[tuple[Function, Address, Address]] = []
+        self._forms: list[tuple[str, Address, Address]] = []
         self._known: dict[tuple[str, Address, Address], Address] = {}
+        self._slopes: dict[tuple[Address, Address], Address | None] = {}
 
     def place(self, expression: Expression) -> Address:
         """Address of an expression's value; writes the operations it needs."""
         match expression:
             case Number(value):
-                return self._number(value)
+                return self.number(value)
             case Parameter(name):
                 return ("input", len(self._species) + self._names[name])
             case Concentration(species):
@@ -184,26 +213,92 @@ class _Writer:
             case Temperature():
                 return ("input", len(self._species) + len(self._names))
             case Negation(operand):
-                address = self.place(operand)
-                return self._operation("minus", _minus, address, address)
+                return self._one("minus", self.place(operand))
+            case Binary("^", base, exponent):
+                return self._power(base, exponent)
             case Binary(sign, left, right):
-                return self._operation(sign, _BINARY[sign], self.place(left), self.place(right))
+                return self._write(sign, self.place(left), self.place(right))
+            case Call("sqrt", argument):
+                return self._power(argument, Number(0.5))
             case Call(function, argument):
-                address = self.place(argument)
-                return self._operation(function, _FUNCTIONS[function], address, address)
+                return self._one(function, self.place(argument))
         raise TypeError(f"{expression!r} is not an expression")
 
-    def _number(self, value: float) -> Address:
+    def _power(self, base: Expression, exponent: Expression) -> Address:
+        """x^n; where it may be a root of a concentration, w^n (x/w)^n with the cubic below the width w."""
+        x, n = self.place(base), self.place(exponent)
+        fixed = isinstance(exponent, Number)
+        if not species_of(base) or (isinstance(exponent, Number) and not 0.0 < exponent.value < 1.0):
+            return self._write("^", x, n)
+        if base not in self.roots:
+            self.roots.append(base)
+        width: Address = ("input", len(self._species) + len(self._names) + 1 + self.roots.index(base))
+        w = width if fixed else self._write("reach", width, n)
+        return self._write("*", self._write("^", w, n), self._write("root", self._write("/", x, w), n))
+
+    def slope(self, of: Address, by: Address) -> Address | None:
+        """Address of the derivative of a value by an input; None where it is zero whatever the inputs are."""
+        if of == by:
+            return self.number(1.0)
+        if of[0] != "result":
+            return None
+        if (of, by) not in self._slopes:
+            self._slopes[of, by] = self._slope_of_operation(of, by)
+        return self._slopes[of, by]
+
+    def _slope_of_operation(self, of: Address, by: Address) -> Address | None:
+        key, a, b = self._forms[of[1]]
+        da, db = self.slope(a, by), self.slope(b, by)
+        match key:
+            case "+":
+                return self._sum(da, db)
+            case "-":
+                return self._difference(da, db)
+            case "*":
+                return self._sum(self._product(da, b), self._product(a, db))
+            case "/":
+                above = self._difference(da, self._product(of, db))
+                return above and self._write("/ in derivative", above, b)
+            case "minus":
+                return da and self._one("minus", da)
+            case "exp":
+                return self._product(of, da)
+            case "log":
+                return da and self._write("/ in derivative", da, a)
+            case "^" | "root":
+                by_base = da and self._product(self._write(f"{key} by base", a, b), da)
+                by_exponent = db and self._product(self._write(f"{key} by exponent", a, b), db)
+                return self._sum(by_base, by_exponent)
+        return None  # 'reach' moves with nothing
+
+    def _sum(self, a: Address | None, b: Address | None) -> Address | None:
+        return self._write("+", a, b) if a and b else a or b
+
+    def _difference(self, a: Address | None, b: Address | None) -> Address | None:
+        if b is None:
+            return a
+        return self._write("-", a, b) if a else self._one("minus", b)
+
+    def _product(self, a: Address | None, b: Address | None) -> Address | None:
+        if a is None or b is None:
+            return None
+        one = self.number(1.0)
+        if one in (a, b):
+            return b if a == one else a
+        return self._write("*", a, b)
+
+    def number(self, value: float) -> Address:
         if value not in self.numbers:
             self.numbers.append(value)
         return ("number", self.numbers.index(value))
 
-    def _operation(self, key: str, f: Callable[[float, float], float], a: Address, b: Address) -> Address:
-        known = self._known.get((key, a, b))
-        if known is None:
-            if self.in_derivatives and key == "/":
-                f = _divide_in_derivative
-            known = ("result", len(self.operations))
-            self.operations.append((f, a, b))
-            self._known[key, a, b] = known
-        return known
+    def _one(self, key: str, a: Address) -> Address:
+        return self._write(key, a, a)
+
+    def _write(self, key: str, a: Address, b: Address) -> Address:
+        form = (key, a, b)
+        if form not in self._known:
+            self._known[form] = ("result", len(self.operations))
+            self.operations.append((_FUNCTIONS[key], a, b))
+            self._forms.append(form)
+        return self._known[form]

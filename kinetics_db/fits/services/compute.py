@@ -40,8 +40,8 @@ class Computed:
     outcome: FitOutcome
 
 
-class _Pulse:
-    """Turns the engine's progress into heartbeats; beats only when an evaluation has been done."""
+class Pulse:
+    """Turns the engine's progress into heartbeats; beats only when something has been done."""
 
     def __init__(self, claim: Claim):
         self.claim = claim
@@ -50,31 +50,35 @@ class _Pulse:
         self.stop = False
 
     def progress(self, iteration: int, cost: float) -> None:
+        """Remember how far the fit is."""
         self.iteration, self.cost = iteration, cost
 
     def asked_to_stop(self) -> bool:
-        if time.monotonic() - self.beaten >= SECONDS_BETWEEN_HEARTBEATS:
-            self.beaten = time.monotonic()
-            cost = f", cost {self.cost:.6g}" if math.isfinite(self.cost) else ""
-            try:
-                # How many iterations a fit will take nobody knows: the bar nears its end without claiming it.
-                jobs.heartbeat(
-                    self.claim,
-                    progress=1.0 - 0.9**self.iteration,
-                    message=f"iteration {self.iteration}{cost}",
-                )
-            except jobs.StopAsked:
-                self.stop = True
+        """Beat when it is time to, and say whether somebody wants the fit stopped."""
+        cost = f", cost {self.cost:.6g}" if math.isfinite(self.cost) else ""
+        try:
+            # How many iterations a fit will take nobody knows: the bar nears its end without claiming it.
+            self._beat(1.0 - 0.9**self.iteration, f"iteration {self.iteration}{cost}", heed_stop=True)
+        except jobs.StopAsked:
+            self.stop = True
         return self.stop
 
+    def judging(self) -> None:
+        """Beat while the finished fit is judged; too late to stop."""
+        self._beat(0.99, "judging the runs", heed_stop=False)
 
-def compute_fit(fit: Fit, claim: Claim) -> Computed:
+    def _beat(self, progress: float, message: str, *, heed_stop: bool) -> None:
+        if time.monotonic() - self.beaten >= SECONDS_BETWEEN_HEARTBEATS:
+            self.beaten = time.monotonic()
+            jobs.heartbeat(self.claim, progress=progress, message=message, heed_stop=heed_stop)
+
+
+def compute_fit(fit: Fit, pulse: Pulse) -> Computed:
     """Compute a fit as its request says; raises LeaseLost when another worker has taken over."""
     request = FitRequest.from_plain(fit.content)
     network = network_of(fit.mechanism_version)
     data = data_of(fit.dataset)
     experiments, nuisances = experiments_of(data, request.casting, without_owners=request.without_owners)
-    pulse = _Pulse(claim)
     outcome = fit_globally(
         network,
         experiments,

@@ -15,6 +15,7 @@ from kinetics_db.fits.selectors import result_of
 from kinetics_db.web.names import name_html
 from kinetics_db.web.numbers import Shown, shown
 from kinetics_db.web.present.runs import Curve
+from kinetics_db.web.words import message_text, place_shown
 
 if TYPE_CHECKING:
     from django.utils.safestring import SafeString
@@ -32,7 +33,7 @@ class ConstantSheet:
     """One fitted constant or start concentration."""
 
     name: SafeString
-    where: str
+    where: Shown
     value: Shown
     interval: str
     remark: str
@@ -45,6 +46,8 @@ class FitSheet:
     fit: Fit
     state: str
     message: str
+    detail: str
+    """how a fit came to its good end, which few will ask"""
     is_open: bool
     progress: float
     confidence: str
@@ -155,10 +158,13 @@ def _fit_sheet(
         p for p in content.get("parameters", ()) if p["kind"] in ("constant", "start concentration")
     ]
     confidence = content.get("confidence")
+    message = message_text(message)
+    ended_well = state == "converged"
     return FitSheet(
         fit=fit,
         state=state,
-        message=message,
+        message="" if ended_well else message,
+        detail=message if ended_well else "",
         is_open=is_open,
         progress=job.progress if job is not None else 0.0,
         confidence=f"{100 * confidence:.4g} %" if confidence else "",
@@ -196,4 +202,6 @@ def _constant(p: Mapping[str, Any]) -> ConstantSheet:
         remarks.append("pushed against its bound")
     if p["set_by_prior"]:
         remarks.append("set by its prior")
-    return ConstantSheet(name_html(p["base"]), p["place"] or "", value, limits, "; ".join(remarks))
+    return ConstantSheet(
+        name_html(p["base"]), place_shown(p["place"] or ""), value, limits, "; ".join(remarks)
+    )

@@ -1,13 +1,19 @@
-"""How dates and hashes are written on pages."""
+"""How dates, hashes and datasets are written on pages."""
 
 from __future__ import annotations
 
 from datetime import datetime
+from typing import TYPE_CHECKING
 
 from django import template
 from django.utils import timezone
 from django.utils.html import format_html
 from django.utils.safestring import SafeString
+
+from kinetics_db.web.words import dataset_text
+
+if TYPE_CHECKING:
+    from kinetics_db.datasets.models import Dataset
 
 register = template.Library()
 
@@ -25,6 +31,12 @@ def when(moment: datetime | None) -> SafeString:
 def digest(text: str) -> SafeString:
     """The beginning of a hash; the whole of it to point at."""
     return format_html('<code class="digest" title="SHA-256 {}">{}</code>', text, text[:10])
+
+
+@register.filter
+def as_dataset(dataset: Dataset) -> str:
+    """A dataset by name and version: "dataset 'all runs', version 1"."""
+    return dataset_text(dataset)
 
 
 @register.filter

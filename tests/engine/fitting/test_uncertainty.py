@@ -64,5 +64,12 @@ def test_units_do_not_decide_what_is_determined():
 def test_only_what_is_pushed_outwards_counts_as_at_a_bound():
     theta = np.array([0.0, 0.0, 1.0, 1.0, 0.5])
     gradient = np.array([1.0, -1.0, -1.0, 1.0, 1.0])
-    pushed = pushed_against_bounds(theta, np.zeros(5), np.ones(5), gradient, np.ones(5))
+    pushed = pushed_against_bounds(theta, np.zeros(5), np.ones(5), gradient)
     assert pushed.tolist() == [True, False, True, False, False]
+
+
+def test_what_is_near_a_bound_counts_only_when_asked():
+    theta, gradient = np.array([1e-4, 0.9999, 0.5]), np.array([1.0, -1.0, 1.0])
+    assert not pushed_against_bounds(theta, np.zeros(3), np.ones(3), gradient).any()
+    near = pushed_against_bounds(theta, np.zeros(3), np.ones(3), gradient, 1e-3)
+    assert near.tolist() == [True, True, False]

@@ -150,7 +150,108 @@ def test_minutes_seconds_and_clock_times_mixed_in_one_column() -> None:
 def test_clock_times_follow_the_form_in_the_header() -> None:
     assert read_text("Time (h:mm);A\n0:00;1\n1:30;2\n").table.times.tolist() == [0.0, 5400.0]
     assert read_text("Time (mm:ss);A\n0:00;1\n1:30.5;2\n").table.times.tolist() == [0.0, 90.5]
-    assert read_text("Time;A\n-0:30;1\n0:30;2\n").table.times.tolist() == [-30.0, 30.0]
+    assert read_text("Time (mm:ss);A\n-0:30;1\n0:30;2\n").table.times.tolist() == [-30.0, 30.0]
+
+
+@pytest.mark.parametrize(
+    ("text", "times", "told_by"),
+    [
+        ("59:30;1\n1:00:00;2\n1:00:30;3", [3570, 3600, 3630], "mm:ss: as h:mm the rows would not be in"),
+        ("0:30;1\n45 min;2\n1:00;3", [1800, 2700, 3600], "h:mm: as mm:ss the rows would not be in"),
+        ("10:00,5;1\n10:05,0;2", [600.5, 605], "mm:ss: some have fractions of a second"),
+        ("0:00;1\n30 s;2", [0, 30], "every cell carries its own unit or colons"),  # zero needs no form
+    ],
+)
+def test_other_cells_tell_what_a_time_with_one_colon_is(text: str, times: list[float], told_by: str) -> None:
+    result = read_text(f"time;A\n{text}\n")
+    assert result.table.times.tolist() == times
+    assert said(result, told_by)
+
+
+@pytest.mark.parametrize("rows", ["10:00;1\n10:05;2", "0:30;1\n45 min;2\n1:00;3"])
+def test_times_with_one_colon_that_can_be_both_need_their_form_stated(rows: str) -> None:
+    text = f"time;A\n{rows}\n"
+    with pytest.raises(InvalidInput, match="can be h:mm or mm:ss") as caught:
+        read_text(text, sort_times=True)  # the order of rows tells nothing where it may be wrong
+    assert caught.value.problems[0].field == "time_format"
+    assert "time_format" in caught.value.problems[0].cure
+    hours = read_text(text, time_format="h:mm", sort_times=True).table
+    minutes = read_text(text, time_format="mm:ss", sort_times=True).table
+    assert hours.times.max() == 60 * minutes.times[minutes.times < 2000].max()
+
+
+def test_a_stated_form_of_time_goes_over_header_and_unit() -> None:
+    for header in ("time", "time (h:mm)", "t / h", "t / min"):
+        text = f"{header};A\n0:10;1\n1:30;2\n"
+        assert read_text(text, time_format="mm:ss").table.times.tolist() == [10.0, 90.0]
+        assert read_text(text, time_format="h:mm").table.times.tolist() == [600.0, 5400.0]
+
+
+def test_a_units_row_with_an_unknown_unit_leaves_the_names_in_place() -> None:
+    text = "t;A;B\nmin;mM;arb\n0;1;2\n1;2;3\n"
+    result = read_text(text)
+    assert columns(result.table) == [("t", "s"), ("A", "mM"), ("B", "")]
+    assert result.table.times.tolist() == [0.0, 60.0]
+    assert [(w.line, w.column, w.field) for w in result.warnings] == [(2, 3, "units")]
+    assert "'arb' is no unit that is known; column 'B' is read without it" in str(result.warnings[0])
+    stated = read_text(text, units=(("B", "a.u."),))
+    assert columns(stated.table)[2] == ("B", "a.u.")
+    assert stated.warnings == ()
+
+
+def test_unknown_units_are_seen_below_a_header_that_states_the_unit_of_time() -> None:
+    result = read_text("t / min;A;pH\n;mM;pH\n0;1;7\n1;2;7\n")
+    assert columns(result.table) == [("t", "s"), ("A", "mM"), ("pH", "")]
+
+
+def test_a_bad_cell_below_unknown_units_is_what_is_refused() -> None:
+    with pytest.raises(InvalidInput, match="line 3, column 3: 'abc' in column 'B' is not a number") as caught:
+        read_text("t;A;B\nmin;mM;arb\n0;1;abc\n1;2;3\n")
+    assert len(caught.value.problems) == 1
+
+
+def test_names_or_units_below_a_heading_are_settled_by_the_line_of_the_header() -> None:
+    text = "Time;Level;Area\nmin;lactone;acid\n0;1;2\n1;2;3\n"
+    with pytest.raises(InvalidInput, match="lines 1 and 2 can both be the header") as caught:
+        read_text(text)
+    assert caught.value.problems[0].field == "header_line"
+    assert read_text(text, header_line=1).table.names("signal") == ("Level", "Area")
+    assert read_text(text, header_line=2).table.names("signal") == ("lactone", "acid")
+
+
+@pytest.mark.parametrize(
+    "text",
+    [
+        "t / s;A;;\n0;1,5;;\n1;2,5;;\n",
+        "t / s;A;;;\n0;1,5\n1;2,5;\n",
+        "t / s;A\n0;1,5;;\n1;2,5;;\n",
+        "t;A;;\ns;;;\n0;1,5;;\n1;2,5;;\n",
+        "Sample;7;;;\nT / °C;25,0;;;\n;;;;\nt / s;A;;;\n0;1,5;;;\n1;2,5;;;\n;;;;\n",
+        "t / s,A,,\n0,1.5,,\n1,2.5,,\n",
+        "t / s\tA\t\t\n0\t1.5\t\t\n1\t2.5\t\t\n",
+        '"t / s","A","",""\n"0","1,5","",""\n"1","2,5","",""\n',
+    ],
+)
+def test_empty_columns_at_the_end_are_left_out(text: str) -> None:
+    result = read_text(text)
+    assert columns(result.table) == [("t", "s"), ("A", "")]
+    assert result.table.values.tolist() == [[0.0, 1.5], [1.0, 2.5]]
+    assert said(result, "at the end of lines") and not result.warnings
+
+
+def test_columns_at_the_end_that_have_a_name_or_a_value_are_kept() -> None:
+    named = read_text("t / s;A;B;C;;\n0;1;;;;\n1;2;;;;\n")
+    assert [name for name, _ in columns(named.table)] == ["t", "A", "B", "C"]
+    assert [w.field for w in named.warnings] == ["B", "C"]
+    late = read_text("t / s;A;B;C;\n0;1;;;\n1;2;;;\n2;3;;4;\n").table
+    assert np.array_equal(late.column("C", "signal"), [np.nan, np.nan, 4.0], equal_nan=True)
+    stated = read_text("t / s;A;;\n0;1;;\n1;2;;\n", columns=("t", "A", "x", "y"), ignored_columns=("x", "y"))
+    assert columns(stated.table) == [("t", "s"), ("A", "")]
+
+
+def test_a_name_more_than_there_are_columns_is_never_dropped() -> None:
+    with pytest.raises(InvalidInput, match="the row has 2 cells instead of 5"):
+        read_text("t / s;A;B;C;D\n0;1\n1;2\n", header_line=1)
 
 
 def test_another_column_in_seconds_does_not_disturb_the_time_in_minutes() -> None:
@@ -242,11 +343,17 @@ def test_thousands_separators_are_refused_with_an_explanation(cell: str) -> None
 
 def test_the_options_survive_their_plain_form() -> None:
     options = ReadingOptions(
-        decimal=",", units=(("A", "mM"),), columns=("t", "A"), sort_times=True, header_line=3
+        decimal=",",
+        units=(("A", "mM"),),
+        columns=("t", "A"),
+        sort_times=True,
+        header_line=3,
+        time_format="h:mm",
     )
     plain = options.to_plain()
     assert plain == {
         "decimal": ",", "units": {"A": "mM"}, "columns": ["t", "A"], "sort_times": True, "header_line": 3,
+        "time_format": "h:mm",
     }  # fmt: skip
     assert ReadingOptions.from_plain(plain) == options
     assert ReadingOptions.from_plain({}) == ReadingOptions()
@@ -261,6 +368,8 @@ def test_the_options_survive_their_plain_form() -> None:
         ({"header_line": -1}, "header_line"),
         ({"header_line": "3"}, "header_line"),
         ({"time_unit": "mM"}, "time_unit"),
+        ({"time_format": "hh.mm"}, "time_format"),
+        ({"time_format": 5}, "time_format"),
         ({"units": {"A": "blobs"}}, "units"),
         ({"units": [1]}, "units"),
         ({"columns": "t"}, "columns"),

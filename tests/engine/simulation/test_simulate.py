@@ -23,6 +23,49 @@ def test_a_run_may_begin_at_another_time_than_zero():
     np.testing.assert_allclose(curves.of("A"), [1.0, np.exp(-1.0)], rtol=1e-6)
 
 
+@pytest.mark.parametrize(
+    ("start_time", "first"),
+    [
+        (0.0, 5e-324),
+        (0.0, 1e-300),
+        (0.3, np.nextafter(0.3, 1.0)),
+        (1.0, 1.0 + 2.2e-16),
+        (-3.0, np.nextafter(-3.0, 0.0)),
+        (100.0, 100.0 + 2e-14),
+        (1.7e9, np.nextafter(1.7e9, 2e9)),
+    ],
+)
+@pytest.mark.parametrize("wanted", [(), ("k",)])
+def test_a_time_that_rounding_alone_parts_from_the_start_has_the_start_values(start_time, first, wanted):
+    curves = simulate(
+        parse_mechanism("A --k--> B"),
+        constants={"k": 0.01},
+        start={"A": 1.0},
+        times=[first, first, start_time + 100.0],
+        start_time=start_time,
+        sensitivities_to=wanted,
+    )
+    assert curves.outcome.ok, curves.outcome.message
+    np.testing.assert_allclose(curves.of("A"), [1.0, 1.0, np.exp(-1.0)], rtol=1e-6)
+    assert curves.times[0] == first  # told as asked for
+    if wanted:
+        np.testing.assert_allclose(
+            curves.sensitivity_of("A")[:, 0], [0.0, 0.0, -100.0 * np.exp(-1.0)], rtol=1e-6
+        )
+
+
+def test_a_time_shortly_after_the_start_is_a_step_of_its_own():
+    """70 roundings of the time after it: enough to move, though not to resolve the decay."""
+    curves = simulate(
+        parse_mechanism("A --k--> B"),
+        constants={"k": 1e12},
+        start={"A": 1.0},
+        times=[100.0 + 1e-12, 101.0],
+        start_time=100.0,
+    )
+    np.testing.assert_allclose(curves.of("A")[0], np.exp(-1.0), rtol=0.1)
+
+
 def test_no_times_give_empty_curves():
     curves = simulate(parse_mechanism("A --k--> B"), constants={"k": 1.0}, start={"A": 1.0}, times=[])
     assert curves.values.shape == (0, 2)
