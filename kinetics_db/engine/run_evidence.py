@@ -197,13 +197,18 @@ def _run(
 ) -> RunEvidence:
     if not observables:
         return RunEvidence(name, "not tested", None, (), pulls, limits)
-    worst = max(observables, key=lambda o: FROM_BEST_TO_WORST.index(o.verdict))
+    worst = max(observables, key=lambda o: (FROM_BEST_TO_WORST.index(o.verdict), -_smallest_p(o)))
     verdict, notes = worst.verdict, _notes(observables)
     far = [p for p in pulls if abs(p.pull) > limits.pull]
     notes += [f"{p.name}: a pull of {p.pull:.2g}" for p in far]
     if far and verdict == "not tested":  # its parameters take up its points, and still one is bent
         verdict = "strained"
     return RunEvidence(name, verdict, worst.observable, tuple(observables), pulls, limits, "; ".join(notes))
+
+
+def _smallest_p(o: ObservableEvidence) -> float:
+    """Of both tests, adjusted; between equal verdicts the observable with the smallest tells the most."""
+    return min((p for p in (o.chi_square_p_adjusted, o.runs_p_adjusted) if p is not None), default=1.0)
 
 
 def _notes(observables: Sequence[ObservableEvidence]) -> list[str]:

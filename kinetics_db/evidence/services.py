@@ -6,18 +6,10 @@ from collections.abc import Mapping
 from dataclasses import asdict
 from typing import Any
 
+from kinetics_db.engine import comparison
 from kinetics_db.engine.canonical import digest
-from kinetics_db.engine.comparison import (
-    ModelEvidence as EngineModelEvidence,
-)
-from kinetics_db.engine.comparison import (
-    RunEvidence as EngineRunEvidence,
-)
-from kinetics_db.engine.comparison import (
-    Thresholds,
-    evidence_of_model,
-    evidence_of_runs,
-)
+from kinetics_db.engine.run_evidence import RunEvidence as EngineRunEvidence
+from kinetics_db.engine.run_evidence import Thresholds, evidence_of_runs
 from kinetics_db.errors import InvalidInput
 from kinetics_db.evidence.models import ModelEvidence, RunEvidence
 from kinetics_db.fits.models import Fit, FitResult
@@ -46,7 +38,7 @@ def compute_and_assess(claim: Claim) -> None:
     pulse = Pulse(claim)
     computed = compute_fit(fit, pulse)
     judged = bool(computed.outcome.experiments)
-    model = evidence_of_model(computed.outcome) if judged else None
+    model = comparison.evidence_of_model(computed.outcome) if judged else None
     runs = _judge(computed, thresholds, pulse) if judged else ()
     content = prepared(result_content(computed))
     verdicts = prepared(_content(content.digest, model, runs, thresholds)) if model is not None else None
@@ -81,7 +73,7 @@ def thresholds_of(fit: Fit) -> Thresholds:
 
 def _content(
     result_digest: str,
-    model: EngineModelEvidence,
+    model: comparison.ModelEvidence,
     runs: tuple[EngineRunEvidence, ...],
     thresholds: Thresholds,
 ) -> dict[str, Any]:
@@ -98,7 +90,7 @@ def _content(
 def store_evidence(
     computed: Computed,
     result: FitResult,
-    model: EngineModelEvidence,
+    model: comparison.ModelEvidence,
     runs: tuple[EngineRunEvidence, ...],
     content: Prepared,
 ) -> ModelEvidence:

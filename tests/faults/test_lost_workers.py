@@ -23,6 +23,13 @@ pytestmark = pytest.mark.django_db(transaction=True)
 QUICK_LEASE = {"RATEWRIGHT_JOB_LEASE_SECONDS": "6", "RATEWRIGHT_JOB_RESEND_AFTER_SECONDS": "1"}
 
 
+@pytest.fixture(autouse=True)
+def quick_lease(monkeypatch: pytest.MonkeyPatch) -> None:
+    """The processes of these tests take a silent worker for lost after seconds."""
+    for name, value in QUICK_LEASE.items():
+        monkeypatch.setenv(name, value)
+
+
 def wait_until(condition: Callable[[], bool], *, seconds: float, what: str) -> None:
     end = time.monotonic() + seconds
     while not condition():
@@ -52,10 +59,7 @@ def ask_for_demo_fits() -> list[Fit]:
 def test_a_killed_worker_costs_an_attempt_and_every_fit_of_the_demo_finishes_once(
     celery_worker_process: Callable[..., Any],
     sweeper_process: Callable[..., Any],
-    monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    for name, value in QUICK_LEASE.items():
-        monkeypatch.setenv(name, value)
     worker = celery_worker_process(concurrency=1)
     sweeper_process(every=0.2)
     fits = ask_for_demo_fits()
@@ -71,10 +75,7 @@ def test_a_killed_worker_costs_an_attempt_and_every_fit_of_the_demo_finishes_onc
 def test_a_killed_child_of_a_worker_is_replaced_and_the_fit_finishes_once(
     celery_worker_process: Callable[..., Any],
     sweeper_process: Callable[..., Any],
-    monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    for name, value in QUICK_LEASE.items():
-        monkeypatch.setenv(name, value)
     worker = celery_worker_process(concurrency=1)
     sweeper_process(every=0.2)
     fit = ask(starts=MANY_STARTS)
@@ -89,12 +90,9 @@ def test_a_flushed_broker_loses_no_fit_of_the_demo(
     broker: Any,
     celery_worker_process: Callable[..., Any],
     sweeper_process: Callable[..., Any],
-    monkeypatch: pytest.MonkeyPatch,
 ) -> None:
     import redis
 
-    for name, value in QUICK_LEASE.items():
-        monkeypatch.setenv(name, value)
     fits = ask_for_demo_fits()
     with redis.Redis(unix_socket_path=str(broker.socket)) as client:
         assert client.llen("ratewright") == len(fits), "the bells have been rung"
@@ -110,10 +108,7 @@ def test_a_fit_asked_for_while_the_broker_is_away_starts_when_it_is_back(
     broker: Any,
     celery_worker_process: Callable[..., Any],
     sweeper_process: Callable[..., Any],
-    monkeypatch: pytest.MonkeyPatch,
 ) -> None:
-    for name, value in QUICK_LEASE.items():
-        monkeypatch.setenv(name, value)
     broker.stop()
     fit = ask()
     assert job_of(fit).state == Job.State.WAITING

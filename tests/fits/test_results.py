@@ -280,3 +280,25 @@ def test_one_text_under_two_names_is_fitted_and_shown_as_two_versions() -> None:
     first, second = fitted(study), fitted(study, mechanism_version=twin)
     assert first.fit_id != second.fit_id
     assert len(grid_of(user=study.user, project_id=study.project.pk).columns) == 2
+
+
+def test_between_equal_verdicts_the_observable_with_the_smallest_p_is_named() -> None:
+    study = make_study(starts=(5.0, 10.0, 15.0, 20.0))
+    result = fitted(study)
+    evidence = evidence_of(user=study.user, fit_id=result.fit_id)
+    named = {row.run_revision.run.code: row for row in evidence.runs.select_related("run_revision__run")}
+    chosen = set()
+    for run in evidence.content["runs"]:
+        tests = {
+            o["observable"]: min(
+                p for p in (o["chi_square_p_adjusted"], o["runs_p_adjusted"]) if p is not None
+            )
+            for o in run["observables"]
+            if o["verdict"] == run["verdict"]
+        }
+        row = named[run["experiment"]]
+        assert row.p_value == tests[row.observable] == min(tests.values())
+        chosen.add(row.observable)
+    assert chosen == {"A", "B"}, (
+        "both are the more telling one somewhere, so the order of columns does not decide"
+    )

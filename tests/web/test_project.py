@@ -121,7 +121,7 @@ def test_the_grid_shows_the_verdict_of_every_cell_with_p_and_error_of_one_observ
 def test_a_strain_by_a_pull_names_what_was_pulled_and_how_far(browser: Client, fitted: Study) -> None:
     fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
     rows = RunEvidence.objects.filter(evidence__result__fit=fit)
-    pulled = {"verdict": "strained", "pull": 10.06, "pull_name": "run K01: charge 1"}
+    pulled = {"verdict": "strained", "observable": "alcohol", "pull": 10.06, "pull_name": "run K01: charge 1"}
     assert "charge 1 pulled" not in text_of(html_of(browser))
     rows.filter(run_revision__run__code="K01").update(**pulled)
     rows.filter(run_revision__run__code="K02").update(**pulled | {"pull": -3.3, "pull_name": "lot L purity"})

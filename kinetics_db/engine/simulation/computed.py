@@ -3,12 +3,13 @@
 from __future__ import annotations
 
 import math
+from graphlib import CycleError
 
 import numpy as np
 from numpy.typing import NDArray
 
-from kinetics_db.engine.network.model import Computed, Network
-from kinetics_db.engine.network.syntax import parameters_of
+from kinetics_db.engine.network.derived import computed_in_order
+from kinetics_db.engine.network.model import Network
 from kinetics_db.engine.simulation.tape import Tape
 from kinetics_db.errors import InvalidInput
 
@@ -25,7 +26,13 @@ class ComputedConstants:
     """
 
     def __init__(self, network: Network) -> None:
-        ordered = _in_order(network)
+        try:
+            ordered = computed_in_order(network.computed)
+        except CycleError as error:
+            raise InvalidInput(
+                f"computed constants depend on one another in a circle: {', '.join(error.args[1])}",
+                cure="each computed from constants that are known before it",
+            ) from error
         self.free = len(network.constants)
         self.names = network.constants + tuple(c.name for c in ordered)
         self._tapes = [Tape([c.expression], species=(), names=self.names) for c in ordered]
@@ -51,20 +58,3 @@ class ComputedConstants:
             for (_, name), slope in zip(tape.name_entries, result[1:], strict=True):
                 gradient[row] += slope * gradient[name]
         return values, gradient
-
-
-def _in_order(network: Network) -> list[Computed]:
-    known = set(network.constants)
-    waiting = list(network.computed)
-    ordered: list[Computed] = []
-    while waiting:
-        ready = [c for c in waiting if all(name in known for name in parameters_of(c.expression))]
-        if not ready:
-            raise InvalidInput(
-                "computed constants depend on one another in a circle: " + ", ".join(c.name for c in waiting),
-                cure="each computed from constants that are known before it",
-            )
-        ordered += ready
-        known.update(c.name for c in ready)
-        waiting = [c for c in waiting if c not in ready]
-    return ordered
