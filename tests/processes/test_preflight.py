@@ -276,3 +276,22 @@ def test_every_problem_is_told_at_once(checkout: Path, tmp_path: Path) -> None:
     lines = done.stderr.splitlines()
     assert len(lines) == len(beginnings)
     assert all(line.startswith(beginning) for line, beginning in zip(lines, beginnings, strict=True))
+
+
+def test_a_missing_browser_is_told_with_the_way_to_get_it(
+    monkeypatch: pytest.MonkeyPatch, tmp_path: Path
+) -> None:
+    monkeypatch.delenv("CHROMIUM", raising=False)
+    monkeypatch.setenv("PATH", str(tmp_path))
+    told = preflight.missing_browser()
+    assert told is not None and "apt install chromium" in told and "CHROMIUM=/path/to/chromium" in told
+    (tmp_path / "chromium").write_text("#!/bin/sh\n")
+    (tmp_path / "chromium").chmod(0o755)
+    assert preflight.missing_browser() is None
+
+
+def test_a_browser_that_is_named_has_to_be_a_program(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> None:
+    monkeypatch.setenv("CHROMIUM", str(tmp_path / "nothing"))
+    assert "is no program that can be run" in str(preflight.missing_browser())
+    monkeypatch.setenv("CHROMIUM", sys.executable)
+    assert preflight.missing_browser() is None

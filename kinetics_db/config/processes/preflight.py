@@ -225,6 +225,22 @@ def missing_postgresql() -> "str | None":
     )
 
 
+BROWSERS = ("chromium", "chromium-browser", "google-chrome-stable", "google-chrome")
+
+
+def missing_browser() -> "str | None":
+    """No Chromium for the tests of the pages; $CHROMIUM names one that is not on PATH."""
+    named = os.environ.get("CHROMIUM")
+    if named:
+        return None if shutil.which(named) else f"CHROMIUM={named} is no program that can be run."
+    if any(shutil.which(name) for name in BROWSERS):
+        return None
+    return (
+        "No Chromium, in which the pages are tested. Debian: apt install chromium; Fedora: dnf install "
+        "chromium; elsewhere install it and name it with CHROMIUM=/path/to/chromium."
+    )
+
+
 def problems(purpose: str) -> "list[str]":
     """Everything that stands in the way of 'demo' (or 'serve') or 'test', a line each."""
     python = wrong_python(purpose)
@@ -235,6 +251,7 @@ def problems(purpose: str) -> "list[str]":
     found.append(missing_queue_server())
     if purpose == "test":
         found.append(missing_postgresql())
+        found.append(missing_browser())
     else:
         unwritable = not_writable(var, "the data are kept")
         found.append(unwritable or unfit_sqlite(var, purpose))
