@@ -1,4 +1,4 @@
-"""What `celery -A workers.celery_app worker` starts."""
+"""What `celery -A workers.celery_app:app worker` starts."""
 
 import os
 
@@ -11,8 +11,12 @@ import django
 
 django.setup()
 
+from django.conf import settings
+
 from kinetics_db.config.celery import configure
+from workers.schedule import ROUTES, schedule
 
 app = configure()
+app.conf.update(beat_schedule=schedule(every=settings.JOB_SWEEP_SECONDS), task_routes=ROUTES)
 
 import workers.tasks  # noqa: F401  registers the tasks

@@ -8,7 +8,7 @@ import socket
 import subprocess
 import sys
 import time
-from collections.abc import Callable, Mapping
+from collections.abc import Callable, Mapping, Sequence
 from pathlib import Path
 
 from kinetics_db.config.processes.guard import is_running
@@ -123,6 +123,24 @@ class TestProcesses:
             is_ready=lambda: is_healthy(port),
         )
         return process, f"http://127.0.0.1:{port}"
+
+    def start_command(
+        self,
+        kind: str,
+        command: Sequence[str],
+        environment: Mapping[str, str],
+        *,
+        is_ready: Callable[[str], bool],
+    ) -> RunningProcess:
+        """Any other command; ``is_ready`` is asked with what it has written so far."""
+        name = self._name(kind)
+        log = self._supervisor.log(name)
+        return self._start(
+            name,
+            list(command),
+            environment,
+            is_ready=lambda: log.exists() and is_ready(log.read_text(errors="replace")),
+        )
 
     def stop_all(self) -> None:
         self._supervisor.stop()

@@ -3,6 +3,10 @@
 import os
 from pathlib import Path
 
+from csp.constants import NONE, SELF
+
+from kinetics_db.config.environment import count, number
+
 BASE_DIR = Path(__file__).resolve().parents[3]
 VAR_DIR = Path(os.environ.get("RATEWRIGHT_VAR") or BASE_DIR / "var").resolve()
 
@@ -12,7 +16,12 @@ INSTALLED_APPS = [
     "django.contrib.sessions",
     "django.contrib.messages",
     "django.contrib.staticfiles",
+    "django.forms",  # so that forms are drawn by our own templates
+    "csp",
+    "django_htmx",
     "rest_framework",
+    "drf_spectacular",
+    "drf_spectacular_sidecar",
     "kinetics_db.accounts",
     "kinetics_db.jobs",
     "kinetics_db.provenance",
@@ -34,13 +43,16 @@ INSTALLED_APPS = [
 
 MIDDLEWARE = [
     "django.middleware.security.SecurityMiddleware",
-    "kinetics_db.web.middleware.PageHeaders",  # first, so that static files and early refusals have them too
+    # first, so that static files and early refusals have them too
+    "kinetics_db.web.middleware.PageHeaders",
+    "csp.middleware.CSPMiddleware",
     "whitenoise.middleware.WhiteNoiseMiddleware",
     "django.contrib.sessions.middleware.SessionMiddleware",
     "django.middleware.common.CommonMiddleware",
     "django.middleware.csrf.CsrfViewMiddleware",
     "django.contrib.auth.middleware.AuthenticationMiddleware",
     "django.contrib.messages.middleware.MessageMiddleware",
+    "django_htmx.middleware.HtmxMiddleware",
     "django.middleware.clickjacking.XFrameOptionsMiddleware",
 ]
 
@@ -63,6 +75,22 @@ TEMPLATES = [
     },
 ]
 
+FORM_RENDERER = "kinetics_db.web.forms.FormRenderer"
+
+# Scripts, styles and data from this server only: nothing inline, nothing evaluated, nothing from elsewhere.
+CONTENT_SECURITY_POLICY = {
+    "DIRECTIVES": {
+        "default-src": [NONE],
+        "script-src": [SELF],
+        "style-src": [SELF],
+        "img-src": [SELF, "data:", "blob:"],  # blob: a plot on its way to a PNG file
+        "connect-src": [SELF],
+        "form-action": [SELF],
+        "base-uri": [NONE],
+        "frame-ancestors": [NONE],
+    }
+}
+
 AUTH_PASSWORD_VALIDATORS = [
     {"NAME": "django.contrib.auth.password_validation.UserAttributeSimilarityValidator"},
     {"NAME": "django.contrib.auth.password_validation.MinimumLengthValidator", "OPTIONS": {"min_length": 10}},
@@ -81,13 +109,15 @@ TIME_ZONE = "UTC"
 USE_I18N = False
 USE_TZ = True
 
-# Counts of failed logins. A lab with several web processes needs a cache that they share.
+# Of this process; the processes of a lab share one (settings/lab.py).
 CACHES = {
     "default": {
         "BACKEND": "django.core.cache.backends.locmem.LocMemCache",
         "OPTIONS": {"MAX_ENTRIES": 10_000},
     }
 }
+
+SESSION_ENGINE = "django.contrib.sessions.backends.cached_db"
 
 STATIC_URL = "static/"
 # Served from the packages themselves; a lab may collect them into a folder for a front server.
@@ -100,29 +130,69 @@ WHITENOISE_USE_FINDERS = True
 WHITENOISE_AUTOREFRESH = False
 
 # Instrument files, content-addressed. In a lab installation this is the shared volume.
-BYTE_STORE_DIR = Path(os.environ.get("RATEWRIGHT_BYTES", VAR_DIR / "bytes"))
+BYTE_STORE_DIR = Path(os.environ.get("RATEWRIGHT_BYTES") or VAR_DIR / "bytes")
 MAX_FILE_BYTES = int(os.environ.get("RATEWRIGHT_MAX_FILE_BYTES", 200 * 1024 * 1024))
 DATA_UPLOAD_MAX_MEMORY_SIZE = 10 * 1024 * 1024
+DATA_UPLOAD_MAX_NUMBER_FIELDS = 10_000  # a dataset of hundreds of tables with their windows
+FILE_UPLOAD_HANDLERS = [
+    "kinetics_db.web.uploads.LimitedUpload",
+    "django.core.files.uploadhandler.MemoryFileUploadHandler",
+    "django.core.files.uploadhandler.TemporaryFileUploadHandler",
+]
 
 # Background work. The row is the truth; a message only rings the bell.
-JOB_LEASE_SECONDS = float(os.environ.get("RATEWRIGHT_JOB_LEASE_SECONDS", 30))
-JOB_RESEND_AFTER_SECONDS = float(os.environ.get("RATEWRIGHT_JOB_RESEND_AFTER_SECONDS", 10))
+JOB_LEASE_SECONDS = number("RATEWRIGHT_JOB_LEASE_SECONDS", 30)
+JOB_RESEND_AFTER_SECONDS = number("RATEWRIGHT_JOB_RESEND_AFTER_SECONDS", 10)
+JOB_SWEEP_SECONDS = number("RATEWRIGHT_JOB_SWEEP_SECONDS", 2, least=0.1)
 JOB_MAX_ATTEMPTS = 3
+WORKER_PROCESSES = count("RATEWRIGHT_WORKER_PROCESSES", os.cpu_count() or 1)
 
 REST_FRAMEWORK = {
     "DEFAULT_RENDERER_CLASSES": ["rest_framework.renderers.JSONRenderer"],
-    "DEFAULT_PARSER_CLASSES": ["rest_framework.parsers.JSONParser"],
-    "DEFAULT_AUTHENTICATION_CLASSES": ["rest_framework.authentication.SessionAuthentication"],
+    "DEFAULT_PARSER_CLASSES": ["api.parsers.StrictJSONParser"],
+    "DEFAULT_AUTHENTICATION_CLASSES": [
+        "api.authentication.TokenAuthentication",  # first: it says which 401 a stranger gets
+        "rest_framework.authentication.SessionAuthentication",
+    ],
     "DEFAULT_PERMISSION_CLASSES": ["rest_framework.permissions.IsAuthenticated"],
+    "DEFAULT_THROTTLE_CLASSES": ["api.throttling.RequestsAMinute"],
+    "DEFAULT_SCHEMA_CLASS": "drf_spectacular.openapi.AutoSchema",
     "EXCEPTION_HANDLER": "api.errors.problem_details",
+    "URL_FORMAT_OVERRIDE": None,  # forms are asked for by Accept or by the address's ending
+}
+API_REQUESTS_A_MINUTE = int(os.environ.get("RATEWRIGHT_API_REQUESTS_A_MINUTE", 600))
+API_ANONYMOUS_A_MINUTE = int(os.environ.get("RATEWRIGHT_API_ANONYMOUS_A_MINUTE", 60))
+
+SPECTACULAR_SETTINGS = {
+    "TITLE": "Ratewright",
+    "DESCRIPTION": (
+        "Runs, concentration tables, mechanisms, fits and evidence of a lab, for scripts.\n\n"
+        "Errors are problem details (RFC 9457), each problem with its place and what would be accepted. Lists come "
+        "in pages; Link headers (RFC 8288) lead to the next and the previous one. Answers carry ETags: "
+        "If-None-Match saves sending what is known, If-Match guards changes. A POST that writes takes an "
+        "Idempotency-Key, so that it can be sent again safely. Times are RFC 3339 in UTC."
+    ),
+    "VERSION": "1",
+    "OAS_VERSION": "3.1.1",
+    "LICENSE": {"name": "Apache-2.0", "identifier": "Apache-2.0"},
+    "SCHEMA_PATH_PREFIX": "/api/v1",
+    "SERVE_PERMISSIONS": ["rest_framework.permissions.AllowAny"],
+    "SWAGGER_UI_DIST": "SIDECAR",
+    "SWAGGER_UI_FAVICON_HREF": "SIDECAR",
+    "SWAGGER_UI_SETTINGS": {"deepLinking": True, "validatorUrl": None},
+    "ENUM_GENERATE_CHOICE_DESCRIPTION": False,
+    "POSTPROCESSING_HOOKS": [],  # choices stand where they are used, without names of their own
 }
 
+# What Celery says of every message; a sweep has one every two seconds. Our own lines name the attempts.
+TALKATIVE = ("celery.beat", "celery.worker.strategy", "celery.app.trace")
 LOGGING = {
     "version": 1,
     "disable_existing_loggers": False,
     "formatters": {"line": {"format": "{asctime} {levelname} {name}: {message}", "style": "{"}},
     "handlers": {"stderr": {"class": "logging.StreamHandler", "formatter": "line"}},
     "root": {"handlers": ["stderr"], "level": os.environ.get("RATEWRIGHT_LOG_LEVEL", "INFO")},
+    "loggers": {name: {"level": "WARNING"} for name in TALKATIVE},
 }
 
 

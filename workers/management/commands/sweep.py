@@ -2,20 +2,17 @@
 
 from __future__ import annotations
 
-import logging
 import signal
 import threading
 from argparse import ArgumentParser
 from types import FrameType
 from typing import Any
 
+from django.conf import settings
 from django.core.management.base import BaseCommand
-from django.db import Error as DatabaseError
-from django.db import close_old_connections, connection
+from django.db import close_old_connections
 
-from kinetics_db.jobs.services import sweep
-
-log = logging.getLogger(__name__)
+from workers.sweeping import sweep_once
 
 
 class Command(BaseCommand):
@@ -23,7 +20,11 @@ class Command(BaseCommand):
 
     def add_arguments(self, parser: ArgumentParser) -> None:
         parser.add_argument(
-            "--every", type=float, default=2.0, metavar="SECONDS", help="pause between sweeps"
+            "--every",
+            type=float,
+            default=settings.JOB_SWEEP_SECONDS,
+            metavar="SECONDS",
+            help="pause between sweeps",
         )
         parser.add_argument("--once", action="store_true", help="sweep once and end")
 
@@ -36,16 +37,7 @@ class Command(BaseCommand):
         signal.signal(signal.SIGTERM, end)
         signal.signal(signal.SIGINT, end)
         while True:
-            try:
-                swept = sweep()
-            except DatabaseError as error:
-                log.warning("the database does not answer: %s", error)
-                connection.close()
-            else:
-                if swept.lost or swept.crashed or swept.rung:
-                    log.info(
-                        "taken back %d, given up %d, rung again %d", swept.lost, swept.crashed, swept.rung
-                    )
+            sweep_once()
             if options["once"] or ended.wait(options["every"]):
                 return
             close_old_connections()
