@@ -94,7 +94,7 @@ def test_errors_of_the_framework_have_the_titles_of_ours_where_the_status_is_the
 
 
 @pytest.mark.parametrize("method", ["get", "post", "put", "delete", "options"])
-@pytest.mark.parametrize("address", ["/api/v1/", "/api/v1/runs/", "/api/v1/health/more/"])
+@pytest.mark.parametrize("address", ["/api/v1/", "/api/v1/nothing/", "/api/v1/health/more/"])
 def test_an_address_where_nothing_is_is_refused_as_problem_details(
     client: Client, method: str, address: str
 ) -> None:

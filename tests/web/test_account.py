@@ -1,12 +1,18 @@
-"""Logging in and out, and what those who are not logged in may see."""
+"""Logging in and out, what those who are not logged in may see, and one's own account."""
 
 from __future__ import annotations
 
+import re
+
 import pytest
 from django.test import Client
+from django.utils.html import escape
 
+from kinetics_db.accounts.models import User
+from kinetics_db.provenance.models import AuditEntry
 from kinetics_db.web import throttle
-from tests.factories.people import make_member, make_user
+from tests.factories.people import make_user
+from tests.web.reading import html_of, text_of
 from tests.web.study import Study
 
 PASSWORD = "a long password 1"
@@ -17,7 +23,14 @@ def log_in(client: Client, name: str, password: str, address: str = "127.0.0.1")
     return client.post("/login/", data, REMOTE_ADDR=address).status_code
 
 
-@pytest.mark.parametrize("address", ["/", "/projects/oxidation/"])
+@pytest.mark.parametrize(
+    "address",
+    [
+        "/", "/search/", "/projects/new/", "/account/", "/account/tokens/", "/projects/oxidation/",
+        "/projects/oxidation/under-way/", "/projects/oxidation/members/", "/projects/oxidation/evidence/",
+        "/projects/oxidation/evidence.csv",
+    ],
+)  # fmt: skip
 def test_every_page_asks_strangers_to_log_in_first(client: Client, study: Study, address: str) -> None:
     response = client.get(address)
     assert response.status_code == 302
@@ -109,29 +122,108 @@ def test_browsers_keep_no_page_of_a_person(browser: Client) -> None:
     assert "no-store" in browser.get("/")["Cache-Control"]
 
 
-def test_home_lists_only_the_projects_of_the_person(client: Client, study: Study) -> None:
-    client.force_login(make_user("stranger"))
-    page = client.get("/").content.decode()
-    assert "Oxidation" not in page
-    assert "You are not a member of any project." in page
-    client.force_login(make_member(study.project, "reader"))
-    assert "Oxidation of an alcohol" in client.get("/").content.decode()
+ACCOUNT = "/account/"
+NEW = "quite another phrase 7"
 
 
-def test_home_counts_runs_and_fits(browser: Client, fitted: Study) -> None:
-    page = browser.get("/").content.decode()
-    assert "2 runs" in page
-    assert "0 fits waiting or running" in page
-    assert "2 fits finished" in page
-    assert "stale" not in page
+def zone_of(study: Study) -> str:
+    return str(User.objects.get(pk=study.user.pk).time_zone)
 
 
-def test_the_number_of_queries_of_home_does_not_grow_with_the_projects(
-    browser: Client, study: Study, django_assert_max_num_queries: object
+def password_sent(**changes: str) -> dict[str, str]:
+    return {"change": "password", "current": PASSWORD, "password": NEW, "again": NEW} | changes
+
+
+def test_the_account_page_shows_the_name_and_the_zone(browser: Client) -> None:
+    html = html_of(browser, ACCOUNT)
+    assert "You are mira" in text_of(html)
+    assert 'value="UTC"' in html and '<option value="Europe/Helsinki">' in html
+
+
+def test_a_time_zone_is_chosen_and_dates_follow(browser: Client, study: Study) -> None:
+    response = browser.post(ACCOUNT, {"change": "time zone", "time_zone": "Asia/Kolkata"})
+    assert response["Location"] == ACCOUNT
+    assert zone_of(study) == "Asia/Kolkata"
+    html = html_of(browser, ACCOUNT)
+    assert "Dates are now shown as in Asia/Kolkata" in text_of(html) and " IST</time>" in html
+
+
+@pytest.mark.parametrize(
+    "zone",
+    ["", "Nowhere/Else", "../../etc/passwd", "<script>x</script>", "a\x00b", "x" * 10**6, "1e400", "Ä/Ö"],
+)
+def test_a_zone_that_does_not_exist_comes_back(browser: Client, study: Study, zone: str) -> None:
+    response = browser.post(ACCOUNT, {"change": "time zone", "time_zone": zone})
+    html = response.content.decode()
+    assert response.status_code == 422
+    assert 'id="id_time_zone_error"' in html and "<script>x" not in html
+    if zone.isascii() and zone.isprintable() and 0 < len(zone) < 100:
+        assert f'value="{escape(zone)}"' in html
+    assert zone_of(study) == "UTC"
+
+
+def test_a_password_is_changed_and_other_places_are_logged_out(browser: Client, study: Study) -> None:
+    elsewhere = Client()
+    elsewhere.force_login(study.user)
+    assert browser.post(ACCOUNT, password_sent())["Location"] == ACCOUNT
+    assert "Your password is changed" in text_of(html_of(browser, ACCOUNT))
+    assert elsewhere.get(ACCOUNT).status_code == 302
+    browser.logout()
+    assert log_in(browser, "mira", PASSWORD) == 200
+    assert log_in(browser, "mira", NEW) == 302
+    entry = AuditEntry.objects.latest("sequence")
+    assert (entry.actor, entry.verb, entry.record_label) == ("mira", "changed password", "mira")
+
+
+@pytest.mark.parametrize(
+    ("changes", "field", "said"),
+    [
+        ({"current": "wrong"}, "current", "This is not your current password"),
+        ({"current": ""}, "current", "This is not your current password"),
+        ({"password": "", "again": ""}, "password", "too short"),
+        ({"password": "short", "again": "short"}, "password", "too short"),
+        ({"password": PASSWORD, "again": PASSWORD}, "password", "that you have already"),
+        ({"again": "different phrase 8"}, "again", "This is not the same"),
+        ({"password": "x" * 10**6, "again": "x" * 10**6}, "password", "too long for a password"),
+        ({"password": "a\x00b", "again": "a\x00b"}, "password", "Null characters"),
+    ],
+)
+def test_a_password_that_cannot_be_is_refused_and_never_shown(
+    browser: Client, study: Study, changes: dict[str, str], field: str, said: str
 ) -> None:
-    from kinetics_db.projects.services import create_project
+    response = browser.post(ACCOUNT, password_sent(**changes))
+    html = response.content.decode()
+    assert response.status_code == 422
+    (wrong,) = re.findall(rf'<ul class="wrong" id="id_{field}_error">.*?</ul>', html, re.DOTALL)
+    assert said in text_of(wrong)
+    assert PASSWORD not in html and NEW not in html
+    assert User.objects.get(pk=study.user.pk).check_password(PASSWORD)
 
-    for i in range(5):
-        create_project(user=study.user, slug=f"more-{i}", name="More")
-    with django_assert_max_num_queries(8):  # type: ignore[operator]
-        browser.get("/")
+
+def test_guesses_of_the_current_password_are_counted_like_failed_logins(
+    browser: Client, study: Study
+) -> None:
+    for _ in range(throttle.MOST_FAILURES):
+        assert browser.post(ACCOUNT, password_sent(current="wrong")).status_code == 422
+    response = browser.post(ACCOUNT, password_sent())
+    assert response.status_code == 422
+    assert "Too many failed tries" in text_of(response.content.decode())
+    assert User.objects.get(pk=study.user.pk).check_password(PASSWORD)
+
+
+@pytest.mark.parametrize("change", ["", "name", "<b>"])
+def test_a_form_that_does_not_say_what_it_changes_is_refused(browser: Client, change: str) -> None:
+    response = browser.post(ACCOUNT, {"change": change, "time_zone": "Asia/Kolkata"})
+    assert response.status_code == 422
+    assert "does not say what is to be changed" in response.content.decode()
+
+
+def test_the_account_page_costs_few_queries(browser: Client, django_assert_max_num_queries: object) -> None:
+    with django_assert_max_num_queries(2):  # type: ignore[operator]
+        browser.get(ACCOUNT)
+
+
+def test_a_strangers_account_is_nobodys(client: Client, study: Study) -> None:
+    assert client.get(ACCOUNT)["Location"] == "/login/?next=/account/"
+    assert client.post(ACCOUNT, password_sent()).status_code == 302
+    assert User.objects.get(pk=study.user.pk).check_password(PASSWORD)

@@ -6,30 +6,45 @@ import re
 from collections.abc import Callable
 
 import pytest
+from csp.middleware import CSPMiddleware
 from django.http import HttpRequest, HttpResponse
 from django.test import Client, RequestFactory
 from django.views.defaults import bad_request, page_not_found, permission_denied, server_error
 
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, RatewrightError, Unavailable
-from kinetics_db.web.middleware import CONTENT_SECURITY_POLICY, PageHeaders
+from kinetics_db.web.middleware import PageHeaders
 from kinetics_db.web.pages import page
 from tests.web.study import Study
 
 REQUEST = RequestFactory().get("/somewhere/")
 
 
-def test_pages_let_nothing_in_but_our_own_styles_and_images(client: Client, study: Study) -> None:
-    policy = dict(
-        part.strip().split(" ", 1) for part in client.get("/login/")["Content-Security-Policy"].split(";")
-    )
-    assert policy == {
-        "default-src": "'none'",
-        "style-src": "'self'",
-        "img-src": "'self' data:",
-        "form-action": "'self'",
-        "base-uri": "'none'",
-        "frame-ancestors": "'none'",
-    }
+POLICY = {
+    "default-src": "'none'",
+    "script-src": "'self'",
+    "style-src": "'self'",
+    "img-src": "'self' data: blob:",
+    "connect-src": "'self'",
+    "form-action": "'self'",
+    "base-uri": "'none'",
+    "frame-ancestors": "'none'",
+}
+
+
+def policy_of(response: HttpResponse) -> dict[str, str]:
+    found = {}
+    for part in response["Content-Security-Policy"].split(";"):
+        name, _, allowed = part.strip().partition(" ")
+        found[name] = allowed
+    return found
+
+
+@pytest.mark.parametrize("address", ["/login/", "/", "/projects/oxidation/", "/projects/oxidation/evidence/"])
+def test_pages_let_nothing_in_but_our_own_files(browser: Client, address: str) -> None:
+    response = browser.get(address, follow=True)
+    assert response.status_code == 200
+    assert policy_of(response) == POLICY
+    assert "unsafe" not in response["Content-Security-Policy"]
 
 
 def test_pages_carry_the_other_headers_of_protection(client: Client, study: Study) -> None:
@@ -40,15 +55,20 @@ def test_pages_carry_the_other_headers_of_protection(client: Client, study: Stud
     assert "camera=()" in response["Permissions-Policy"]
 
 
+def test_a_response_with_its_own_headers_keeps_them() -> None:
+    def view(request: HttpRequest) -> HttpResponse:
+        return HttpResponse(headers={"Referrer-Policy": "no-referrer"})
+
+    assert PageHeaders(view)(REQUEST)["Referrer-Policy"] == "no-referrer"
+    assert PageHeaders(lambda request: HttpResponse())(REQUEST)["Referrer-Policy"] == "same-origin"
+
+
 def test_a_response_with_its_own_policy_keeps_it() -> None:
     def view(request: HttpRequest) -> HttpResponse:
         return HttpResponse(headers={"Content-Security-Policy": "default-src 'self'"})
 
-    assert PageHeaders(view)(REQUEST)["Content-Security-Policy"] == "default-src 'self'"
-    assert (
-        PageHeaders(lambda request: HttpResponse())(REQUEST)["Content-Security-Policy"]
-        == CONTENT_SECURITY_POLICY
-    )
+    assert CSPMiddleware(view)(REQUEST)["Content-Security-Policy"] == "default-src 'self'"
+    assert policy_of(CSPMiddleware(lambda request: HttpResponse())(RequestFactory().get("/"))) == POLICY
 
 
 @pytest.mark.parametrize(
@@ -107,7 +127,7 @@ def test_an_unknown_address_is_a_page_in_the_same_look(client: Client) -> None:
     response = client.get("/no/such/place/")
     assert response.status_code == 404
     assert "There is no such page" in response.content.decode()
-    assert response["Content-Security-Policy"] == CONTENT_SECURITY_POLICY
+    assert policy_of(response) == POLICY
 
 
 def test_a_host_name_that_is_not_ours_is_refused_in_the_same_look(client: Client) -> None:
@@ -123,3 +143,25 @@ def test_a_style_sheet_and_an_icon_are_served_by_ourselves(client: Client, study
     linked = re.findall(r'<link [^>]*href="/static/([^"]+)"', html)
     assert sorted(linked) == ["web/mark.svg", "web/ratewright.css"]
     assert all(finders.find(name) for name in linked)
+
+
+@pytest.mark.parametrize(
+    "address",
+    [
+        "/",
+        "/search/?q=x",
+        "/account/",
+        "/account/tokens/",
+        "/projects/oxidation/",
+        "/projects/oxidation/evidence/",
+    ],
+)
+def test_every_file_that_a_page_names_is_one_of_ours(browser: Client, address: str) -> None:
+    from django.contrib.staticfiles import finders
+
+    html = browser.get(address).content.decode()
+    named = re.findall(r'<(?:link|script)[^>]*(?:href|src)="([^"]+)"', html)
+    assert "/static/web/vendor/htmx-2.0.11.min.js" in named
+    for name in named:
+        assert name.startswith("/static/")
+        assert finders.find(name.removeprefix("/static/")), name

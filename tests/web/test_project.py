@@ -1,9 +1,9 @@
-"""The page of a project."""
+"""The page of a project at a glance."""
 
 from __future__ import annotations
 
+import itertools
 import re
-from html import unescape
 from zoneinfo import ZoneInfo
 
 import pytest
@@ -11,15 +11,19 @@ from django.db import connection
 from django.test import Client
 from django.test.utils import CaptureQueriesContext
 
-from kinetics_db.engine.shown_numbers import interval, percent, probability, with_uncertainty
 from kinetics_db.evidence.models import RunEvidence
-from kinetics_db.evidence.selectors import evidence_of, grid_of
+from kinetics_db.evidence.selectors import grid_of
 from kinetics_db.fits.models import Fit
-from kinetics_db.fits.selectors import result_of
 from kinetics_db.jobs.selectors import job_for
 from kinetics_db.jobs.services import Claim, claim_job, fail_job, heartbeat
-from kinetics_db.web.words import message_text
+from kinetics_db.materials.services import enter_compound
+from kinetics_db.measurements.services import store_file, supersede_table
+from kinetics_db.runs.entry import Amount
+from kinetics_db.runs.models import Run
+from tests.factories.flow import compute_now, lines, make_reported_table, make_run
 from tests.factories.people import make_member, make_user
+from tests.web.reading import html_of as page_at
+from tests.web.reading import margins_of, text_of
 from tests.web.study import RIGHT, WRONG, Study
 
 ADDRESS = "/projects/oxidation/"
@@ -27,9 +31,7 @@ MOST_QUERIES = 16
 
 
 def html_of(browser: Client, address: str = ADDRESS) -> str:
-    response = browser.get(address)
-    assert response.status_code == 200
-    return response.content.decode()
+    return page_at(browser, address)
 
 
 def claimed(fit: Fit) -> Claim:
@@ -39,207 +41,139 @@ def claimed(fit: Fit) -> Claim:
     return claim
 
 
-def text_of(html: str) -> str:
-    return " ".join(unescape(re.sub(r"<[^>]+>", " ", html)).split())
+def section_of(html: str, heading: str) -> str:
+    """The section under a heading with that id."""
+    (found,) = re.findall(
+        rf'<section class="leaf"[^>]*aria-labelledby="{heading}".*?</section>', html, re.DOTALL
+    )
+    return str(found)
 
 
-def test_a_run_shows_its_conditions_with_uncertainty_and_unit(browser: Client, fitted: Study) -> None:
-    text = text_of(html_of(browser))
-    assert "K01" in text
-    assert "25.00(20) °C" in text
-    assert "35.00(20) °C" in text
-    assert "[alcohol] 0 100.0(1.0) mmol/L" in text
-    assert "control: blank" in text
-
-
-def test_each_run_has_a_plot_with_its_points_and_the_better_models_curve(
-    browser: Client, fitted: Study
-) -> None:
-    html = html_of(browser)
-    assert html.count("<svg") == 2
-    assert html.count('class="mark"') == 2 * (2 + 2)  # alcohol and ketone, as points and in the key
-    assert html.count('class="curve"') == 2 * 2
-    assert "Lines join the values of first order v1" in text_of(html)
-
-
-def test_another_models_curve_can_be_asked_for(browser: Client, fitted: Study) -> None:
-    wrong = Fit.objects.get(mechanism_version__mechanism__name="second order")
-    html = html_of(browser, f"{ADDRESS}?curve={wrong.pk}")
-    assert "Lines join the values of second order v1" in text_of(html)
-    default = html_of(browser)
-    assert re.findall(r'class="curve" d="([^"]+)', html) != re.findall(r'class="curve" d="([^"]+)', default)
-
-
-@pytest.mark.parametrize("asked", ["none", "999999", "x"])
-def test_no_curve_is_drawn_where_no_such_fit_is(browser: Client, fitted: Study, asked: str) -> None:
-    assert 'class="curve"' not in html_of(browser, f"{ADDRESS}?curve={asked}")
-
-
-def test_constants_stand_with_their_intervals_by_temperature(browser: Client, fitted: Study) -> None:
-    html = html_of(browser)
+def test_the_newest_runs_show_their_conditions_and_a_small_curve(browser: Client, fitted: Study) -> None:
+    html = section_of(html_of(browser), "runs")
     text = text_of(html)
-    fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
-    result = result_of(fit)
-    assert result is not None
-    constants = result.constants.all()
-    assert {c.where for c in constants} == {"298.15 K", "308.15 K"}
-    celsius = {"298.15 K": "25 °C", "308.15 K": "35 °C"}  # as at the runs; K to point at and to copy
-    for c in constants:
-        value, limits = with_uncertainty(c.value, c.standard_error, "1/s"), interval(c.low, c.high, "1/s")
-        assert f"k ox {celsius[c.where]} {value} {limits}" in text
-    assert text.index("k ox 25 °C") < text.index("k ox 35 °C")
-    assert '<data value="298.15" title="298.15 K">25 °C</data>' in html
-    assert "95 % interval" in text
+    assert "T / °C [alcohol] 0 mmol/L" in text
+    assert "K01 Run K01: alcohol, ketone over time 25.00(20) 100.0(1.0)" in text
+    assert "K02 control: blank Run K02: alcohol, ketone over time 35.00(20) 100.0(1.0)" in text
+    assert html.count("<svg") == 2
+    assert f'href="/runs/{Run.objects.get(code="K01").pk}/"' in html
 
 
-def test_the_grid_shows_the_verdict_of_every_cell_with_p_and_error_of_one_observable(
+def test_only_the_newest_runs_are_listed_the_newest_first(browser: Client, study: Study) -> None:
+    for i in range(10):
+        make_run(study.user, study.project.pk, f"Q{i}", {"alcohol": Amount(0.1, "mol/L")})
+    codes = re.findall(r">(Q\d)</a>", section_of(html_of(browser), "runs"))
+    assert codes == [f"Q{i}" for i in range(9, 1, -1)]
+
+
+def test_each_model_version_is_one_line_with_its_verdicts_and_how_far_behind_it_is(
     browser: Client, fitted: Study
 ) -> None:
-    html = html_of(browser)
     grid = grid_of(user=fitted.user, project_id=fitted.project.pk)
-    assert len(grid.cells) == 4
-    verdicts = {key: cell.verdict for key, cell in grid.cells.items()}
-    assert "disagrees" in verdicts.values() and "agrees" in verdicts.values()
-    rows = re.findall(r'<tr><th scope="row"><a href="#run-\d+">(K\d+)</a>(.*?)</tr>', html, re.DOTALL)
-    for code, cells in rows:
-        shown = re.findall(r"<b>(\w[\w ]+)</b>", cells)
-        assert shown == [verdicts[code, column.fit_id] for column in grid.columns]
-        for column, cell in zip(grid.columns, cells.split("</td>")[1:], strict=False):
-            evidence = evidence_of(user=fitted.user, fit_id=column.fit_id)
-            (run,) = (r for r in evidence.content["runs"] if r["experiment"] == code)
-            (one,) = (o for o in run["observables"] if o["observable"] == run["worst_observable"])
-            p = min(one["chi_square_p_adjusted"], one["runs_p_adjusted"])
-            expected = f"{one['observable']}: p {probability(p)}, NRMSE {percent(one['nrmse'])}"
-            assert expected in text_of(cell)
-    assert len(rows) == 2
-    deltas = [c.delta_aicc for c in grid.columns if c.delta_aicc is not None]
-    assert len(deltas) == 2
-    assert min(deltas) == 0.0
-    assert f"{max(deltas):,.1f}".replace(",", "\N{NARROW NO-BREAK SPACE}") in html
+    html = section_of(html_of(browser), "evidence")
+    lines_of = re.findall(r"<tr><th scope=\"row\">(.*?)</tr>", html, re.DOTALL)
+    texts = [text_of(line) for line in lines_of]
+    best = min(grid.columns, key=lambda column: column.delta_aicc or 0.0)
+    assert len(texts) == 2
+    assert texts[0].startswith(f"{best.mechanism} all v1 in fit {best.fit_id} 0.0 ")
+    for column in grid.columns:
+        (line,) = (text for text in texts if text.startswith(column.mechanism))
+        verdicts = [cell.verdict for (_, fit_id), cell in grid.cells.items() if fit_id == column.fit_id]
+        for verdict in set(verdicts):
+            assert f"{verdict} {verdicts.count(verdict)}" in line
+        assert f'href="/fits/{column.fit_id}/"' in html
+    assert 'class="count v-agrees"' in html and 'class="count v-disagrees"' in html
 
 
-def test_a_strain_by_a_pull_names_what_was_pulled_and_how_far(browser: Client, fitted: Study) -> None:
-    fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
-    rows = RunEvidence.objects.filter(evidence__result__fit=fit)
-    pulled = {"verdict": "strained", "observable": "alcohol", "pull": 10.06, "pull_name": "run K01: charge 1"}
-    assert "charge 1 pulled" not in text_of(html_of(browser))
-    rows.filter(run_revision__run__code="K01").update(**pulled)
-    rows.filter(run_revision__run__code="K02").update(**pulled | {"pull": -3.3, "pull_name": "lot L purity"})
-    text = text_of(html_of(browser))
-    assert "strained charge 1 pulled +10.1 u alcohol: p " in text
-    assert "strained lot L purity pulled −3.3 u alcohol: p " in text
-    rows.update(verdict="disagrees")  # what a test decided is not put down to a pull
-    assert "charge 1 pulled" not in text_of(html_of(browser))
+def test_only_the_newest_versions_are_summed_up_and_the_others_counted(browser: Client, study: Study) -> None:
+    study.run("K01")
+    dataset = study.dataset()
+    for i in range(8):
+        study.fit(f"model {i}", RIGHT, dataset)
+    text = text_of(section_of(html_of(browser), "evidence"))
+    assert "model 7 v1" in text and "model 1 v1" not in text
+    assert "2 older versions are not shown here" in text
 
 
-def test_a_pull_within_the_projects_own_threshold_is_not_shown(browser: Client, fitted: Study) -> None:
-    RunEvidence.objects.update(verdict="strained", pull=4.0, pull_name="run K01: charge 1")
-    assert "charge 1 pulled +4 u" in text_of(html_of(browser))
-    type(fitted.project).objects.filter(pk=fitted.project.pk).update(verdict_thresholds={"pull": 4.5})
-    assert "charge 1 pulled" not in text_of(html_of(browser))
-
-
-def test_how_a_fit_converged_is_a_detail_in_the_margin(browser: Client, fitted: Study) -> None:
+def test_the_margin_says_who_made_the_project_and_leads_to_its_parts(browser: Client, study: Study) -> None:
     html = html_of(browser)
-    work = re.sub(r'<aside class="margin".*?</aside>', "", html, flags=re.DOTALL)
-    assert text_of(work).count("Fitted to the dataset 'all', version 1: converged") == 2
-    for fit in Fit.objects.all():
-        result = result_of(fit)
-        assert result is not None
-        detail = message_text(result.content["message"])
-        assert f"converged: {detail}" in text_of(html)
-        assert detail not in text_of(work)
+    assert "made by mira" in margins_of(html) and "your role: owner" in margins_of(html)
+    for part in ("runs", "materials", "mechanisms", "datasets", "fits", "evidence", "members"):
+        assert f'href="/projects/oxidation/{part}/"' in html
 
 
-def test_every_verdict_is_explained_with_the_projects_own_thresholds(browser: Client, fitted: Study) -> None:
-    type(fitted.project).objects.filter(pk=fitted.project.pk).update(verdict_thresholds={"nrmse": 0.08})
-    text = text_of(html_of(browser))
-    for verdict in ("agrees", "consistent", "strained", "disagrees", "not tested"):
-        assert verdict in text
-    assert "within 8.0 % of the measured span" in text
-    assert "no proof of the path" in text
-
-
-def test_the_margin_says_where_things_come_from(browser: Client, fitted: Study) -> None:
-    html = html_of(browser)
-    margins = text_of(" ".join(re.findall(r'<aside class="margin".*?</aside>', html, re.DOTALL)))
-    fit = Fit.objects.get(mechanism_version__mechanism__name="first order")
-    for expected in (
-        "made by mira", "written by mira", "table 1 from nmr.txt", "reduction: against the standard v1",
-        f"engine {fit.engine_version}", "dataset 'all', version 1", fit.dataset.digest[:10], "revision 1 by mira",
-    ):  # fmt: skip
-        assert expected in margins
-    assert f"{fit.created:%Y-%m-%d}" in margins
-
-
-def test_results_on_older_data_are_marked_stale_with_the_reason(browser: Client, fitted: Study) -> None:
-    from kinetics_db.measurements.services import supersede_table
-    from kinetics_db.runs.models import Run
-
+def test_results_on_older_data_are_marked_stale(browser: Client, fitted: Study) -> None:
+    assert '<td><a href="/datasets/' in html_of(browser)
+    assert html_of(browser).count('<strong class="stale">stale</strong></td>') == 0
     run = Run.objects.get(code="K01")
-    older = run.concentration_tables.get()
-    assert "has been superseded" not in html_of(browser)
     newer = fitted.table(run, k=2.1e-3, name="nmr-again.txt")
-    supersede_table(user=fitted.user, older=older, newer=newer, reason="phase was wrong")
+    supersede_table(
+        user=fitted.user, older=run.concentration_tables.earliest("pk"), newer=newer, reason="phase was wrong"
+    )
     html = html_of(browser)
-    assert "table 1 of run K01 has been superseded" in text_of(html)
-    assert html.count('<strong class="stale">stale</strong>') == 2
-    home = text_of(html_of(browser, "/"))
-    assert "2 fits finished, 2 stale" in home
+    assert section_of(html, "evidence").count('<strong class="stale">stale</strong></td>') == 2
+    assert section_of(html, "fits").count('<strong class="stale">stale</strong></td>') == 2
+    assert "2 fits finished , 2 stale" in text_of(html_of(browser, "/"))
 
 
 def test_a_fit_under_way_shows_its_progress_and_the_page_follows_it(browser: Client, study: Study) -> None:
     study.run("K01")
     fit = study.fit("first order", RIGHT, study.dataset(), compute=False)
     html = html_of(browser)
-    assert '<meta http-equiv="refresh" content="3">' in html
-    assert "waiting" in text_of(html)
+    assert f'hx-get="/projects/oxidation/under-way/?open={fit.pk}" hx-trigger="every 2s"' in html
+    assert '<noscript><meta http-equiv="refresh" content="5"></noscript>' in html
+    assert "waiting" in text_of(section_of(html, "under-way"))
     heartbeat(claimed(fit), progress=0.4375, message="iteration 6, cost 12.5")
-    html = html_of(browser)
-    assert 'value="0.438"' in html or 'value="0.437"' in html
-    assert "running: iteration 6, cost 12.5" in text_of(html)
-    assert "1 fit waiting or running" in text_of(html_of(browser, "/"))
+    for address in (ADDRESS, f"{ADDRESS}under-way/?open={fit.pk}"):
+        html = html_of(browser, address)
+        assert 'value="0.438"' in html or 'value="0.437"' in html
+        assert "running: iteration 6, cost 12.5" in text_of(html)
+        assert f"fit {fit.pk}, asked for by mira" in margins_of(html)
+    assert "<html" not in html, "only the part that changes is sent"
+
+
+def test_the_page_is_loaded_anew_when_a_fit_ends_or_another_begins(browser: Client, study: Study) -> None:
+    study.run("K01")
+    dataset = study.dataset()
+    first = study.fit("first order", RIGHT, dataset, compute=False)
+    follows = f"{ADDRESS}under-way/?open={first.pk}"
+    assert not browser.get(follows).has_header("HX-Refresh")
+    second = study.fit("second order", WRONG, dataset, start=1e-2, compute=False)
+    assert browser.get(follows)["HX-Refresh"] == "true"
+    both = f"{ADDRESS}under-way/?open={second.pk}-{first.pk}"
+    assert not browser.get(both).has_header("HX-Refresh")
+    compute_now(second)
+    assert browser.get(both)["HX-Refresh"] == "true"
+    assert browser.get(f"{ADDRESS}under-way/?open=<b>")["HX-Refresh"] == "true"
 
 
 def test_the_page_can_be_held_still(browser: Client, study: Study) -> None:
     study.run("K01")
     study.fit("first order", RIGHT, study.dataset(), compute=False)
     html = html_of(browser, f"{ADDRESS}?hold")
-    assert "http-equiv" not in html
+    assert "http-equiv" not in html and "hx-get" not in html
     assert "held still" in html
 
 
 def test_a_page_without_work_under_way_stays_as_it_is(browser: Client, fitted: Study) -> None:
-    assert "http-equiv" not in html_of(browser)
+    html = html_of(browser)
+    assert "http-equiv" not in html and "hx-get" not in html
 
 
 def test_a_fit_that_failed_says_why(browser: Client, study: Study) -> None:
     study.run("K01")
     fit = study.fit("first order", RIGHT, study.dataset(), compute=False)
     fail_job(claimed(fit), reason="the disk is <full>")
-    html = html_of(browser)
+    html = section_of(html_of(browser), "fits")
     assert "failed" in text_of(html)
     assert "the disk is &lt;full&gt;" in html
 
 
-def test_an_earlier_fit_on_the_same_data_is_counted_not_shown(browser: Client, fitted: Study) -> None:
-    fitted.fit("first order", RIGHT, Fit.objects.earliest("pk").dataset, start=5e-3)
-    html = html_of(browser)
-    assert "1 earlier fit on the same data is kept" in text_of(html)
-    assert html.count('<table class="constants">') == 2
-
-
 def test_percentages_stay_percentages(browser: Client, study: Study) -> None:
-    from kinetics_db.runs.entry import Amount
-    from tests.factories.flow import lines, make_reported_table, make_run
-
     run = make_run(study.user, study.project.pk, "R1", {"ester": Amount(100.0, "%")})
     text = lines(("time / min", "ester / %"), (0, 100.0), (10, 60.5), (20, 36.1))
     make_reported_table(study.user, run, text, {"ester": "ester"}, constant_u=1.0)
-    page = text_of(html_of(browser))
-    assert "[ester] 0 100 %" in page
-    assert "concentration / %" in page
-    assert "ester: 3 points, from 100 to 36.1 % between 0 and 20 min" in page
+    assert "100 %" in text_of(section_of(html_of(browser), "runs"))
 
 
 def test_a_project_of_invented_data_says_so(browser: Client, study: Study) -> None:
@@ -249,42 +183,103 @@ def test_a_project_of_invented_data_says_so(browser: Client, study: Study) -> No
     assert "Invented data" in html_of(browser, "/")
 
 
-def test_an_empty_project_says_what_to_do_first(browser: Client, study: Study) -> None:
-    text = text_of(html_of(browser))
-    assert "No run yet. First enter the compounds" in text
-    assert "No mechanism yet." in text
-    assert "No fit has finished yet." in text
+def next_step(browser: Client) -> str:
+    """The one step that an unfinished project asks for."""
+    (step,) = re.findall(
+        r'<li aria-current="step"><a class="first" href="[^"]+">(.*?)</a></li>', html_of(browser)
+    )
+    return str(step)
 
 
-def test_a_run_without_a_table_says_what_it_waits_for(browser: Client, study: Study) -> None:
-    from kinetics_db.runs.entry import Amount
-    from tests.factories.flow import make_run
+def test_an_empty_project_leads_to_its_first_fit_step_by_step(browser: Client, study: Study) -> None:
+    assert "No run yet." in text_of(html_of(browser))
+    assert next_step(browser).startswith("Enter the compounds")
+    enter_compound(user=study.user, project_id=study.project.pk, name="alcohol", molar_mass=100.0)
+    assert next_step(browser) == "Log a run with its charges"
+    warm = Amount(25, "degC")
+    run = make_run(study.user, study.project.pk, "K09", {"alcohol": Amount(0.1, "mol/L")}, temperature=warm)
+    assert next_step(browser) == "Give the run its instrument file"
+    assert f'href="/runs/{run.pk}/files/new/"' in html_of(browser)
+    data = lines(("time / s", "H1"), (0, 1), (1, 2)).encode()
+    store_file(user=study.user, run=run, name="a.csv", data=data)
+    assert next_step(browser) == "Reduce its signals to concentrations"
+    study.table(run)
+    assert next_step(browser) == "Write a mechanism"
+    study.version("first order", RIGHT)
+    assert next_step(browser) == "Freeze concentration tables into a dataset"
+    dataset = study.dataset()
+    assert next_step(browser) == "Ask for a fit of the mechanism to the dataset"
+    assert text_of(html_of(browser)).count(" done") == 6
+    study.fit("first order", RIGHT, dataset)
+    html = html_of(browser)
+    assert "What to do first" not in html and "Log a run</a>" in html
 
-    make_run(study.user, study.project.pk, "K09", {"alcohol": Amount(0.1, "mol/L")})
-    assert "waits for its instrument file" in html_of(browser)
+
+def test_runs_that_wait_are_counted_and_the_newest_named(browser: Client, study: Study) -> None:
+    study.run("K01")
+    for i in range(7):
+        make_run(study.user, study.project.pk, f"Q{i}", {"alcohol": Amount(0.1, "mol/L")})
+    filed = make_run(study.user, study.project.pk, "R1", {"alcohol": Amount(0.1, "mol/L")})
+    data = lines(("time / s", "H1"), (0, 1), (1, 2)).encode()
+    store_file(user=study.user, run=filed, name="a.csv", data=data)
+    html = section_of(html_of(browser), "waiting")
+    text = text_of(html)
+    assert "7 for their instrument files, 1 for its reduction to concentrations" in text
+    assert re.findall(r">([QRK]\d+)</a>", html) == ["R1", "Q6", "Q5", "Q4", "Q3"]
+    assert "All runs that wait (3 more)" in text
+    assert page_at(browser, "/projects/oxidation/runs/?q=no+table").count("/copy") == 0
+    assert "K01" not in page_at(browser, "/projects/oxidation/runs/?q=no+table").split("<tbody>")[1]
+
+
+def test_a_reader_sees_the_project_and_no_buttons_for_writers(client: Client, fitted: Study) -> None:
+    make_run(fitted.user, fitted.project.pk, "K09", {"alcohol": Amount(0.1, "mol/L")})
+    client.force_login(make_member(fitted.project, "reader", "rhea"))
+    html = html_of(client)
+    assert "your role: reader" in text_of(html)
+    assert "/new/" not in html
+
+
+def test_a_reader_of_an_empty_project_is_asked_for_nothing(client: Client, study: Study) -> None:
+    client.force_login(make_member(study.project, "reader", "rhea"))
+    html = html_of(client)
+    assert "Contributors of the project do this" in html and "/new/" not in html
 
 
 def test_markup_typed_by_people_stays_text(browser: Client, study: Study) -> None:
     study.run("<b>K&1</b>", notes="<script>alert(1)</script>")
-    study.version("<i>path</i>", '"<u>S</u>" --k--> P\n# <script>x</script>\n')
+    study.fit("<i>path</i>", RIGHT, study.dataset("<u>S</u>"))
+    type(study.project).objects.filter(pk=study.project.pk).update(name="<em>N</em>", description="<p onx=1>")
     html = html_of(browser)
-    assert "<script" not in html and "<i>path" not in html and "<u>S" not in html and "<b>K" not in html
+    assert "<i>path" not in html and "<u>S" not in html and "<b>K" not in html and "<em>N" not in html
+    assert "<p onx" not in html and "alert(1)" not in html
     assert "&lt;b&gt;K&amp;1&lt;/b&gt;" in html
 
 
-def test_the_page_keeps_to_its_own_content_policy(browser: Client, fitted: Study) -> None:
-    html = html_of(browser)
-    assert not re.search(r"<script|<style|\sstyle=|\son[a-z]+=|javascript:", html)
-    assert not re.search(r'(?:src|href)="(?:https?:)?//', html)
+@pytest.mark.parametrize("address", [ADDRESS, "/", f"{ADDRESS}evidence/", f"{ADDRESS}members/", "/account/"])
+def test_pages_keep_to_their_own_content_policy(browser: Client, fitted: Study, address: str) -> None:
+    html = html_of(browser, address)
+    assert not re.search(r"<style|\sstyle=|\son[a-z]+=|javascript:|\shx-on", html)
+    assert all('src="/static/' in tag for tag in re.findall(r"<script[^>]*>", html))
+    assert "hx-vals='js:" not in html
+    assert not re.search(r'(?:src|href|action|hx-get|hx-post)="(?:https?:)?//', html)
 
 
-def test_ids_are_unique_and_links_on_the_page_lead_somewhere(browser: Client, fitted: Study) -> None:
-    html = html_of(browser)
+@pytest.mark.parametrize(
+    "address", [ADDRESS, "/", f"{ADDRESS}evidence/", f"{ADDRESS}members/", "/account/", "/account/tokens/"]
+)
+def test_ids_are_unique_and_labels_and_links_on_the_page_lead_somewhere(
+    browser: Client, fitted: Study, address: str
+) -> None:
+    html = html_of(browser, address)
     ids = re.findall(r'\sid="([^"]+)"', html)
     assert len(ids) == len(set(ids))
-    assert set(re.findall(r'href="[^"]*#([^"]+)"', html)) <= set(ids)
-    for labelled in re.findall(r'aria-labelledby="([^"]+)"', html):
-        assert set(labelled.split()) <= set(ids)
+    assert set(re.findall(r'href="#([^"]+)"', html)) <= set(ids)
+    assert set(re.findall(r'<label[^>]* for="([^"]+)"', html)) <= set(ids)
+    for named in re.findall(r'aria-(?:labelledby|describedby)="([^"]+)"', html):
+        assert set(named.split()) <= set(ids)
+    levels = [int(level) for level in re.findall(r"<h([1-6])", html)]
+    assert levels[0] == 1 and levels.count(1) == 1
+    assert all(b - a <= 1 for a, b in itertools.pairwise(levels))
 
 
 def test_the_number_of_queries_does_not_grow_with_the_runs(browser: Client, study: Study) -> None:
@@ -301,18 +296,25 @@ def test_the_number_of_queries_does_not_grow_with_the_runs(browser: Client, stud
     assert counts[0] == counts[1] <= MOST_QUERIES, "\n".join(q["sql"][:200] for q in queries)
 
 
+def test_an_empty_project_costs_no_more_queries(browser: Client, study: Study) -> None:
+    with CaptureQueriesContext(connection) as queries:
+        html_of(browser)
+    assert len(queries) <= MOST_QUERIES, "\n".join(q["sql"][:200] for q in queries)
+
+
 def test_strangers_are_told_nothing_not_even_that_the_project_exists(client: Client, fitted: Study) -> None:
     client.force_login(make_user("stranger"))
-    there, nowhere = client.get(ADDRESS), client.get("/projects/no-such-thing/")
-    assert there.status_code == nowhere.status_code == 404
-    assert there.content.decode().replace("oxidation", "X") == nowhere.content.decode().replace(
-        "no-such-thing", "X"
-    )
+    for part in ("", "under-way/", "evidence/", "evidence.csv"):
+        there, nowhere = client.get(f"{ADDRESS}{part}"), client.get(f"/projects/no-such-thing/{part}")
+        assert there.status_code == nowhere.status_code == 404
+        assert there.content.decode().replace("oxidation", "X") == nowhere.content.decode().replace(
+            "no-such-thing", "X"
+        )
 
 
-def test_a_reader_sees_the_project(client: Client, fitted: Study) -> None:
-    client.force_login(make_member(fitted.project, "reader", "rhea"))
-    assert "your role: reader" in text_of(html_of(client))
+def test_a_poll_of_somebody_logged_out_leads_to_the_login(client: Client, study: Study) -> None:
+    response = client.get(f"{ADDRESS}under-way/?open=1", headers={"HX-Request": "true"})
+    assert response["HX-Redirect"].startswith("/login/")
 
 
 def test_dates_are_shown_in_the_readers_zone(browser: Client, study: Study) -> None:
@@ -321,3 +323,8 @@ def test_dates_are_shown_in_the_readers_zone(browser: Client, study: Study) -> N
     assert f">{there:%Y-%m-%d %H:%M} IST</time>" in html_of(browser)
     type(study.user).objects.filter(pk=study.user.pk).update(time_zone="Nowhere/Else")
     assert " UTC</time>" in html_of(browser)
+
+
+def test_a_verdict_that_says_nothing_is_counted_as_well(browser: Client, fitted: Study) -> None:
+    RunEvidence.objects.update(verdict="not tested")
+    assert text_of(section_of(html_of(browser), "evidence")).count("not tested 2") == 2

@@ -12,7 +12,7 @@ from kinetics_db.projects.models import Membership
 from kinetics_db.projects.selectors import require_reader, role_in, roles_remembered
 from kinetics_db.runs.entry import Amount, ChargeEntry, RunEntry
 from kinetics_db.runs.models import RunRevision
-from kinetics_db.runs.selectors import run_counts, start_concentrations
+from kinetics_db.runs.selectors import start_concentrations
 from kinetics_db.runs.services import log_run
 from tests.factories.people import make_member, make_project, make_user
 from tests.web.study import Study
@@ -76,9 +76,3 @@ def test_a_remembered_role_is_nobody_elses(db: None) -> None:
         for user, project_id in ((make_user(), project.pk), (project.created_by, other.pk)):
             with pytest.raises(NotFound):
                 require_reader(user=user, project_id=project_id)
-
-
-def test_runs_are_counted_only_where_the_person_may_look(study: Study) -> None:
-    study.run("K01")
-    assert run_counts(user=study.user) == {study.project.pk: 1}
-    assert run_counts(user=make_user()) == {}
