@@ -162,27 +162,26 @@ def _problems(
             )
         )
     for table_id, window in windows.items():
+        field = f"windows.{table_id}"
         if table_id not in table_ids:
-            found.append(
-                Problem(f"a window is given for table {table_id}, which is not chosen", field="windows")
-            )
+            found.append(Problem(f"a window is given for table {table_id}, which is not chosen", field=field))
             continue
         table = tables[table_id]
         names = table.table.names("concentration")
         for column in window.columns or ():
             if column not in names:
                 found.append(
-                    Problem(f"table {table} has no column '{column}'", field="windows", cure=", ".join(names))
+                    Problem(f"table {table} has no column '{column}'", field=field, cure=", ".join(names))
                 )
         if not _leaves_something(window, table):
-            found.append(Problem(f"the window leaves nothing of table {table}", field="windows"))
+            found.append(Problem(f"the window leaves nothing of table {table}", field=field))
         for place, reason in window.left_out.items():
             column, _, row = place.rpartition("@")
             good_row = row == "*" or (row.isascii() and row.isdecimal() and int(row) < table.rows)
             if (column not in names and column != "*") or not good_row:
                 found.append(
-                    Problem(f"'{place}' is no point of table {table}", field="windows", cure="column@row")
+                    Problem(f"'{place}' is no point of table {table}", field=field, cure="column@row")
                 )
-            if not plain_text(reason, field="windows"):
-                found.append(Problem(f"point '{place}' is left out without a reason", field="windows"))
+            if not plain_text(reason, field=field):
+                found.append(Problem(f"point '{place}' is left out without a reason", field=field))
     return found

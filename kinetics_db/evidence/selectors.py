@@ -1,141 +1,49 @@
-"""The evidence grid: which model version explains which run."""
+"""Reads about evidence: which model version explains which run. The grid itself is in `grid`."""
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from collections.abc import Sequence
 
-from django.db.models import Case, When
+from django.db.models import Count
 
 from kinetics_db.accounts.models import User
-from kinetics_db.datasets.selectors import Staleness, staleness_of
 from kinetics_db.errors import NotFound
-from kinetics_db.evidence.models import VERDICTS, ModelEvidence, RunEvidence
+from kinetics_db.evidence.explanations import Explanation as Explanation
+from kinetics_db.evidence.explanations import Explanations as Explanations
+from kinetics_db.evidence.explanations import explanations_of_run as explanations_of_run
+from kinetics_db.evidence.grid import Cell as Cell
+from kinetics_db.evidence.grid import Columns as Columns
+from kinetics_db.evidence.grid import Grid as Grid
+from kinetics_db.evidence.grid import GridColumn as GridColumn
+from kinetics_db.evidence.grid import grid_columns as grid_columns
+from kinetics_db.evidence.grid import grid_of as grid_of
+from kinetics_db.evidence.grid import tried_run_ids as tried_run_ids
+from kinetics_db.evidence.models import ModelEvidence, RunEvidence
 from kinetics_db.fits.selectors import fit_by_id
-from kinetics_db.projects.selectors import require_reader
-from kinetics_db.runs.models import Run
+from kinetics_db.projects.selectors import projects_visible_to, require_reader
 
 
-@dataclass(frozen=True)
-class Cell:
-    """One verdict: a run under a fit result.
+def verdict_counts(*, user: User, fit_ids: Sequence[int]) -> dict[int, dict[str, int]]:
+    """For each fit that the person may see how many runs of its result got each verdict; one query.
 
-    ``p_value`` and ``nrmse`` are those of ``observable``, the one that decided; ``pull`` is the farthest pull
-    among the run's nuisance parameters, in standard deviations of its prior.
+    Of several results the one that counts is taken: finished before stopped, newest first.
     """
-
-    verdict: str
-    p_value: float | None
-    nrmse: float | None
-    fit_id: int
-    table: str
-    observable: str = ""
-    pull: float | None = None
-    pull_name: str = ""
-
-
-@dataclass(frozen=True)
-class GridColumn:
-    """One mechanism version as fitted: the newest finished fit of it on one dataset."""
-
-    fit_id: int
-    mechanism: str
-    dataset: str
-    status: str
-    aicc: float | None
-    bic: float | None
-    stale: Staleness
-    delta_aicc: float | None
-    """AICc above the lowest of the converged fits to the same points with the same weights; None without another."""
-
-
-@dataclass(frozen=True)
-class Grid:
-    """Runs down, model versions across. A missing cell was never tried."""
-
-    runs: Sequence[str]
-    columns: Sequence[GridColumn]
-    cells: Mapping[tuple[str, int], Cell]
-    """(run code, fit id) -> verdict"""
-
-
-def grid_of(*, user: User, project_id: int) -> Grid:
-    """The evidence grid of a project: in each dataset the newest result of each mechanism version.
-
-    Five queries, whatever the number of runs and fits.
-    """
-    require_reader(user=user, project_id=project_id)
-    found = (
-        ModelEvidence.objects.filter(result__fit__project_id=project_id)
-        .select_related("result__fit__mechanism_version__mechanism", "result__fit__dataset")
-        .defer("result__canonical", "result__fit__dataset__canonical", "canonical")
-        # Finished results come last and so win over stopped ones, the newest of them last.
-        .annotate(finished=Case(When(result__status="stopped", then=0), default=1))
-        .order_by(
-            "result__fit__mechanism_version__mechanism__name",
-            "result__fit__mechanism_version__number",
-            "finished",
-            "pk",
+    rows = (
+        RunEvidence.objects.filter(
+            evidence__result__fit_id__in=fit_ids,
+            evidence__result__fit__project__in=projects_visible_to(user),
         )
+        .order_by()
+        .values_list("evidence__result__fit_id", "evidence__result__status", "evidence_id", "verdict")
+        .annotate(n=Count("pk"))
     )
-    newest = {(e.result.fit.mechanism_version_id, e.result.fit.dataset_id): e for e in found}
-    chosen = list(newest.values())
-    stale = staleness_of(sorted({e.result.fit.dataset_id for e in chosen}))
-    columns = tuple(_column(e, chosen, stale) for e in chosen)
-    cells: dict[tuple[str, int], Cell] = {}
-    rows = RunEvidence.objects.filter(evidence__in=chosen).select_related(
-        "run_revision__run", "table__run", "evidence__result"
-    )
-    for row in rows.defer(
-        "run_revision__canonical",
-        "table__canonical",
-        "table__blob",
-        "evidence__canonical",
-        "evidence__result__canonical",
-    ):
-        fit_id = row.evidence.result.fit_id
-        cell = Cell(
-            verdict=row.verdict,
-            observable=row.observable,
-            p_value=row.p_value,
-            nrmse=row.nrmse,
-            pull=row.pull,
-            pull_name=row.pull_name,
-            fit_id=fit_id,
-            table=str(row.table),
-        )
-        place = row.run_revision.run.code, fit_id
-        # A run with several tables in one dataset is judged by the worst of them.
-        if place not in cells or VERDICTS.index(cell.verdict) > VERDICTS.index(cells[place].verdict):
-            cells[place] = cell
-    codes = tuple(Run.objects.filter(project_id=project_id).order_by("code").values_list("code", flat=True))
-    return Grid(codes, columns, cells)
-
-
-def _column(
-    evidence: ModelEvidence, chosen: Sequence[ModelEvidence], stale: Mapping[int, Staleness]
-) -> GridColumn:
-    fit = evidence.result.fit
-    comparable = [
-        other.aicc
-        for other in chosen
-        if other.aicc is not None
-        and other.data_key == evidence.data_key
-        and other.result.status == "converged"
-    ]
-    delta = None
-    if evidence.aicc is not None and evidence.result.status == "converged" and len(comparable) > 1:
-        delta = evidence.aicc - min(comparable)
-    return GridColumn(
-        fit_id=fit.pk,
-        mechanism=str(fit.mechanism_version),
-        dataset=str(fit.dataset),
-        status=evidence.result.status,
-        aicc=evidence.aicc,
-        bic=evidence.bic,
-        stale=stale[fit.dataset_id],
-        delta_aicc=delta,
-    )
+    newest: dict[int, tuple[bool, int]] = {}
+    counts: dict[tuple[int, tuple[bool, int]], dict[str, int]] = {}
+    for fit_id, status, evidence_id, verdict, n in rows:
+        rank = (status != "stopped", evidence_id)
+        newest[fit_id] = max(newest.get(fit_id, rank), rank)
+        counts.setdefault((fit_id, rank), {})[verdict] = n
+    return {fit_id: counts[fit_id, rank] for fit_id, rank in newest.items()}
 
 
 def evidence_of(*, user: User, fit_id: int) -> ModelEvidence:

@@ -5,9 +5,9 @@ from __future__ import annotations
 import csv
 import io
 import math
-from collections.abc import Iterator
+from collections.abc import Iterator, Sequence
 from dataclasses import astuple, dataclass, fields
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 
@@ -17,6 +17,7 @@ from kinetics_db.fits.experiments import data_of, reason_left_out, rows_in_windo
 if TYPE_CHECKING:
     from kinetics_db.accounts.models import User
 
+ROWS_AT_ONCE = 1000
 FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
 
@@ -63,14 +64,43 @@ def tidy_rows(*, user: User, dataset_id: int) -> Iterator[TidyRow]:
                 )
 
 
+@dataclass(frozen=True, eq=False)
+class TidyColumn:
+    """One column of the tidy table; units stand in a column of their own."""
+
+    name: str
+    values: Any
+    unit: str = ""
+
+
+def tidy_columns(*, user: User, dataset_id: int) -> list[TidyColumn]:
+    """The same rows, column by column."""
+    rows = list(tidy_rows(user=user, dataset_id=dataset_id))
+    floats = ("time_s", "value", "standard_uncertainty")
+    found = []
+    for f in fields(TidyRow):
+        values: Sequence[Any] = [getattr(row, f.name) for row in rows]
+        found.append(TidyColumn(f.name, np.array(values, dtype=float) if f.name in floats else values))
+    return found
+
+
 def tidy_csv(*, user: User, dataset_id: int) -> str:
     """The same rows as CSV (RFC 4180). Texts that a spreadsheet would take for a formula get a leading quote."""
+    return "".join(tidy_csv_pieces(user=user, dataset_id=dataset_id))
+
+
+def tidy_csv_pieces(*, user: User, dataset_id: int) -> Iterator[str]:
+    """`tidy_csv` in pieces, to be sent while it is written."""
     out = io.StringIO()
     writer = csv.writer(out)
     writer.writerow([f.name for f in fields(TidyRow)])
-    for row in tidy_rows(user=user, dataset_id=dataset_id):
+    for number, row in enumerate(tidy_rows(user=user, dataset_id=dataset_id), start=1):
         writer.writerow([_cell(value) for value in astuple(row)])
-    return out.getvalue()
+        if number % ROWS_AT_ONCE == 0:
+            yield out.getvalue()
+            out.seek(0)
+            out.truncate()
+    yield out.getvalue()
 
 
 def _finite(value: float) -> float | None:

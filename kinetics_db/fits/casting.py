@@ -80,8 +80,8 @@ def _gaps(
     what: str, names: Sequence[str], chosen: Mapping[str, str | None], targets: Sequence[str]
 ) -> list[Problem]:
     found = []
-    field = f"casting.{what}s"
     for name in names:
+        field = f"casting.{what}s.{name}"
         if name not in chosen:
             near = difflib.get_close_matches(name, targets, n=2, cutoff=0.5)
             hint = f"did you mean {' or '.join(repr(n) for n in near)}? " if near else ""
@@ -103,6 +103,9 @@ def _gaps(
     for name in chosen:
         if name not in names:
             found.append(
-                Problem(f"the casting names the {what} '{name}', which the data do not have", field=field)
+                Problem(
+                    f"the casting names the {what} '{name}', which the data do not have",
+                    field=f"casting.{what}s",
+                )
             )
     return found

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Sequence
 
-from django.db.models import Q, QuerySet
+from django.db.models import OuterRef, Q, QuerySet
 from django.db.models.functions import Now
 
 from kinetics_db.errors import NotFound
@@ -24,9 +24,14 @@ def jobs_for(*, kind: str, subject_ids: Sequence[int]) -> dict[int, Job]:
     return {job.subject_id: job for job in Job.objects.filter(kind=kind, subject_id__in=subject_ids)}
 
 
-def open_subjects(*, kind: str) -> list[int]:
-    """Ids of the requests of that kind whose work is waiting or running."""
-    return list(Job.objects.filter(kind=kind, state__in=Job.OPEN).values_list("subject_id", flat=True))
+def job_of_each(*, kind: str, subject: str) -> QuerySet[Job]:
+    """The job of each row of another query whose field ``subject`` is the request's id, for a subquery."""
+    return Job.objects.filter(kind=kind, subject_id=OuterRef(subject)).order_by()
+
+
+def open_subjects(*, kind: str) -> QuerySet[Job, int]:
+    """Ids of the requests of that kind whose work is waiting or running, to stand inside another query."""
+    return Job.objects.filter(kind=kind, state__in=Job.OPEN).values_list("subject_id", flat=True)
 
 
 def attempts_of(job: Job) -> list[Attempt]:

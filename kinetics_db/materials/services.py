@@ -3,8 +3,10 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
-from dataclasses import dataclass
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
+from datetime import date
 from typing import Any, TypeVar
 
 from django.db.models import QuerySet
@@ -14,7 +16,7 @@ from kinetics_db.engine import amounts
 from kinetics_db.engine.canonical import digest
 from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.units import convert
-from kinetics_db.errors import InvalidInput, NotFound
+from kinetics_db.errors import InvalidInput, NotFound, Problem
 from kinetics_db.materials.models import (
     Compound,
     CompoundRevision,
@@ -30,6 +32,9 @@ from kinetics_db.materials.sources import engine_lot, stock_content
 from kinetics_db.projects.selectors import require_contributor
 from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
+
+MOST_CONCENTRATED = 1e3
+"""mol/L; nothing is as dense, and the database holds no more."""
 
 Revision = TypeVar("Revision", bound=MaterialRevision)
 
@@ -106,7 +111,7 @@ def enter_lot(
     reason = plain_text(reason, field="reason")
     with recording(user=user):
         lock_project(project_id)
-        of = compound_named(project_id=project_id, name=compound)
+        of = _compound(project_id, compound)
         amounts.Lot(code, compound, purity=purity, purity_u=purity_uncertainty)  # checks the numbers
         lot, made = Lot.objects.get_or_create(
             project_id=project_id, code=code, defaults={"compound": of.compound}
@@ -160,24 +165,14 @@ def make_up_stock(
     solvent = plain_text(solvent, field="solvent", longest=200)
     made_on = plain_text(made_on, field="made_on", longest=40)
     reason = plain_text(reason, field="reason")
-    if not portions:
-        raise InvalidInput("the stock holds nothing", field="portions", cure="at least one lot or compound")
+    _check_stock(made_on, temperature, portions)
     with recording(user=user):
         lock_project(project_id)
         stock, made = Stock.objects.get_or_create(project_id=project_id, code=code)
         _note_if(made, "stock", stock.pk, project_id, code)
-        resolved = [_resolve(project_id, portion) for portion in portions]
-        recipe = amounts.StockRecipe(
-            owner=f"stock {code}",
-            components=tuple(
-                amounts.Charge(engine_lot(of, lot), portion.value, portion.unit, portion.uncertainty)
-                for portion, (of, lot) in zip(portions, resolved, strict=True)
-            ),
-            volume=amounts.TotalVolume(
-                float(convert(volume[0], volume[1], "L")), float(convert(volume_uncertainty, volume[1], "L"))
-            ),
-        )
+        resolved, recipe = _recipe(project_id, code, portions, volume, volume_uncertainty)
         made_up = amounts.stock_concentrations(recipe)
+        _check_concentrations(made_up)
         content = stock_content(
             code=code,
             recipe=recipe,
@@ -213,19 +208,88 @@ def make_up_stock(
     return revision
 
 
+def _check_stock(made_on: str, temperature: float | None, portions: Sequence[Portion]) -> None:
+    problems: list[Problem] = []
+    if not portions:
+        cure = "at least one lot or compound"
+        problems.append(Problem("the stock holds nothing", field="portions", cure=cure))
+    with _placed(problems, ""):
+        _positive(temperature, "temperature", "K")
+    try:
+        if made_on:
+            date.fromisoformat(made_on)
+    except ValueError:
+        problems.append(Problem(f"'{made_on}' is no date", field="made_on", cure="for example 2026-03-05"))
+    if problems:
+        raise InvalidInput(problems)
+
+
+def _recipe(
+    project_id: int,
+    code: str,
+    portions: Sequence[Portion],
+    volume: tuple[float, str],
+    volume_uncertainty: float,
+) -> tuple[list[tuple[CompoundRevision, LotRevision | None]], amounts.StockRecipe]:
+    """What the portions are of, and the recipe; problems have places such as 'portions.2.unit'."""
+    problems: list[Problem] = []
+    resolved, charges = [], []
+    total = amounts.TotalVolume(1.0)
+    with _placed(problems, "volume"):
+        litres = float(convert(volume[0], volume[1], "L"))
+        total = amounts.TotalVolume(litres, float(convert(volume_uncertainty, volume[1], "L")))
+    for position, portion in enumerate(portions, start=1):
+        with _placed(problems, f"portions.{position}"):
+            of, lot = _resolve(project_id, portion)
+            charge = amounts.Charge(engine_lot(of, lot), portion.value, portion.unit, portion.uncertainty)
+            amounts.charge_contributions(charge, total, position)
+            resolved.append((of, lot))
+            charges.append(charge)
+    if problems:
+        raise InvalidInput(problems)
+    return resolved, amounts.StockRecipe(owner=f"stock {code}", components=tuple(charges), volume=total)
+
+
+def _check_concentrations(made_up: amounts.Stock) -> None:
+    for part in made_up.components:
+        if part.concentration > MOST_CONCENTRATED:
+            raise InvalidInput(
+                f"{part.compound} would be {part.concentration:.3g} mol/L",
+                field="portions",
+                cure=f"amounts and a volume that give at most {MOST_CONCENTRATED:g} mol/L",
+            )
+
+
+@contextmanager
+def _placed(problems: list[Problem], where: str) -> Iterator[None]:
+    """Collect what a block refuses, under a place."""
+    try:
+        yield
+    except InvalidInput as error:
+        for problem in error.problems:
+            place = ".".join(part for part in (where, problem.field) if part)
+            problems.append(replace(problem, field=place))
+
+
+def _compound(project_id: int, name: str) -> CompoundRevision:
+    try:
+        return compound_named(project_id=project_id, name=name)
+    except NotFound as error:
+        raise InvalidInput(str(error), field="compound", cure="a compound that is entered") from error
+
+
 def _resolve(project_id: int, portion: Portion) -> tuple[CompoundRevision, LotRevision | None]:
     if (portion.lot is None) == (portion.compound is None):
-        raise InvalidInput(
-            "a portion needs a lot or a compound", field="portions", cure="exactly one of both"
-        )
+        raise InvalidInput("a portion needs a lot or a compound", cure="exactly one of both")
     try:
         if portion.lot is not None:
-            lot = lot_named(project_id=project_id, code=plain_text(portion.lot, field="portions", longest=80))
+            lot = lot_named(project_id=project_id, code=plain_text(portion.lot, field="lot", longest=80))
             return lot.compound_revision, lot
-        name = plain_text(portion.compound, field="portions", longest=80)
+        name = plain_text(portion.compound, field="compound", longest=80)
         return compound_named(project_id=project_id, name=name), None
     except NotFound as error:
-        raise InvalidInput(str(error), field="portions") from error
+        field = "lot" if portion.lot is not None else "compound"
+        raise InvalidInput(str(error), field=field, cure="enter it first, or correct the name") from error
 
 
 def _next_revision(

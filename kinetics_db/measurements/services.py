@@ -111,6 +111,14 @@ def store_file(
         )
 
 
+def preview_reduction(
+    *, user: User, signal_table: SignalTable, recipe: Mapping[str, Any]
+) -> calibration.ConcentrationTableResult:
+    """The concentrations that a recipe gives for a signal table; stores nothing."""
+    require_contributor(user=user, project_id=signal_table.file.project_id)
+    return calibration.reduce(signal_table.table, calibration.recipe_from_plain(recipe))
+
+
 def reduce_signals(
     *, user: User, signal_table: SignalTable, name: str, recipe: Mapping[str, Any]
 ) -> ConcentrationTable:

@@ -10,11 +10,12 @@ from dataclasses import fields
 from django.db import IntegrityError, transaction
 
 from kinetics_db.accounts.models import User
+from kinetics_db.accounts.selectors import user_named
 from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.run_evidence import Thresholds
-from kinetics_db.errors import Conflict, InvalidInput, Problem
+from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, Problem
 from kinetics_db.projects.models import Membership, Project
-from kinetics_db.projects.selectors import require_owner
+from kinetics_db.projects.selectors import RESERVED_SLUGS, require_owner
 from kinetics_db.provenance.services import note_write, recording
 
 SLUG = re.compile(r"[a-z0-9]+(?:-[a-z0-9]+)*\Z")
@@ -24,12 +25,17 @@ def create_project(
     *, user: User, slug: str, name: str, description: str = "", invented: bool = False
 ) -> Project:
     """Make a project; its maker becomes its first owner."""
+    limits = user.limits
+    if limits is not None and (limits.project_id is not None or not limits.may_write):
+        raise NotPermitted(f"the token '{limits.token}' cannot make projects")
     if not isinstance(slug, str) or not SLUG.match(slug) or len(slug) > 60:
         raise InvalidInput(
             f"{slug!r:.80} cannot be a project's short name",
             field="slug",
             cure="small letters, digits and single hyphens",
         )
+    if slug in RESERVED_SLUGS:
+        raise InvalidInput(f"'{slug}' stands for a page of its own", field="slug", cure="another short name")
     name = plain_text(name, field="name", what="a project", longest=200, required=True)
     description = plain_text(description, field="description", longest=20_000, lines=True)
     with recording(user=user):
@@ -110,3 +116,39 @@ def set_member(*, user: User, project: Project, member: User, role: str) -> Memb
             label=member.get_username(),
         )
     return membership
+
+
+def give_role(*, user: User, project: Project, username: str, role: str) -> Membership:
+    """Give the person of that name a role. Only owners learn which names there are."""
+    require_owner(user=user, project_id=project.pk)
+    username = plain_text(username, field="username", what="a role", longest=150, required=True)
+    try:
+        member = user_named(username)
+    except NotFound as error:
+        raise InvalidInput(
+            str(error), field="username", cure="the name that the person logs in with"
+        ) from error
+    return set_member(user=user, project=project, member=member, role=role)
+
+
+def remove_member(*, user: User, project: Project, username: str) -> None:
+    """Take a person's role away; what he or she entered stays. A project always keeps an owner."""
+    with recording(user=user):
+        lock_project(project.pk)
+        require_owner(user=user, project_id=project.pk)
+        username = plain_text(username, field="username", longest=150)
+        members = Membership.objects.filter(project=project)
+        membership = members.filter(user__username=username).first()
+        if membership is None:
+            raise InvalidInput(f"'{username}' has no role in this project", field="username")
+        if not members.filter(role=Membership.Role.OWNER).exclude(pk=membership.pk).exists():
+            raise Conflict("a project keeps at least one owner; make somebody else an owner first")
+        removed, role = membership.pk, membership.role
+        membership.delete()
+        note_write(
+            verb=f"took role {role}",
+            record_kind="membership",
+            record_id=removed,
+            project_id=project.pk,
+            label=username,
+        )

@@ -121,7 +121,7 @@ class AuditEntry(models.Model):
 
     sequence = models.BigIntegerField(unique=True)
     at = models.DateTimeField()
-    actor = models.CharField(max_length=150, help_text="user or token name, as it was then")
+    actor = models.CharField(max_length=220, help_text="user and token name, as they were then")
     user = models.ForeignKey(settings.AUTH_USER_MODEL, null=True, on_delete=models.PROTECT, related_name="+")
     verb = models.CharField(max_length=40)
     project_id = models.BigIntegerField(

@@ -87,7 +87,7 @@ def note_write(
     _state.pending.entries.append(
         {
             "user_id": user.pk if user is not None else None,
-            "actor": user.get_username() if user is not None else COMMAND_LINE,
+            "actor": _actor(user),
             "verb": verb,
             "record_kind": record_kind,
             "record_id": record_id,
@@ -98,6 +98,13 @@ def note_write(
             "digest_after": digest_after,
         }
     )
+
+
+def _actor(user: Any) -> str:
+    if user is None:
+        return COMMAND_LINE
+    limits = getattr(user, "limits", None)
+    return user.get_username() if limits is None else f"{user.get_username()} (token {limits.token})"
 
 
 def audit_account(

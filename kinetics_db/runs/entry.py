@@ -12,6 +12,22 @@ ControlKind = Literal[
 CONTROL_KINDS: tuple[str, ...] = ControlKind.__args__  # type: ignore[attr-defined]
 
 
+MOST_CHARGES = 200
+#: Longest texts of an entry, in characters; those that may hold line breaks are `WITH_LINES`.
+LONGEST: Mapping[str, int] = {
+    "code": 80,
+    "atmosphere": 200,
+    "started": 40,
+    "replicate_of": 80,
+    "control_kind": 80,
+    "notes": 100_000,
+    "source": 80,
+    "note": 1000,
+    "section": 2000,
+}
+WITH_LINES = frozenset({"notes", "note", "section"})
+
+
 @dataclass(frozen=True)
 class Amount:
     """A number as typed, with its unit and standard uncertainty in the same unit."""

@@ -18,13 +18,21 @@ class Run(models.Model):
     created_by = models.ForeignKey(settings.AUTH_USER_MODEL, on_delete=models.PROTECT, related_name="+")
     sealed = models.DateTimeField(null=True, blank=True, help_text="from then on changes are amendments")
     latest_number = models.PositiveIntegerField(default=0)
+    # From the newest revision, for lists and their filters.
+    control_kind = models.CharField(max_length=80, blank=True, default="")
+    replicate_of = models.ForeignKey(
+        "self", null=True, blank=True, on_delete=models.PROTECT, related_name="replicates"
+    )
 
     class Meta:
         constraints = [
             models.UniqueConstraint(fields=["project", "code"], name="run_code_once_a_project"),
             models.CheckConstraint(condition=~Q(code=""), name="run_has_a_code"),
         ]
-        indexes = [models.Index("project", F("created").desc(), F("id").desc(), name="run_newest")]
+        indexes = [
+            models.Index("project", F("created").desc(), F("id").desc(), name="run_newest"),
+            models.Index(F("created").desc(), F("id").desc(), name="run_newest_anywhere"),
+        ]
 
     def __str__(self) -> str:
         return self.code
@@ -78,7 +86,10 @@ class RunCharge(models.Model):
 
 
 class RunCondition(models.Model):
-    """A number by which runs are searched, derived from the newest revision, e.g. 'c0:lactone' in mol/L."""
+    """A number by which runs are searched, derived from the newest revision, e.g. 'c0:lactone' in mol/L.
+
+    Runs in percent have 'percent:lactone' in its place, so that nobody finds 100 % as 100 mol/L.
+    """
 
     run = models.ForeignKey(Run, on_delete=models.PROTECT, related_name="conditions")
     key = models.CharField(max_length=140)
@@ -91,7 +102,7 @@ class RunCondition(models.Model):
                 condition=Q(value__gte=-1e300, value__lte=1e300), name="condition_is_finite"
             ),
         ]
-        indexes = [models.Index(fields=["key", "value"], name="condition_search")]
+        indexes = [models.Index(fields=["key", "value", "run"], name="condition_search")]
 
     def __str__(self) -> str:
         return f"{self.run_id} {self.key} = {self.value}"

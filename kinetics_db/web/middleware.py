@@ -1,4 +1,4 @@
-"""Response headers of every page."""
+"""Response headers of every page, beside the content policy that django-csp sends (settings)."""
 
 from __future__ import annotations
 
@@ -6,27 +6,14 @@ from collections.abc import Callable
 
 from django.http import HttpRequest, HttpResponseBase
 
-#: Nothing from elsewhere, no scripts, no inline styles. The lab browser loosens this on purpose, not by accident.
-CONTENT_SECURITY_POLICY = "; ".join(
-    (
-        "default-src 'none'",
-        "style-src 'self'",
-        "img-src 'self' data:",
-        "form-action 'self'",
-        "base-uri 'none'",
-        "frame-ancestors 'none'",
-    )
-)
 UNUSED_FEATURES = (
     "accelerometer", "camera", "display-capture", "geolocation", "gyroscope", "magnetometer", "microphone",
     "midi", "payment", "usb",
 )  # fmt: skip
 HEADERS = {
-    "Content-Security-Policy": CONTENT_SECURITY_POLICY,
     "Permissions-Policy": ", ".join(f"{feature}=()" for feature in UNUSED_FEATURES),
     # Forms over https need the referrer of our own pages; nobody else is told where a reader comes from.
     "Referrer-Policy": "same-origin",
-    "Cross-Origin-Opener-Policy": "same-origin",
     "Cross-Origin-Resource-Policy": "same-origin",
 }
 

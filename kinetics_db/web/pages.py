@@ -3,30 +3,35 @@
 from __future__ import annotations
 
 from collections.abc import Callable
+from contextlib import nullcontext
 from functools import wraps
 from typing import TYPE_CHECKING, Any
 from zoneinfo import ZoneInfo, ZoneInfoNotFoundError
 
 from django.contrib.auth.decorators import login_required
-from django.http import HttpRequest, HttpResponse
+from django.http import HttpRequest, HttpResponse, HttpResponseBase
 from django.shortcuts import render
 from django.utils import timezone
 from django.views.decorators.cache import never_cache
-from django.views.decorators.http import require_safe
+from django.views.decorators.http import require_http_methods, require_POST, require_safe
+from django_htmx.http import HttpResponseClientRedirect
 
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, RatewrightError, Unavailable
 from kinetics_db.projects.selectors import roles_remembered
 
 if TYPE_CHECKING:
+    from django_htmx.middleware import HtmxDetails
+
     from kinetics_db.accounts.models import User
 
-View = Callable[..., HttpResponse]
+View = Callable[..., HttpResponseBase]
 
 
 class ReadersRequest(HttpRequest):
     """A request of somebody who is logged in, as the views of pages get it; for type checkers."""
 
     user: User
+    htmx: HtmxDetails
 
 
 ERRORS: dict[type[RatewrightError], tuple[int, str]] = {
@@ -36,6 +41,7 @@ ERRORS: dict[type[RatewrightError], tuple[int, str]] = {
     Conflict: (409, "The record has changed meanwhile"),
     Unavailable: (503, "A part of the service does not answer"),
 }
+NOT_ACCEPTED = (422, "What was sent cannot be used as it is")
 
 
 def page(view: View) -> View:
@@ -43,25 +49,61 @@ def page(view: View) -> View:
 
     Errors of the services become pages in the same look.
     """
+    return never_cache(_behind_login(require_safe(_guarded(view))))
 
+
+def form_page(view: View) -> View:
+    """A page with a form: GET shows it, POST sends it. The view itself shows what is wrong with the input."""
+    return never_cache(_behind_login(require_http_methods(["GET", "HEAD", "POST"])(_guarded(view))))
+
+
+def download(view: View) -> View:
+    """Bytes of the record behind login; the view itself says how long they may be kept."""
+    return _behind_login(require_safe(_guarded(view)))
+
+
+def action(view: View) -> View:
+    """An address that does one thing and leads on: POST only, so that a link cannot do it."""
+    return never_cache(_behind_login(require_POST(_guarded(view))))
+
+
+def _guarded(view: View) -> View:
     @wraps(view)
-    def shown(request: HttpRequest, *args: Any, **kwargs: Any) -> HttpResponse:
+    def shown(request: HttpRequest, *args: Any, **kwargs: Any) -> HttpResponseBase:
+        reading = request.method in ("GET", "HEAD")
         try:
-            with timezone.override(zone_of(request.user)), roles_remembered():
+            # Roles are looked up anew while something is written: one may have been taken away meanwhile.
+            with timezone.override(zone_of(request.user)), roles_remembered() if reading else nullcontext():
                 return view(request, *args, **kwargs)
         except RatewrightError as error:
             return error_page(request, error)
 
-    # A reader who has logged out must not be shown the page again from the browser's store.
-    return never_cache(login_required(require_safe(shown)))
+    return shown
+
+
+def _behind_login(view: View) -> View:
+    """Send strangers to the login; a part of a page that htmx asks for is no place for a login form."""
+    guarded = login_required(view)
+
+    @wraps(view)
+    def entered(request: HttpRequest, *args: Any, **kwargs: Any) -> HttpResponseBase:
+        response = guarded(request, *args, **kwargs)
+        if not request.user.is_authenticated and getattr(request, "htmx", False):
+            return HttpResponseClientRedirect(response.headers["Location"])
+        return response
+
+    return entered
 
 
 def error_page(request: HttpRequest, error: RatewrightError) -> HttpResponse:
-    """The error as a page that says what is wrong."""
+    """The error as a page that says what is wrong; as a paragraph where only a part of a page was asked for."""
     status, heading = next(
         (found for kind, found in ERRORS.items() if isinstance(error, kind)), (500, "Something went wrong")
     )
-    return render(request, "web/message.html", {"heading": heading, "message": str(error)}, status=status)
+    if isinstance(error, InvalidInput) and request.method == "POST":
+        status, heading = NOT_ACCEPTED
+    template = "web/parts/wrong.html" if getattr(request, "htmx", False) else "web/message.html"
+    return render(request, template, {"heading": heading, "message": str(error)}, status=status)
 
 
 def zone_of(person: Any) -> ZoneInfo:

@@ -1,8 +1,8 @@
 """At most so many failed logins for an account from an address.
 
-Counts are kept in Django's cache. The default cache lives in the process: enough for the one web process of
-a machine, and with several processes the limit holds for each of them; a shared cache in the settings makes it
-one limit for all. Behind a proxy that hides addresses every visitor counts as one address.
+Counts are kept in Django's cache: in memory for the one web process of a machine, in Redis for the web processes
+of a lab, and in each one's memory while Redis does not answer. Behind a proxy that hides addresses every visitor
+counts as one address.
 """
 
 from __future__ import annotations
@@ -24,10 +24,13 @@ def begin_try(*, account: str, address: str) -> bool:
     key = _key(account, address)
     cache.add(key, 0, timeout=WINDOW_SECONDS)
     try:
-        return cache.incr(key) <= MOST_FAILURES
+        tries = cache.incr(key)
     except ValueError:  # the window ended between the two calls
         cache.add(key, 1, timeout=WINDOW_SECONDS)
         return True
+    if tries == 1:  # where the window ended within Redis's own two steps, the new count has no end yet
+        cache.touch(key, WINDOW_SECONDS)
+    return tries <= MOST_FAILURES
 
 
 def forget(*, account: str, address: str) -> None:

@@ -1,13 +1,38 @@
-"""Addresses of the pages."""
+"""Addresses of the pages: each module of views lists its own."""
 
-from django.urls import path
-
-from kinetics_db.web.views import account, home, project
+from kinetics_db.web.views import (
+    account,
+    datasets,
+    evidence,
+    files,
+    fits,
+    home,
+    materials,
+    mechanisms,
+    members,
+    project,
+    run_entry,
+    runs,
+    search,
+    tables,
+    tokens,
+)
 
 app_name = "web"
 urlpatterns = [
-    path("", home.home, name="home"),
-    path("login/", account.Login.as_view(), name="login"),
-    path("logout/", account.Logout.as_view(), name="logout"),
-    path("projects/<slug:slug>/", project.project, name="project"),
+    *home.urlpatterns,
+    *search.urlpatterns,
+    *account.urlpatterns,
+    *tokens.urlpatterns,
+    *project.urlpatterns,
+    *members.urlpatterns,
+    *materials.urlpatterns,
+    *run_entry.urlpatterns,
+    *runs.urlpatterns,
+    *files.urlpatterns,
+    *tables.urlpatterns,
+    *mechanisms.urlpatterns,
+    *datasets.urlpatterns,
+    *fits.urlpatterns,
+    *evidence.urlpatterns,
 ]

@@ -173,6 +173,30 @@ class ExperimentModel:
                 jacobian[:, column, factor] += signal[:, column]
         return signal, jacobian
 
+    def curve(self, values: Floats, times: Floats, settings: Settings, max_seconds: float) -> Floats | str:
+        """Signals at any times of the experiment's clock, shape (k, m), without derivatives; or why not."""
+        experiment = self.experiment
+        constants = self._local.held.copy()
+        constants[self._free] = values[self._at]
+        shift = 0.0 if self._shift is None else values[self._shift]
+        y, _, outcome = integrate(
+            self.network,
+            constants,
+            self._start(values)[0],
+            np.maximum(times + shift, experiment.start_time),
+            temperature=experiment.temperature,
+            rtol=settings.rtol,
+            max_steps=settings.max_steps,
+            max_seconds=max_seconds,
+            start_time=experiment.start_time,
+        )
+        if not outcome.ok:
+            return outcome.message
+        signal = y @ self._weights
+        for column, factors in self._signal_factors:
+            signal[:, column] *= math.prod(values[f] for f in factors)
+        return signal
+
     def _start(self, values: Floats) -> tuple[Floats, dict[int, dict[int, float]]]:
         """Start concentrations and, by species, their derivatives to the fitted scale of the parameters."""
         start = np.zeros(len(self.network.species))

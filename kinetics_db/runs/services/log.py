@@ -13,7 +13,8 @@ from kinetics_db.projects.services import lock_project
 from kinetics_db.provenance.services import note_write, recording, save_record
 from kinetics_db.runs.entry import RunEntry
 from kinetics_db.runs.models import Run, RunCharge, RunCondition, RunRevision
-from kinetics_db.runs.services.snapshot import Resolved, cleaned, resolve
+from kinetics_db.runs.services.cleaning import cleaned
+from kinetics_db.runs.services.snapshot import Resolved, resolve
 
 
 def log_run(*, user: User, project_id: int, entry: RunEntry) -> RunRevision:
@@ -99,8 +100,10 @@ def _next_revision(
     )
     RunCondition.objects.filter(run=run).delete()
     RunCondition.objects.bulk_create(
-        RunCondition(run=run, key=key[:140], value=value) for key, value in resolved.conditions.items()
+        RunCondition(run=run, key=key, value=value) for key, value in resolved.conditions.items()
     )
-    Run.objects.filter(pk=run.pk).update(latest_number=number)
-    run.latest_number = number
+    content = resolved.content
+    repeated = Run.objects.filter(project_id=run.project_id, code=content["replicate_of"]).first()
+    run.latest_number, run.control_kind, run.replicate_of = number, content["control_kind"], repeated
+    run.save(update_fields=["latest_number", "control_kind", "replicate_of"])
     return revision

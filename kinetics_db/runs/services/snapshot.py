@@ -6,18 +6,18 @@ The snapshot holds what was typed (``entered``) and what the engine reads (``sta
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Any
 
 from kinetics_db.engine import amounts
-from kinetics_db.engine.plain_text import plain_text
 from kinetics_db.engine.units import STORED_UNITS, convert, kind_of_unit, to_stored
 from kinetics_db.errors import InvalidInput, NotFound, Problem
 from kinetics_db.materials.selectors import compound_named, lot_named, stock_named
 from kinetics_db.materials.sources import Source
 from kinetics_db.runs.entry import CONTROL_KINDS, SECTIONS, Amount, ChargeEntry, RunEntry
 from kinetics_db.runs.models import Run
+from kinetics_db.runs.query import condition_key
 
 FORMAT = "ratewright/run/1"
 
@@ -34,7 +34,7 @@ class Resolved:
         """Numbers by which the run is searched."""
         found: dict[str, float] = {}
         for part in self.content["start"]:
-            key = f"c0:{part['compound']}"
+            key = condition_key(part["compound"], relative=self.content["basis"] == "relative")
             found[key] = found.get(key, 0.0) + part["concentration"]
         if self.content["temperature"]:
             found["temperature"] = self.content["temperature"]["value"]
@@ -43,78 +43,36 @@ class Resolved:
         return found
 
 
-def cleaned(entry: RunEntry) -> RunEntry:
-    """The entry with every text in its stored form; InvalidInput names what cannot be stored."""
-    problems: list[Problem] = []
-
-    def text(value: object, field_name: str, longest: int, *, lines: bool = False) -> str:
-        with _collected(problems, ""):
-            return plain_text(value, field=field_name, longest=longest, lines=lines)
-        return ""
-
-    def name(value: str | None, position: int) -> str | None:
-        return None if value is None else text(value, f"charges.{position}", 80)
-
-    charges = [
-        replace(
-            charge,
-            compound=name(charge.compound, i),
-            lot=name(charge.lot, i),
-            stock=name(charge.stock, i),
-            note=text(charge.note, f"charges.{i}.note", 1000, lines=True),
-        )
-        for i, charge in enumerate(entry.charges, start=1)
-    ]
-    sections = {
-        section: {
-            key: text(value, f"sections.{section}.{key}", 2000, lines=True)
-            if isinstance(value, str)
-            else value
-            for key, value in values.items()
-        }
-        for section, values in entry.sections.items()
-    }
-    clean = replace(
-        entry,
-        code=text(entry.code, "code", 80),
-        charges=charges,
-        atmosphere=text(entry.atmosphere, "atmosphere", 200),
-        started=text(entry.started, "started", 40),
-        replicate_of=text(entry.replicate_of, "replicate_of", 80),
-        control_kind=text(entry.control_kind, "control_kind", 80),
-        notes=text(entry.notes, "notes", 100_000, lines=True),
-        sections=sections,
-    )
-    if problems:
-        raise InvalidInput(problems)
-    return clean
-
-
 def resolve(entry: RunEntry, *, project_id: int) -> Resolved:
     """Check an entry, look up its materials and compute start concentrations with their causes of error.
 
     InvalidInput holds every problem found, each with its field ('charges.2.unit' counts charges from 1).
     """
-    problems = _plain_problems(entry, project_id)
-    sources = [_source(charge, i, project_id, problems) for i, charge in enumerate(entry.charges, start=1)]
+    resolved, problems = resolve_what_can_be(entry, project_id=project_id)
     if problems:
         raise InvalidInput(problems)
+    return resolved
+
+
+def resolve_what_can_be(entry: RunEntry, *, project_id: int) -> tuple[Resolved, list[Problem]]:
+    """As `resolve`, but with the problems beside what could be resolved in spite of them."""
+    problems = _plain_problems(entry, project_id)
+    sources = [_source(charge, i, project_id, problems) for i, charge in enumerate(entry.charges, start=1)]
     volume, assumed = _volume(entry, problems)
     temperature = _temperature(entry.temperature, problems)
-    start: list[dict[str, Any]] = []
     relative = [_kind(charge.amount.unit) == "relative" for charge in entry.charges]
+    start: list[dict[str, Any]] = []
+    for i, (charge, source) in enumerate(zip(entry.charges, sources, strict=True), start=1):
+        if source.records:
+            start += _start(charge, source, i, volume, problems)
     if any(relative) and not all(relative):
+        start = []
         problems.append(
             Problem(
                 "relative and absolute charges are mixed", field="charges", cure="all in percent, or none"
             )
         )
-    for i, (charge, source) in enumerate(zip(entry.charges, sources, strict=True), start=1):
-        start += _start(charge, source, i, volume, problems)
     sections = _sections(entry, problems)
-    if problems:
-        raise InvalidInput(problems)
-    first_contact = sections.get("clock", {}).get("first contact", {}).get("value", 0.0)
     content = {
         "format": FORMAT,
         "code": entry.code,
@@ -131,7 +89,7 @@ def resolve(entry: RunEntry, *, project_id: int) -> Resolved:
         if volume
         else None,
         "temperature": temperature,
-        "first_contact": first_contact,
+        "first_contact": sections.get("clock", {}).get("first contact", {}).get("value", 0.0),
         "atmosphere": entry.atmosphere,
         "started": entry.started,
         "replicate_of": entry.replicate_of,
@@ -140,7 +98,7 @@ def resolve(entry: RunEntry, *, project_id: int) -> Resolved:
         "sections": sections,
         "events": [],
     }
-    return Resolved(content, sources)
+    return Resolved(content, sources), problems
 
 
 def _plain_problems(entry: RunEntry, project_id: int) -> list[Problem]:
@@ -211,21 +169,24 @@ def _kind(unit: str) -> str:
 def _volume(entry: RunEntry, problems: list[Problem]) -> tuple[amounts.TotalVolume | None, bool]:
     """Total volume as entered, else the sum of the charged volumes (additivity assumed and flagged)."""
     if entry.total_volume is not None:
-        with _collected(problems, "total_volume"):
+        with collected(problems, "total_volume"):
             return _total(entry.total_volume), False
         return None, False
     kinds = [_kind(charge.amount.unit) for charge in entry.charges]
     if all(kind in ("concentration", "relative") for kind in kinds):
         return None, False
-    volumes = [charge.amount for charge, kind in zip(entry.charges, kinds, strict=True) if kind == "volume"]
-    if not volumes:
+    parts = []
+    for charge, kind in zip(entry.charges, kinds, strict=True):
+        if kind == "volume" and charge.amount.value > 0:
+            with collected([], ""):  # what is wrong with a charge is told at the charge itself
+                parts.append(_total(charge.amount))
+    if not parts:
         problems.append(
             Problem(
                 "the total volume is not known", field="total_volume", cure="a volume, for example 10.0 mL"
             )
         )
         return None, False
-    parts = [_total(volume) for volume in volumes if volume.value > 0]
     value = sum(part.value for part in parts)
     return amounts.TotalVolume(value, sum(part.standard_uncertainty**2 for part in parts) ** 0.5), True
 
@@ -240,7 +201,7 @@ def _total(amount: Amount) -> amounts.TotalVolume:
 def _temperature(amount: Amount | None, problems: list[Problem]) -> dict[str, float] | None:
     if amount is None:
         return None
-    with _collected(problems, "temperature"):
+    with collected(problems, "temperature"):
         value = float(convert(amount.value, amount.unit, "K"))
         if not 1.0 < value < 5000.0:
             raise InvalidInput(
@@ -260,7 +221,7 @@ def _start(
     problems: list[Problem],
 ) -> list[dict[str, Any]]:
     label = f"charge {position}"
-    with _collected(problems, f"charges.{position}"):
+    with collected(problems, f"charges.{position}"):
         entered = amounts.Charge(
             source.for_engine(),
             charge.amount.value,
@@ -285,6 +246,8 @@ def _start(
                 }
             ]
         parts = amounts.charge_contributions(entered, volume or amounts.TotalVolume(1.0), position)
+        if volume is None and _kind(charge.amount.unit) != "concentration":
+            return []  # no volume, no concentration; that it is missing is told at its own place
         return [
             {
                 "label": label,
@@ -320,7 +283,7 @@ def _sections(entry: RunEntry, problems: list[Problem]) -> dict[str, Any]:
             elif not isinstance(value, Amount):
                 problems.append(Problem("not a number with a unit", field=where, cure=f"a {kind}"))
             else:
-                with _collected(problems, where):
+                with collected(problems, where):
                     if kind_of_unit(value.unit) != kind:
                         raise InvalidInput(f"'{value.unit}' is no unit of {kind}")
                     unit = "Pa" if kind == "pressure" else STORED_UNITS[kind]
@@ -329,7 +292,7 @@ def _sections(entry: RunEntry, problems: list[Problem]) -> dict[str, Any]:
     return kept
 
 
-class _collected:  # noqa: N801  reads as a word in 'with'
+class collected:  # noqa: N801  reads as a word in 'with'
     """Collects InvalidInput of a block under a field, instead of ending the whole check."""
 
     def __init__(self, problems: list[Problem], where: str):

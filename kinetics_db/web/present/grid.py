@@ -1,4 +1,4 @@
-"""The evidence grid as the project page shows it."""
+"""The evidence as pages show it: the grid with its legend, and one line for each model version."""
 
 from __future__ import annotations
 
@@ -12,9 +12,10 @@ from kinetics_db.web.numbers import Shown, shown
 
 if TYPE_CHECKING:
     from kinetics_db.evidence.selectors import Cell, Grid, GridColumn
-    from kinetics_db.web.present.runs import RunSheet
+    from kinetics_db.runs.models import Run
 
 MOST_REASONS = 5
+VERDICTS = ("agrees", "consistent", "strained", "disagrees", "not tested")
 
 
 @dataclass(frozen=True)
@@ -32,8 +33,7 @@ class CellSheet:
 class RowSheet:
     """A run's verdicts, in the order of the columns."""
 
-    code: str
-    anchor: str
+    run: Run
     temperature: Shown | None
     cells: Sequence[CellSheet | None]
 
@@ -60,25 +60,57 @@ class GridSheet:
     """verdict, its class in the style sheet, what it means"""
 
 
-def grid_sheet(grid: Grid, runs: Sequence[RunSheet], thresholds: Mapping[str, float]) -> GridSheet:
-    """The grid in words and numbers; runs that no fit has used are left out."""
-    by_code = {run.code: run for run in runs}
-    limits = _limits(thresholds)
-    tried = {code for code, _ in grid.cells}
+@dataclass(frozen=True)
+class SummaryLine:
+    """One model version in short: its column, and how many runs got which verdict, the best verdict first."""
+
+    column: ColumnSheet
+    verdicts: Sequence[tuple[str, str, int]]
+    """verdict, its class in the style sheet, number of runs"""
+
+
+def grid_sheet(
+    grid: Grid,
+    runs: Sequence[Run],
+    temperatures: Mapping[int, Shown | None],
+    thresholds: Mapping[str, float],
+) -> GridSheet:
+    """The grid in words and numbers, a row for each of the runs; temperatures by run id."""
+    limits = limits_of(thresholds)
     rows = [
         RowSheet(
-            code=code,
-            anchor=by_code[code].anchor if code in by_code else "",
-            temperature=by_code[code].temperature if code in by_code else None,
-            cells=[_cell(code, grid.cells.get((code, column.fit_id)), limits) for column in grid.columns],
+            run=run,
+            temperature=temperatures.get(run.pk),
+            cells=[_cell(run.code, grid.cells.get((run.code, c.fit_id)), limits) for c in grid.columns],
         )
-        for code in grid.runs
-        if code in tried
+        for run in runs
     ]
     return GridSheet([_column(column) for column in grid.columns], rows, legend(limits))
 
 
-def _limits(thresholds: Mapping[str, float]) -> Thresholds:
+def summary_lines(
+    columns: Sequence[GridColumn], counts: Mapping[int, Mapping[str, int]]
+) -> list[SummaryLine]:
+    """Columns one below the other, those on the newest dataset first, there the best; counts by fit id."""
+
+    def key(column: GridColumn) -> tuple[int, float]:
+        newest = column.origin.dataset_id if column.origin is not None else 0
+        return -newest, column.delta_aicc if column.delta_aicc is not None else float("inf")
+
+    return [
+        SummaryLine(
+            _column(column),
+            [
+                (verdict, css_of(verdict), n)
+                for verdict in VERDICTS
+                if (n := counts.get(column.fit_id, {}).get(verdict, 0))
+            ],
+        )
+        for column in sorted(columns, key=key)
+    ]
+
+
+def limits_of(thresholds: Mapping[str, float]) -> Thresholds:
     """The defaults and what the project sets differently; a page that is only read passes over wrong names."""
     known = {f.name for f in fields(Thresholds)}
     return replace(Thresholds(), **{name: value for name, value in thresholds.items() if name in known})  # type: ignore[arg-type]

@@ -1,4 +1,4 @@
-"""Mechanism versions as the project page shows them: text, fits, constants with intervals."""
+"""A fit as pages show it: how far it is or how it ended, its constants with intervals."""
 
 from __future__ import annotations
 
@@ -8,13 +8,9 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from kinetics_db.engine.shown_numbers import interval, plain
-from kinetics_db.fits.selectors import result_of
 from kinetics_db.web.names import name_html
 from kinetics_db.web.numbers import Shown, shown
-from kinetics_db.web.present.runs import Curve
 from kinetics_db.web.words import message_text, place_shown
 
 if TYPE_CHECKING:
@@ -22,7 +18,6 @@ if TYPE_CHECKING:
 
     from kinetics_db.fits.models import Fit, FitResult
     from kinetics_db.jobs.models import Job
-    from kinetics_db.mechanisms.models import MechanismVersion
 
 _LEADING_NUMBER = re.compile(r"\d+(?:\.\d+)?")
 ENDED_WITHOUT_RESULT = ("failed", "crashed")
@@ -61,91 +56,10 @@ class FitSheet:
         return any(constant.remark for constant in self.constants)
 
 
-@dataclass(frozen=True)
-class ModelSheet:
-    """One mechanism version; ``fits`` holds the newest of each dataset, ``earlier`` counts the others."""
-
-    version: MechanismVersion
-    title: str
-    fits: Sequence[FitSheet]
-    earlier: int
-
-
-@dataclass(frozen=True)
-class FitsOfPage:
-    """The fits that a page needs, chosen once: newest first, with what is known of them."""
-
-    newest: Sequence[Fit]
-    earlier: Mapping[int, int]
-    """mechanism version id -> fits that a newer one on the same dataset replaces"""
-    results: Mapping[int, FitResult]
-    """fit id -> its result"""
-
-    @property
-    def curve_choices(self) -> list[Fit]:
-        """Fits that have curves, newest first."""
-        return [
-            fit
-            for fit in self.newest
-            if (result := self.results.get(fit.pk)) is not None and result.cost is not None
-        ]
-
-
-def fits_of_page(fits: Sequence[Fit]) -> FitsOfPage:
-    """From all fits, newest first: the newest of each mechanism version on each dataset."""
-    newest: dict[tuple[int, int], Fit] = {}
-    earlier: dict[int, int] = {}
-    for fit in fits:
-        key = (fit.mechanism_version_id, fit.dataset_id)
-        if key in newest:
-            earlier[fit.mechanism_version_id] = earlier.get(fit.mechanism_version_id, 0) + 1
-        else:
-            newest[key] = fit
-    chosen = list(newest.values())
-    results = {fit.pk: result for fit in chosen if (result := result_of(fit)) is not None}
-    return FitsOfPage(chosen, earlier, results)
-
-
-def model_sheets(
-    versions: Sequence[MechanismVersion],
-    fits: FitsOfPage,
-    jobs: Mapping[int, Job],
-    contents: Mapping[int, dict[str, Any]],
-) -> list[ModelSheet]:
-    """Every mechanism version with its fits; jobs by fit id, contents by result id."""
-    found = []
-    for version in versions:
-        sheets = [
-            _fit_sheet(fit, jobs.get(fit.pk), fits.results.get(fit.pk), contents)
-            for fit in fits.newest
-            if fit.mechanism_version_id == version.pk
-        ]
-        found.append(ModelSheet(version, str(version), sheets, fits.earlier.get(version.pk, 0)))
-    return found
-
-
-def curves_of(
-    content: Mapping[str, Any], casting: Mapping[str, str | None], table_ids: Sequence[int]
-) -> dict[int, Curve]:
-    """A result's model values by table id; ``casting`` says which observable each column was fitted as."""
-    curves = {}
-    for table_id, experiment in zip(table_ids, content.get("experiments", ()), strict=False):
-        model = np.array(experiment["model"], dtype=float)
-        names = experiment["observed_names"]
-        curves[table_id] = Curve(
-            np.array(experiment["times"], dtype=float),
-            {
-                column: model[:, names.index(observable)]
-                for column, observable in casting.items()
-                if observable in names and model.ndim == 2
-            },
-        )
-    return curves
-
-
-def _fit_sheet(
+def fit_sheet(
     fit: Fit, job: Job | None, result: FitResult | None, contents: Mapping[int, dict[str, Any]]
 ) -> FitSheet:
+    """One fit by its job, its result and the results' contents by id."""
     content = contents.get(result.pk, {}) if result is not None else {}
     is_open = job is not None and job.state in job.OPEN
     if job is not None and (is_open or result is None or job.state in ENDED_WITHOUT_RESULT):

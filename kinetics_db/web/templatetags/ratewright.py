@@ -10,7 +10,7 @@ from django.utils import timezone
 from django.utils.html import format_html
 from django.utils.safestring import SafeString
 
-from kinetics_db.web.words import dataset_text
+from kinetics_db.web.words import dataset_text, message_text
 
 if TYPE_CHECKING:
     from kinetics_db.datasets.models import Dataset
@@ -28,6 +28,12 @@ def when(moment: datetime | None) -> SafeString:
 
 
 @register.simple_tag
+def now_here() -> SafeString:
+    """The present moment in the reader's zone."""
+    return when(timezone.now())
+
+
+@register.simple_tag
 def digest(text: str) -> SafeString:
     """The beginning of a hash; the whole of it to point at."""
     return format_html('<code class="digest" title="SHA-256 {}">{}</code>', text, text[:10])
@@ -37,6 +43,12 @@ def digest(text: str) -> SafeString:
 def as_dataset(dataset: Dataset) -> str:
     """A dataset by name and version: "dataset 'all runs', version 1"."""
     return dataset_text(dataset)
+
+
+@register.filter
+def as_message(message: str) -> str:
+    """A message of the engine in the letters of a page."""
+    return message_text(message)
 
 
 @register.filter

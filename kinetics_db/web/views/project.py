@@ -1,90 +1,138 @@
-"""The one page of a project: what is under way, the evidence, the models, the runs."""
+"""A project at a glance: what to do next, what is under way, what the evidence says, the newest runs and fits."""
 
 from __future__ import annotations
 
-from typing import TYPE_CHECKING
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Any
 
 from django.http import HttpResponse
 from django.shortcuts import render
+from django.urls import path, reverse
+from django_htmx.http import HttpResponseClientRefresh
 
-from kinetics_db.datasets.selectors import table_ids_of
-from kinetics_db.evidence.selectors import Grid, grid_of
-from kinetics_db.fits.selectors import contents_of, fits_in
-from kinetics_db.jobs.selectors import jobs_for
+from kinetics_db.datasets.selectors import datasets_in
+from kinetics_db.evidence.selectors import grid_columns, verdict_counts
+from kinetics_db.fits.selectors import fit_lines, fits_under_way
+from kinetics_db.materials.selectors import compounds_in
+from kinetics_db.measurements.rows import run_rows
 from kinetics_db.measurements.selectors import current_tables_in
-from kinetics_db.mechanisms.selectors import versions_in
-from kinetics_db.projects.selectors import project_named, role_in
-from kinetics_db.runs.selectors import newest_revisions_in
+from kinetics_db.measurements.waiting import Waiting, waiting_in
+from kinetics_db.mechanisms.selectors import mechanisms_in
+from kinetics_db.projects.selectors import project_with_role
+from kinetics_db.runs.query import RUN_ORDERS, RunQuery, runs_found
 from kinetics_db.web.pages import ReadersRequest, page
-from kinetics_db.web.present.grid import grid_sheet
-from kinetics_db.web.present.models import FitsOfPage, curves_of, fits_of_page, model_sheets
-from kinetics_db.web.present.runs import run_sheets, units_of
+from kinetics_db.web.present.fits import line_sheets
+from kinetics_db.web.present.grid import summary_lines
+from kinetics_db.web.present.run_list import run_list
 
 if TYPE_CHECKING:
-    from kinetics_db.fits.models import Fit
+    from kinetics_db.accounts.models import User
+    from kinetics_db.projects.models import Project
 
-SECONDS_BETWEEN_LOOKS = 3
-HEAVY_OF_FITS = ("dataset__canonical", "mechanism_version__canonical")
-HEAVY_OF_TABLES = (
-    "signal_table__canonical",
-    "signal_table__blob",
-    "signal_table__file__canonical",
-    "reduction__canonical",
-)
+SECONDS_BETWEEN_LOOKS = 2
+MOST_UNDER_WAY = 10
+MOST_VERSIONS = 6
+MOST_RUNS = 8
+MOST_FITS = 5
 
 
 @page
 def project(request: ReadersRequest, slug: str) -> HttpResponse:
-    """Everything of a project on one page. ``?curve=`` chooses the fit whose curves are drawn, ``?hold`` stops
-    the page from loading itself again while fits are under way."""
+    """The newest of everything, the same amount of work however large the project is.
+
+    ``?hold`` keeps the page as it is while fits are under way.
+    """
     user = request.user
-    found = project_named(user=user, slug=slug)
-    revisions = list(newest_revisions_in(user=user, project_id=found.pk))
-    tables_found = (
-        current_tables_in(user=user, project_id=found.pk)
-        .select_related("signal_table__file__stored")
-        .defer(*HEAVY_OF_TABLES)
-    )
-    tables = [(record, record.table) for record in tables_found]
-    fits = fits_of_page(list(fits_in(user=user, project_id=found.pk).defer(*HEAVY_OF_FITS)))
-    jobs = jobs_for(kind="fit", subject_ids=[fit.pk for fit in fits.newest])
-    contents = contents_of(list(fits.results.values()))
-    grid = grid_of(user=user, project_id=found.pk)
-    drawn = _drawn_fit(request.GET.get("curve"), fits, grid)
-    curves = {}
-    if drawn is not None:
-        content = contents[fits.results[drawn.pk].pk]
-        curves = curves_of(content, drawn.content["casting"]["columns"], table_ids_of(drawn.dataset_id))
-    units = units_of(revisions, tables)
-    model_name = str(drawn.mechanism_version) if drawn is not None else ""
-    runs = run_sheets(revisions, tables, curves, units=units, model_name=model_name)
-    models = model_sheets(list(versions_in(user=user, project_id=found.pk)), fits, jobs, contents)
-    under_way = [fit for model in models for fit in model.fits if fit.is_open]
-    return render(
-        request,
-        "web/project.html",
-        {
-            "project": found,
-            "role": role_in(user=user, project_id=found.pk),
-            "runs": runs,
-            "models": models,
-            "grid": grid_sheet(grid, runs, found.verdict_thresholds),
-            "fits": {fit.pk: fit for fit in fits.newest},
-            "under_way": under_way,
-            "held": "hold" in request.GET,
-            "refresh": SECONDS_BETWEEN_LOOKS if under_way and "hold" not in request.GET else None,
-            "drawn": drawn,
-            "curve_choices": fits.curve_choices,
-        },
-    )
+    found, role = project_with_role(user=user, slug=slug)
+    runs = runs_found(user=user, query=RunQuery(), project_id=found.pk).order_by(*RUN_ORDERS["newest"])
+    rows = run_rows(runs[:MOST_RUNS])
+    waiting = waiting_in(user=user, project_id=found.pk)
+    chosen = grid_columns(user=user, project_id=found.pk, most=MOST_VERSIONS)
+    fits = list(fit_lines(user=user, project_id=found.pk)[:MOST_FITS])
+    judged = {column.fit_id for column in chosen.columns} | {fit.pk for fit in fits}
+    counts = verdict_counts(user=user, fit_ids=sorted(judged))
+    context = {
+        "project": found,
+        "role": role,
+        "may_write": role != "reader",
+        "steps": [] if fits else first_steps(user=user, project=found, has_runs=bool(rows), waiting=waiting),
+        "evidence": summary_lines(chosen.columns, counts),
+        "older": chosen.left_out,
+        "runs": run_list(rows),
+        "waiting": waiting,
+        "waiting_more": max(0, waiting.for_file + waiting.for_reduction - len(waiting.newest)),
+        "fits": line_sheets(fits, counts),
+        **_under_way(user, found, held="hold" in request.GET),
+    }
+    return render(request, "web/project.html", context)
 
 
-def _drawn_fit(asked: str | None, fits: FitsOfPage, grid: Grid) -> Fit | None:
-    """The fit whose curves are drawn: the one asked for ('none' draws none), else the newest that has the
-    lowest AICc among those compared with it, else the newest."""
-    choices = {str(fit.pk): fit for fit in fits.curve_choices}
-    if asked is not None:
-        return choices.get(asked)
-    best = (str(column.fit_id) for column in grid.columns if column.delta_aicc == 0.0)
-    leading = max((fit_id for fit_id in best if fit_id in choices), key=int, default=None)
-    return choices[leading] if leading is not None else next(iter(choices.values()), None)
+@page
+def under_way(request: ReadersRequest, slug: str) -> HttpResponse:
+    """The part of the page that follows the fits; the whole page anew when one has ended or begun."""
+    found, _ = project_with_role(user=request.user, slug=slug)
+    context = _under_way(request.user, found, held=False)
+    if str(context["open"]) != request.GET.get("open"):
+        return HttpResponseClientRefresh()
+    return render(request, "web/project/under_way.html", {"project": found, **context})
+
+
+def _under_way(user: User, project: Project, *, held: bool) -> dict[str, object]:
+    fits = list(fits_under_way(user=user, project_id=project.pk)[: MOST_UNDER_WAY + 1])
+    return {
+        "under_way": line_sheets(fits[:MOST_UNDER_WAY], {}),
+        "more_under_way": len(fits) > MOST_UNDER_WAY,
+        "open": "-".join(str(fit.pk) for fit in fits),
+        "held": held,
+        "seconds": SECONDS_BETWEEN_LOOKS,
+    }
+
+
+@dataclass(frozen=True)
+class Step:
+    """One step of a new project; ``address`` is where it is taken."""
+
+    words: str
+    address: str
+    is_done: bool
+    is_next: bool = False
+
+
+def first_steps(*, user: User, project: Project, has_runs: bool, waiting: Waiting) -> list[Step]:
+    """The way from an empty project to its first fit, and how far it has been gone."""
+    scope: dict[str, Any] = {"user": user, "project_id": project.pk}
+    tabulated = has_runs and current_tables_in(**scope).exists()
+    filed = tabulated or waiting.for_reduction > 0
+    entered = has_runs or compounds_in(**scope).exists()
+    first_waiting = waiting.newest[0].pk if waiting.newest else None
+    a_run = reverse("web:run", args=[first_waiting]) if first_waiting else _address("runs", project)
+    a_file = reverse("web:new-file", args=[first_waiting]) if first_waiting else _address("runs", project)
+    steps = (
+        (
+            "Enter the compounds, and the lots and stocks that you weigh from",
+            _address("materials", project),
+            entered,
+        ),
+        ("Log a run with its charges", _address("new-run", project), has_runs),
+        ("Give the run its instrument file", a_file, filed),
+        ("Reduce its signals to concentrations", a_run, tabulated),
+        ("Write a mechanism", _address("new-mechanism", project), mechanisms_in(**scope).exists()),
+        (
+            "Freeze concentration tables into a dataset",
+            _address("new-dataset", project),
+            datasets_in(**scope).exists(),
+        ),
+        ("Ask for a fit of the mechanism to the dataset", _address("new-fit", project), False),
+    )
+    undone = next(number for number, step in enumerate(steps) if not step[2])
+    return [Step(*step, is_next=number == undone) for number, step in enumerate(steps)]
+
+
+def _address(name: str, project: Project) -> str:
+    return reverse(f"web:{name}", args=[project.slug])
+
+
+urlpatterns = [
+    path("projects/<slug:slug>/", project, name="project"),
+    path("projects/<slug:slug>/under-way/", under_way, name="under-way"),
+]

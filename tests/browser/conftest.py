@@ -1,0 +1,89 @@
+"""A real browser for the pages; whatever it complains about fails the test."""
+
+from __future__ import annotations
+
+import os
+import shutil
+from collections.abc import Callable, Iterator
+from typing import Any
+
+import pytest
+from django.test import Client
+from playwright.sync_api import Browser, BrowserContext, Page, Request, sync_playwright
+
+# Playwright's calls run inside an event loop, where Django otherwise refuses its database.
+os.environ.setdefault("DJANGO_ALLOW_ASYNC_UNSAFE", "1")
+
+TELL_VIOLATIONS = """
+document.addEventListener("securitypolicyviolation", (event) => {
+  console.error(`content policy: ${event.violatedDirective} refused ${event.blockedURI} ${event.sourceFile ?? ""}`);
+});
+"""
+WINDOW: Any = {"width": 1280, "height": 900}
+
+
+@pytest.fixture(scope="session")
+def chromium() -> Iterator[Browser]:
+    """The browser of the whole session: $CHROMIUM, or `chromium` of the path."""
+    path = os.environ.get("CHROMIUM") or shutil.which("chromium") or shutil.which("chromium-browser")
+    assert path, "no browser: put chromium on the path or its file into CHROMIUM"
+    with sync_playwright() as playwright:
+        browser = playwright.chromium.launch(executable_path=path, args=["--no-sandbox"])
+        yield browser
+        browser.close()
+
+
+@pytest.fixture
+def server_address(live_server: Any) -> str:
+    """Where the pages are; tests that need no database put a server of their own in its place."""
+    return str(live_server.url)
+
+
+@pytest.fixture
+def open_page(chromium: Browser, server_address: str) -> Iterator[Callable[..., Page]]:
+    """Open a page of the server in a window of its own: ``open_page("/runs/3/", color_scheme="dark")``.
+
+    ``user`` is logged in first. Errors on the console, breaches of the content policy, exceptions of scripts and
+    requests that fail make the test fail at its end.
+    """
+    contexts: list[BrowserContext] = []
+    complaints: list[str] = []
+
+    def opened(path: str, *, user: Any = None, **options: Any) -> Page:
+        context = chromium.new_context(base_url=server_address, **{"viewport": WINDOW, **options})
+        contexts.append(context)
+        if user is not None:
+            log_in(context, user, server_address)
+        context.add_init_script(TELL_VIOLATIONS)
+        page = context.new_page()
+        watch(page, complaints)
+        page.goto(path)
+        return page
+
+    yield opened
+    for context in contexts:
+        context.close()
+    assert not complaints, complaints
+
+
+def watch(page: Page, complaints: list[str]) -> None:
+    """Write down everything that the browser complains about."""
+    page.set_default_timeout(10_000)
+    page.on("console", lambda m: complaints.append(m.text) if m.type in ("error", "warning") else None)
+    page.on("pageerror", lambda error: complaints.append(str(error)))
+    page.on(
+        "requestfailed", lambda request: complaints.append(failure(request)) if failure(request) else None
+    )
+
+
+def failure(request: Request) -> str:
+    """Why a request failed; a download is no failure, though the page does not get its answer."""
+    reason = str(request.failure or "")
+    return "" if reason == "net::ERR_ABORTED" else f"{request.url}: {reason}"
+
+
+def log_in(context: BrowserContext, user: Any, address: str) -> None:
+    """Give the browser the session of somebody who has logged in."""
+    client = Client()
+    client.force_login(user)
+    context.add_cookies([{"name": "sessionid", "value": client.cookies["sessionid"].value, "url": address}])
