@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
+from dataclasses import replace
 from typing import TYPE_CHECKING, Any
 
 from django.urls import path
@@ -17,6 +18,7 @@ from api.pagination import link_header, requested_page
 from api.queries import PROJECT, project_in
 from api.run_shapes import VersionName
 from api.schema import PAGE_PARAMETERS, operation
+from kinetics_db.errors import InvalidInput
 from kinetics_db.evidence.selectors import GridColumn, grid_columns, grid_of, tried_run_ids
 from kinetics_db.projects.selectors import project_with_role, roles_remembered
 from kinetics_db.runs.query import RunQuery, runs_found
@@ -92,7 +94,7 @@ class EvidenceGrid(ApiView):
     def get(self, request: Request) -> Response:
         params = self.params(request, "project", "mechanism", "q", paged=True)
         slug, user = project_in(params), request.user
-        query = RunQuery.from_text(params.get("q", ""))
+        query = _query(params.get("q", ""))
         with roles_remembered():
             project, _ = project_with_role(user=user, slug=slug)
             chosen = grid_columns(
@@ -112,6 +114,13 @@ class EvidenceGrid(ApiView):
         if links := link_header(request, page):
             response["Link"] = links
         return response
+
+
+def _query(text: str) -> RunQuery:
+    try:
+        return RunQuery.from_text(text)
+    except InvalidInput as error:
+        raise InvalidInput([replace(problem, field="q") for problem in error.problems]) from error
 
 
 def _column(column: GridColumn) -> dict[str, Any]:

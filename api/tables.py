@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Any
 from django.http.response import HttpResponseBase
 from django.urls import path, reverse
 from drf_spectacular.types import OpenApiTypes
-from drf_spectacular.utils import OpenApiParameter
+from drf_spectacular.utils import OpenApiParameter, PolymorphicProxySerializer
 from rest_framework.request import Request
 from rest_framework.response import Response
 
@@ -22,6 +22,7 @@ from api.schema import operation
 from api.table_shapes import (
     NewSupersession,
     NewTable,
+    ReducedPreview,
     ShownTable,
     TableDetail,
     plain_reduced,
@@ -42,6 +43,11 @@ LONGEST_RECIPE = 100_000
 """Characters; a recipe for hundreds of signals has a tenth of them."""
 
 
+TABLE_OR_PREVIEW = PolymorphicProxySerializer(
+    "TableOrPreview", serializers=[TableDetail, ReducedPreview], resource_type_field_name=None
+)
+
+
 class Tables(ApiView):
     """Concentration tables of a run."""
 
@@ -60,7 +66,7 @@ class Tables(ApiView):
 
     @operation(
         "reduce_signals", tag="measurements", status=(200, 201), takes=NewTable, keyed=True,
-        answers=TableDetail, summary="Reduce signals to concentrations by a recipe",
+        answers=TABLE_OR_PREVIEW, summary="Reduce signals to concentrations by a recipe",
         params=[OpenApiParameter("preview", OpenApiTypes.BOOL, description="compute only, keep nothing")],
         description="201 with the Location of the concentration table, 200 when the same reduction of the same "
         "signals is there already. With preview=true nothing is kept: 200 with what the recipe gives (its "

@@ -12,7 +12,13 @@ import numpy as np
 from kinetics_db.accounts.models import User
 from kinetics_db.engine.canonical import canonical_json, sha256_hex
 from kinetics_db.engine.tables import Column, Table
-from kinetics_db.measurements.models import ConcentrationTable, InstrumentFile, Reduction, SignalTable
+from kinetics_db.measurements.models import (
+    ConcentrationTable,
+    InstrumentFile,
+    Reduction,
+    SignalTable,
+    TableColumn,
+)
 from kinetics_db.provenance.models import StoredBytes
 from kinetics_db.runs.entry import Amount
 from kinetics_db.runs.models import Run, RunCondition, RunRevision
@@ -21,6 +27,14 @@ from tests.factories.flow import make_run
 
 FIRST_DAY = datetime(2026, 1, 1, tzinfo=UTC)
 EVERY = timedelta(minutes=17)
+POINTS = 40
+SIGMA = 1e-4
+"""Standard uncertainty of each value of the tables, mol/L."""
+COLUMNS = (
+    Column("time", "s", "time"),
+    Column("A", "mol/L", "concentration"),
+    Column("A", "mol/L", "standard uncertainty"),
+)
 
 
 def concentration(i: int) -> float:
@@ -114,6 +128,7 @@ def _made_when_they_say() -> Iterator[None]:
 
 
 def _make_tables(user: User, project_id: int, runs: list[Run]) -> None:
+    """For each run a file, its signals and a table: [A] falls with a half-life of some minutes, with noise."""
     if not runs:
         return
     stored = StoredBytes.objects.create(sha256=sha256_hex(b"many runs"), size=9)
@@ -124,24 +139,46 @@ def _make_tables(user: User, project_id: int, runs: list[Run]) -> None:
     files = InstrumentFile.objects.bulk_create(
         InstrumentFile(project_id=project_id, run=run, stored=stored, name="many.csv", **same) for run in runs
     )
-    times = np.linspace(0.0, 3600.0, 40)
-    columns = (
-        Column("time", "s", "time"),
-        Column("A", "mol/L", "concentration"),
-        Column("A", "mol/L", "standard uncertainty"),
-    )
-    values = np.column_stack([times, 0.1 * np.exp(-times / 1000), np.full(40, 1e-4)])
-    blob = Table(columns, values).to_bytes()
-    extent = {"blob": blob, "rows": 40, "first_time": 0.0, "last_time": 3600.0}
+    extents = [_extent(i) for i in range(len(runs))]
     signals = SignalTable.objects.bulk_create(
-        SignalTable(file=file, number=1, reader="delimited text", **extent, **same) for file in files
+        SignalTable(file=file, number=1, reader="delimited text", **extent, **same)
+        for file, extent in zip(files, extents, strict=True)
     )
-    ConcentrationTable.objects.bulk_create(
+    tables = ConcentrationTable.objects.bulk_create(
         ConcentrationTable(
-            run=run, signal_table=table, reduction=reduction, number=1, basis="mol/L", **extent, **same
+            run=run, signal_table=table, reduction=reduction, number=1, basis="mol/L", created_by=user,
+            **extent, **_record(_content_of_table(extent["blob"], run)),
         )
-        for run, table in zip(runs, signals, strict=True)
+        for run, table, extent in zip(runs, signals, extents, strict=True)
+    )  # fmt: skip
+    TableColumn.objects.bulk_create(
+        TableColumn(table=table, name="A", unit="mol/L", values=POINTS) for table in tables
     )
+
+
+def _extent(i: int) -> dict[str, Any]:
+    """The numbers of the i-th table and where they begin and end."""
+    times = np.linspace(0.0, 3600.0, POINTS)
+    rate = 1e-3 * np.exp(6000 * (1 / 313.15 - 1 / kelvin(i)))
+    noise = np.random.default_rng(i).normal(0.0, SIGMA, POINTS)
+    values = np.column_stack([times, concentration(i) * np.exp(-rate * times) + noise, np.full(POINTS, SIGMA)])
+    return {
+        "blob": Table(COLUMNS, values).to_bytes(),
+        "rows": POINTS,
+        "first_time": 0.0,
+        "last_time": 3600.0,
+    }
+
+
+def _content_of_table(blob: bytes, run: Run) -> dict[str, Any]:
+    return {
+        "format": "ratewright/concentration-table/1",
+        "basis": "mol/L",
+        "notes": [],
+        "scale_errors": [],
+        "run": run.code,
+        "table": sha256_hex(blob),
+    }
 
 
 def _record(content: dict[str, Any]) -> dict[str, Any]:

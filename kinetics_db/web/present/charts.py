@@ -192,7 +192,7 @@ def residuals(
 def positions_of(names: Iterable[str]) -> dict[str, int]:
     """Colour and marker by name, in order of first appearance.
 
-    Give the project's compounds before the columns of a table, then a species looks the same on every page.
+    What was measured, in the order of the tables: a species then looks the same wherever tables of one kind stand.
     """
     return {name: i for i, name in enumerate(dict.fromkeys(names))}
 

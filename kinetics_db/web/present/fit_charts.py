@@ -37,7 +37,7 @@ def charts_of_runs(
     curves = dict(enumerate(curves_of_fit(fit=fit, result=result, points=CURVE_POINTS), start=1))
     experiments = dict(enumerate(content.get("experiments", ()), start=1))
     units = units_of((), [(item.table, run.table) for item, run in zip(data.items, data.runs, strict=True)])
-    positions = positions_of([*data.compounds, *data.columns])
+    positions = positions_of(data.columns)
     casting = fit.content["casting"]["columns"]
     found = {}
     for position in chosen:

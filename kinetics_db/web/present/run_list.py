@@ -60,7 +60,7 @@ def run_list(rows: Sequence[RunRow]) -> RunList:
     )
     tables = {row.run.pk: row.table.table for row in rows if row.table is not None}
     columns = (name for table in tables.values() for name in table.names("concentration"))
-    positions = positions_of([*(part.compound for row in rows for part in row.starts), *columns])
+    positions = positions_of(columns)
     lines = [_line(row, compounds, units, tables.get(row.run.pk), positions) for row in rows]
     return RunList(compounds, units.concentration, lines, any(line.others for line in lines))
 

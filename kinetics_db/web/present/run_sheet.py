@@ -57,7 +57,7 @@ def run_page(sheet: RunSheet, tables: Sequence[ConcentrationTable]) -> RunPage:
     units = units_of([sheet.revision], current)
     starts = start_concentrations(content)
     columns = (name for _, table in current for name in table.names("concentration"))
-    positions = positions_of([*(part.compound for part in starts), *columns])
+    positions = positions_of(columns)
     charts = [
         (
             record,

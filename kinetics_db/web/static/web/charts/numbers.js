@@ -31,7 +31,8 @@ export function withUncertainty(value, u) {
 
 /** Numbers at ticks that stand a step apart. */
 export function atTicks(ticks, step) {
-  const decimals = Math.max(0, -powerOf(step));
+  const digits = Number((step / 10 ** powerOf(step)).toPrecision(6)); // 0.25 needs a digit more than 0.2
+  const decimals = Math.max(0, -powerOf(step) + (Number.isInteger(digits) ? 0 : 1));
   const largest = Math.max(...ticks.map(Math.abs));
   const power = powerOf(largest);
   if (decimals > 5 || largest >= 1e6) {
