@@ -30,7 +30,7 @@ endif
 
 .DEFAULT_GOAL := help
 .NOTPARALLEL:
-.PHONY: help demo serve test check check-slow static test-postgresql test-sqlite format lock clean development
+.PHONY: help demo serve screens test check check-slow static test-postgresql test-sqlite format lock clean development
 
 help: ## list what can be made
 	@echo "Ratewright. What you can make:"
@@ -47,6 +47,9 @@ serve: ## the same installation without invented data, until Ctrl-C
 	@$(PYTHON) $(PROCESSES)/preflight.py serve
 	@$(PYTHON) $(PROCESSES)/install.py runtime
 	@$(BIN)/python manage.py serve --port $(or $(PORT),8765)
+
+screens: development ## pictures of every page in docs/screens, taken in the invented project
+	$(BIN)/python -m tests.browser.screens
 
 test: static test-postgresql test-sqlite ## static checks and the whole suite, on real servers
 

@@ -20,6 +20,8 @@ from api.etags import CHECKED, IMMUTABLE, etag_of, etag_of_bytes, is_known
 from api.pagination import PARAMS, link_header, requested_page
 from api.parsers import unstorable
 from kinetics_db.errors import InvalidInput, NotFound, Problem
+from kinetics_db.provenance.remembered import Remembered
+from kinetics_db.provenance.selectors import head_of_record
 
 
 class ApiView(APIView):
@@ -45,8 +47,9 @@ class ApiView(APIView):
     def finalize_response(
         self, request: Request, response: HttpResponseBase, *args: Any, **kwargs: Any
     ) -> HttpResponseBase:
-        if isinstance(response, Response) and response.content_type == MEDIA_TYPE:
-            # A problem is JSON whatever form the answer would have had.
+        described = request.method == "OPTIONS"
+        if isinstance(response, Response) and (described or response.content_type == MEDIA_TYPE):
+            # A problem, or what an address takes, is JSON whatever form the answer would have had.
             request.accepted_renderer, request.accepted_media_type = JSONRenderer(), "application/json"
         response = super().finalize_response(request, response, *args, **kwargs)
         patch_vary_headers(response, ("Accept", "Authorization", "Cookie"))
@@ -84,6 +87,29 @@ class ApiView(APIView):
         page = requested_page(request, queryset, order=order)
         response = Response({"items": list(shown(page.items))})
         if links := link_header(request, page):
+            response["Link"] = links
+        return response
+
+    def remembered(
+        self, request: Request, answers: Remembered[tuple[bytes, str]], build: Callable[[], Response]
+    ) -> HttpResponseBase:
+        """What ``build`` answers with JSON, made anew only when something was written since.
+
+        Only for what the record alone decides, and the person, the token's limits and the address.
+        """
+        media_type = request.accepted_media_type
+        key = (request.user.pk, request.user.limits, request.build_absolute_uri(), media_type)
+
+        def made() -> tuple[bytes, str]:
+            response = build()
+            data = request.accepted_renderer.render(response.data, media_type, self.get_renderer_context())
+            return data, response.get("Link", "")
+
+        data, links = answers.get(key, head=head_of_record(), make=made)
+        response = self.conditional(
+            request, lambda: HttpResponse(data, content_type="application/json"), etag=etag_of_bytes(data)
+        )
+        if links:
             response["Link"] = links
         return response
 

@@ -154,20 +154,26 @@ class TidyTable(NumbersView):
     )  # fmt: skip
     def get(self, request: Request, dataset_id: int, form: str) -> HttpResponseBase:
         self.params(request)
-        dataset = dataset_by_id(user=request.user, dataset_id=dataset_id)
-        about = {
-            "dataset": dataset.pk,
-            "name": dataset.name,
-            "number": dataset.number,
-            "basis": dataset.basis,
-            "digest": dataset.digest,
-        }
-        return self.conditional(
-            request,
-            lambda: tabular(request, Tabular(tidy_columns(user=request.user, dataset_id=dataset.pk), about)),
-            etag=etag_of(request.accepted_renderer.format, "tidy", dataset.pk, dataset.digest),
-            immutable=True,
-        )
+        with roles_remembered():
+            dataset = dataset_by_id(user=request.user, dataset_id=dataset_id)
+            return self.conditional(
+                request,
+                lambda: tabular(
+                    request, Tabular(tidy_columns(user=request.user, dataset=dataset), _about(dataset))
+                ),
+                etag=etag_of(request.accepted_renderer.format, "tidy", dataset.pk, dataset.digest),
+                immutable=True,
+            )
+
+
+def _about(dataset: Dataset) -> dict[str, Any]:
+    return {
+        "dataset": dataset.pk,
+        "name": dataset.name,
+        "number": dataset.number,
+        "basis": dataset.basis,
+        "digest": dataset.digest,
+    }
 
 
 def _windows(body: Body) -> dict[int, Window]:

@@ -6,7 +6,7 @@ from dataclasses import replace
 from typing import Any
 
 from django.conf import settings
-from django.http import HttpResponse
+from django.http import HttpResponse, QueryDict
 from django.http.response import HttpResponseBase
 from django.urls import path, reverse
 from django.utils.http import content_disposition_header
@@ -189,7 +189,8 @@ def _form(request: Request) -> tuple[Any, dict[str, str]]:
     if len(sent) != 1:
         message = "is missing" if not sent else f"{len(sent)} files"
         problems.append(Problem(message, field="file", cure="one file, as multipart/form-data"))
-    for field, values in request.data.lists():
+    # Without a single byte there is no form, whatever the media type.
+    for field, values in request.data.lists() if isinstance(request.data, QueryDict) else ():
         if field not in FIELDS:
             problems.append(Problem("unknown name", field=field[:80], cure=", ".join(FIELDS)))
         elif field != "file" and (len(values) != 1 or not isinstance(values[0], str)):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
+from functools import partial
 from typing import TYPE_CHECKING, Any
 
 from django.http import HttpResponse
@@ -35,6 +36,7 @@ from kinetics_db.errors import InvalidInput
 from kinetics_db.evidence.explanations import explanations_of_run
 from kinetics_db.measurements.rows import run_rows
 from kinetics_db.projects.selectors import project_named, roles_remembered
+from kinetics_db.provenance.remembered import Remembered
 from kinetics_db.runs.plain import entry_from_plain, entry_to_plain
 from kinetics_db.runs.query import RUN_ORDERS, RunQuery, runs_found
 from kinetics_db.runs.query_params import PARAMETERS
@@ -43,6 +45,10 @@ from kinetics_db.runs.services import log_run, revise_run, seal_run
 
 if TYPE_CHECKING:
     from kinetics_db.runs.models import Run, RunRevision
+
+
+LISTS: Remembered[tuple[bytes, str]] = Remembered(200)
+"""Pages of the list as JSON with their links: runs, tables, projects, roles and accounts are all audited."""
 
 
 class MergePatchParser(StrictJSONParser):
@@ -64,14 +70,20 @@ class Runs(ApiView):
         "list_runs", tag="runs", summary="Find runs", answers=RunInList, params=FILTERS, paged=True,
         description="Everything stated must hold; without filters all runs of your projects, the newest first.",
     )  # fmt: skip
-    def get(self, request: Request) -> Response:
+    def get(self, request: Request) -> HttpResponseBase:
+        return self.remembered(request, LISTS, partial(self._found, request))
+
+    def _found(self, request: Request) -> Response:
         query = RunQuery.from_params(request.query_params, ignore=(*PARAMS, "order"))
         order = RUN_ORDERS.get(request.query_params.get("order", "newest"))
         if order is None:
             raise InvalidInput("unknown order", field="order", cure=", ".join(RUN_ORDERS))
         runs = runs_found(user=request.user, query=query)
         return self.listed(
-            request, runs, order=order, shown=lambda rows: [plain_row(r) for r in run_rows(rows)]
+            request,
+            runs,
+            order=order,
+            shown=lambda rows: [plain_row(r) for r in run_rows(rows, numbers=False)],
         )
 
     @operation(

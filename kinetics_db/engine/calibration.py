@@ -37,7 +37,7 @@ __all__ = [
 
 WEAK_SIGNAL = 10.0
 MIN_POINTS_FOR_SCATTER = 8
-MAX_WEAK_POINTS = 50_000
+MOST_DRAWN = 200_000_000  # weak readings times draws; some ten seconds
 
 Floats = NDArray[np.float64]
 
@@ -137,9 +137,11 @@ def reduce_internal_standard(signals: Table, recipe: InternalStandard) -> Concen
             )
         weak_at = np.flatnonzero(weak & np.isfinite(u))
         weak_points += weak_at.size
-        if weak_points > MAX_WEAK_POINTS:
-            message = f"more than {MAX_WEAK_POINTS} readings are below {WEAK_SIGNAL:g} times their noise"
-            raise InvalidInput(message, field="signals", cure="average neighbouring readings first")
+        if weak_points * recipe.draws > MOST_DRAWN:
+            message = f"{weak_points} or more readings are below {WEAK_SIGNAL:g} times their noise"
+            affordable = int(MOST_DRAWN // weak_points) // 1000 * 1000
+            fewer = f", or {affordable} draws" if affordable >= 1000 else ""
+            raise InvalidInput(message, field="signals", cure=f"average neighbouring readings first{fewer}")
         for i in weak_at:
             u[i] = _drawn(reading[i], noise[signal.signal][i], standard[i], standard_noise[i], normal)
         values.append(scale * (reading / standard))

@@ -42,7 +42,7 @@ def _pieces(found: QuerySet[Run], order: tuple[str, ...], compounds: tuple[str, 
     cursor: str | None = ""
     while cursor is not None:
         page = page_of(found, order=order, cursor=cursor, size=LARGEST_SIZE)
-        yield _csv([_line(row, compounds) for row in run_rows(page.items)])
+        yield _csv([_line(row, compounds) for row in run_rows(page.items, numbers=False)])
         cursor = page.next
 
 

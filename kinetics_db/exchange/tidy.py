@@ -10,13 +10,18 @@ from dataclasses import astuple, dataclass, fields
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
+from numpy.typing import NDArray
 
-from kinetics_db.datasets.selectors import dataset_by_id
-from kinetics_db.fits.experiments import data_of, reason_left_out, rows_in_window
+from kinetics_db.datasets.selectors import dataset_by_id, numbers_of
+from kinetics_db.engine.tables import Table
+from kinetics_db.fits.experiments import RunOfFit, reason_left_out, rows_in_window
+from kinetics_db.projects.selectors import require_reader
 
 if TYPE_CHECKING:
     from kinetics_db.accounts.models import User
+    from kinetics_db.datasets.models import Dataset
 
+Floats = NDArray[np.float64]
 ROWS_AT_ONCE = 1000
 FORMULA_STARTS = ("=", "+", "-", "@", "\t", "\r")
 
@@ -39,29 +44,64 @@ class TidyRow:
     left_out: str
 
 
-def tidy_rows(*, user: User, dataset_id: int) -> Iterator[TidyRow]:
-    """What a dataset chooses, run by run, column by column, in order of time."""
-    dataset = dataset_by_id(user=user, dataset_id=dataset_id)
-    data = data_of(dataset)
-    for item, run in zip(data.items, data.runs, strict=True):
-        table = run.table
+@dataclass(frozen=True, eq=False)
+class _Piece:
+    """One column of one run's table: what is the same for all its values, and the values, shape (n,), NaN 'missing'."""
+
+    run: str
+    run_revision: int
+    table: int
+    column: str
+    unit: str
+    times: Floats
+    values: Floats
+    sigmas: Floats
+    left_out: Sequence[str]
+
+
+def _pieces(dataset: Dataset) -> Iterator[_Piece]:
+    for item, frozen in zip(numbers_of(dataset), dataset.content["items"], strict=True):
+        table = Table.from_bytes(bytes(item.blob))
+        run = RunOfFit(item.code, {}, table, (), frozen["window"])
         tabulated = table.names("standard uncertainty")
         rows = np.flatnonzero(rows_in_window(run))
+        missing = np.full(rows.size, np.nan)
         for column in run.columns:
-            values = table.column(column, "concentration")
-            sigma = table.column(column, "standard uncertainty") if column in tabulated else None
-            for row in rows:
-                yield TidyRow(
-                    run=run.code,
-                    run_revision=item.run_revision.number,
-                    table=item.table.number,
-                    time_s=float(table.times[row]),
-                    column=column,
-                    value=_finite(values[row]),
-                    standard_uncertainty=None if sigma is None else _finite(sigma[row]),
-                    unit=table.columns[table.index(column, "concentration")].unit,
-                    left_out=reason_left_out(run, column, int(row)),
-                )
+            yield _Piece(
+                run=run.code,
+                run_revision=item.run_revision,
+                table=item.table,
+                column=column,
+                unit=table.columns[table.index(column, "concentration")].unit,
+                times=table.times[rows],
+                values=table.column(column, "concentration")[rows],
+                sigmas=table.column(column, "standard uncertainty")[rows] if column in tabulated else missing,
+                left_out=_reasons(run, column, rows.tolist()),
+            )
+
+
+def _reasons(run: RunOfFit, column: str, rows: Sequence[int]) -> Sequence[str]:
+    if not run.window["left_out"]:
+        return [""] * len(rows)
+    return [reason_left_out(run, column, row) for row in rows]
+
+
+def tidy_rows(*, user: User, dataset_id: int) -> Iterator[TidyRow]:
+    """What a dataset chooses, run by run, column by column, in order of time."""
+    for piece in _pieces(dataset_by_id(user=user, dataset_id=dataset_id)):
+        numbers = (piece.times.tolist(), piece.values.tolist(), piece.sigmas.tolist(), piece.left_out)
+        for time, value, sigma, reason in zip(*numbers, strict=True):
+            yield TidyRow(
+                run=piece.run,
+                run_revision=piece.run_revision,
+                table=piece.table,
+                time_s=time,
+                column=piece.column,
+                value=_finite(value),
+                standard_uncertainty=_finite(sigma),
+                unit=piece.unit,
+                left_out=reason,
+            )
 
 
 @dataclass(frozen=True, eq=False)
@@ -73,15 +113,29 @@ class TidyColumn:
     unit: str = ""
 
 
-def tidy_columns(*, user: User, dataset_id: int) -> list[TidyColumn]:
-    """The same rows, column by column."""
-    rows = list(tidy_rows(user=user, dataset_id=dataset_id))
-    floats = ("time_s", "value", "standard_uncertainty")
-    found = []
-    for f in fields(TidyRow):
-        values: Sequence[Any] = [getattr(row, f.name) for row in rows]
-        found.append(TidyColumn(f.name, np.array(values, dtype=float) if f.name in floats else values))
-    return found
+def tidy_columns(*, user: User, dataset: Dataset) -> list[TidyColumn]:
+    """The same rows, column by column: an array for what is measured, a list for what is named."""
+    require_reader(user=user, project_id=dataset.project_id)
+    pieces = list(_pieces(dataset))
+
+    def repeated(name: str) -> list[Any]:
+        return [value for piece in pieces for value in [getattr(piece, name)] * piece.times.size]
+
+    def joined(name: str) -> Floats:
+        found = np.concatenate([np.empty(0), *(getattr(piece, name) for piece in pieces)])
+        return np.where(np.isfinite(found), found, np.nan)
+
+    return [
+        TidyColumn("run", repeated("run")),
+        TidyColumn("run_revision", repeated("run_revision")),
+        TidyColumn("table", repeated("table")),
+        TidyColumn("time_s", joined("times")),
+        TidyColumn("column", repeated("column")),
+        TidyColumn("value", joined("values")),
+        TidyColumn("standard_uncertainty", joined("sigmas")),
+        TidyColumn("unit", repeated("unit")),
+        TidyColumn("left_out", [reason for piece in pieces for reason in piece.left_out]),
+    ]
 
 
 def tidy_csv(*, user: User, dataset_id: int) -> str:
@@ -104,7 +158,7 @@ def tidy_csv_pieces(*, user: User, dataset_id: int) -> Iterator[str]:
 
 
 def _finite(value: float) -> float | None:
-    return float(value) if math.isfinite(value) else None
+    return value if math.isfinite(value) else None
 
 
 def _cell(value: object) -> object:

@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
-from django.db.models import Count, Exists, OuterRef, Subquery
+from django.db.models import Count, OuterRef, Subquery
 from django.db.models.functions import Coalesce
 
 from kinetics_db.measurements.models import ConcentrationTable, InstrumentFile
@@ -45,45 +45,53 @@ class RunRow:
         return not self.tables
 
 
-def run_rows(runs: Iterable[Run]) -> list[RunRow]:
-    """Rows of runs that somebody may see, in their order, in two queries.
+def run_rows(runs: Iterable[Run], *, numbers: bool = True) -> list[RunRow]:
+    """Rows of runs that somebody may see, in their order, in one query.
 
-    The runs come from `runs.query.runs_found`, which has checked that, with what ``RunRow.run`` names.
+    The runs come from `runs.query.runs_found`, which has checked that, with what ``RunRow.run`` names. Without
+    ``numbers`` no table is read.
     """
     runs = list(runs)
-    ids = [run.pk for run in runs]
-    revisions = newest_revisions(ids).annotate(
+    revisions = newest_revisions([run.pk for run in runs]).annotate(
         files=_count(InstrumentFile.objects.filter(run=OuterRef("run"))),
         tables=_count(ConcentrationTable.objects.filter(run=OuterRef("run"))),
+        **(_of_newest_table() if numbers else {}),
     )
-    by_run = {revision.run_id: revision for revision in revisions}
-    tables = newest_tables(ids)
-    rows = []
-    for run in runs:
-        revision = by_run[run.pk]
-        content = revision.content
-        temperature = content["temperature"] or {}
-        rows.append(
-            RunRow(
-                run=run,
-                temperature=temperature.get("value"),
-                temperature_u=temperature.get("u"),
-                starts=start_concentrations(content),
-                basis=content["basis"],
-                files=revision.files,
-                tables=revision.tables,
-                table=tables.get(run.pk),
-            )
-        )
-    return rows
+    by_run = {revision.run_id: revision for revision in revisions.defer("digest", "created", "reason")}
+    return [_row(run, by_run[run.pk]) for run in runs]
 
 
-def newest_tables(run_ids: Sequence[int]) -> dict[int, ConcentrationTable]:
-    """The newest table of each run that no other one supersedes, with its numbers, by run id, in one query."""
-    current = ConcentrationTable.objects.filter(superseded_by__isnull=True)
-    newer = current.filter(run=OuterRef("run"), number__gt=OuterRef("number"))
-    found = current.filter(~Exists(newer), run_id__in=run_ids).defer("canonical")
-    return {table.run_id: table for table in found}
+def _row(run: Run, revision: Any) -> RunRow:
+    content = revision.content
+    temperature = content["temperature"] or {}
+    return RunRow(
+        run=run,
+        temperature=temperature.get("value"),
+        temperature_u=temperature.get("u"),
+        starts=start_concentrations(content),
+        basis=content["basis"],
+        files=revision.files,
+        tables=revision.tables,
+        table=_table(revision),
+    )
+
+
+SHOWN_OF_TABLE = ("id", "blob", "rows", "last_time", "number")
+"""In the order of the model, as `from_db` takes them; other fields are fetched when somebody asks for them."""
+
+
+def _of_newest_table() -> dict[str, Subquery]:
+    """The newest table of a revision's run that no other one supersedes, field by field."""
+    current = ConcentrationTable.objects.filter(run=OuterRef("run"), superseded_by__isnull=True)
+    newest = current.order_by("-number")
+    return {f"table_{name}": Subquery(newest.values(name)[:1]) for name in SHOWN_OF_TABLE}
+
+
+def _table(revision: Any) -> ConcentrationTable | None:
+    if getattr(revision, "table_id", None) is None:
+        return None
+    values = [getattr(revision, f"table_{name}") for name in SHOWN_OF_TABLE]
+    return ConcentrationTable.from_db(revision._state.db, SHOWN_OF_TABLE, values)
 
 
 def _count(rows: QuerySet) -> Coalesce:

@@ -14,6 +14,11 @@ from kinetics_db.provenance.models import AuditEntry, AuditHead, Derivation, Sto
 from kinetics_db.provenance.writing import FIRST_PREVIOUS, entry_digest
 
 
+def head_of_record() -> str:
+    """The digest of the newest audit entry, the same until something is written; empty before the first one."""
+    return next(iter(AuditHead.objects.values_list("digest", flat=True)), "")
+
+
 def path_of(sha256: str) -> Path:
     """Where bytes of that hash are kept."""
     return Path(settings.BYTE_STORE_DIR) / sha256[:2] / sha256

@@ -13,7 +13,8 @@ from kinetics_db.runs.query import Range
 EXAMPLE = "for example 50..150 mM, >= 50 mM, <= 150 mM or 50 mM, with a point in decimals"
 LARGEST_SLACK = Decimal("0.05")
 _QUANTITY = re.compile(
-    r"(?P<number>[+-]?(?:\d{1,30}(?:\.\d{1,30})?|\.\d{1,30})(?:[eE][+-]?\d{1,3})?)?\s*(?P<unit>.*)\Z"
+    r"(?P<number>[+-]?(?:\d{1,30}(?:\.\d{1,30})?|\.\d{1,30})(?:[eE][+-]?\d{1,3})?)?\s*(?P<unit>.*)\Z",
+    re.DOTALL,
 )
 
 

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     from kinetics_db.measurements.models import ConcentrationTable
 
 LONGEST_ID = 18
+_OF_A_WINDOW = re.compile(r"t(\d+)-(?:start|end|leave)", re.ASCII)
 _LEFT_OUT = re.compile(r"(?P<column>.+)@(?P<row>\d+|\*)\s*:(?P<reason>.*)", re.ASCII)
 
 
@@ -118,6 +119,12 @@ def table_rows(
     """Rows of tables with the fields that belong to each."""
     marked = set(chosen)
     return [TableRow(table, table.pk in marked, WindowForm(data, prefix=f"t{table.pk}")) for table in tables]
+
+
+def typed_for(data: QueryDict) -> list[int]:
+    """Ids of the tables for which a window was typed."""
+    typed = (_OF_A_WINDOW.fullmatch(name) for name, text in data.items() if str(text).strip())
+    return numbers_in([found[1] for found in typed if found])
 
 
 def numbers_in(texts: Sequence[str]) -> list[int]:

@@ -12,6 +12,7 @@ from typing import Generic, TypeVar
 
 from django.http import QueryDict
 
+from kinetics_db.errors import InvalidInput
 from kinetics_db.web.forms import PlainForm
 
 
@@ -33,6 +34,9 @@ class RowForm(PlainForm):
 
 
 F = TypeVar("F", bound=RowForm)
+
+MOST_ROWS = 250
+"""More than a service accepts, so that the service says what is too many and the rows stay."""
 
 _CHANGE = re.compile(r"(add|out|up|down)(?:-(\d{1,4}))?", re.ASCII)
 
@@ -75,6 +79,7 @@ class Rows(Generic[F]):
         what, place = found[1], int(found[2] or 0) - 1
         focus = place
         if what == "add":
+            self._refuse_beyond(len(rows) + 1)
             rows.append({})
             focus = len(rows) - 1
         elif not 0 <= place < len(rows):
@@ -100,7 +105,13 @@ class Rows(Generic[F]):
         for name in data:
             if found := pattern.fullmatch(name):
                 sent.setdefault(int(found[1]), {})[found[2]] = data.get(name, "")
+        self._refuse_beyond(len(sent))
         return [sent[number] for number in sorted(sent)]
+
+    def _refuse_beyond(self, number: int) -> None:
+        if number > MOST_ROWS:
+            message = f"{number} {self.prefix} are more than a page has room for"
+            raise InvalidInput(message, field=self.prefix, cure=f"at most {MOST_ROWS}")
 
     def _bound(self, number: int, values: Mapping[str, str]) -> F:
         prefix = f"{self.prefix}-{number}"

@@ -113,14 +113,18 @@ def complaint(
     if needed is None:
         return "" if status == 405 else f"{status} instead of 405"
     if RANK[role] >= RANK[needed]:
-        return "" if status not in (403, 404, 405) and not leads_to_login(response) else f"{status}, but allowed"
+        return (
+            "" if status not in (403, 404, 405) and not leads_to_login(response) else f"{status}, but allowed"
+        )
     expected = 404 if role == "stranger" else 403
     return "" if status == expected else f"{status} instead of {expected}"
 
 
 def test_a_token_opens_no_page(world: World) -> None:
     """Tokens are for scripts; a page needs the login."""
-    client = Client(headers={"authorization": f"Bearer {make_token(world.people['owner'], scope='write')[1]}"})
+    client = Client(
+        headers={"authorization": f"Bearer {make_token(world.people['owner'], scope='write')[1]}"}
+    )
     for pattern in patterns():
         if PAGES[pattern.name][0] not in (None, "nobody"):
             assert leads_to_login(client.get(address(world, pattern))), pattern.name

@@ -5,14 +5,24 @@ from __future__ import annotations
 from collections.abc import Iterator
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from typing import Any
 
 from django.db import transaction
 from django.http import HttpResponse
 from django.test import Client
 
 from kinetics_db.accounts.models import User
-from kinetics_db.projects.services import create_project
+from kinetics_db.datasets.services import freeze_dataset
+from kinetics_db.engine.fitting.problem import Constant
+from kinetics_db.fits.services import request_fit
+from kinetics_db.materials.services import Portion, enter_lot, make_up_stock
+from kinetics_db.mechanisms.services import write_version
+from kinetics_db.projects.selectors import project_named
+from kinetics_db.projects.services import create_project, set_member
+from kinetics_db.runs.entry import Amount
+from tests.factories.flow import compute_now, make_reported_table, make_run
 from tests.factories.people import make_member, make_user
+from tests.factories.small import SIGMA, decay_file
 from tests.web.study import RIGHT, WRONG, Study
 
 ROLES = ("nobody", "stranger", "reader", "contributor", "owner")
@@ -69,6 +79,45 @@ def make_world() -> World:
         "position": 1,
     }
     return World(study, people, keys)
+
+
+OURS = ("alcohol", "ketone", "K01", "K02", "xidation", "first order", "second order", "carl", "rosa", "nmr")
+"""Words of the first project, none of which stands in an answer to somebody who may not see it."""
+
+
+def add_elsewhere(world: World) -> dict[str, object]:
+    """Fill the stranger's project, let the owner of the first one see it too, and give its records by name."""
+    stella, mira = world.people["stranger"], world.people["owner"]
+    project = project_named(user=stella, slug="elsewhere")
+    set_member(user=stella, project=project, member=mira, role="contributor")
+    where: dict[str, Any] = {"user": stella, "project_id": project.pk}
+    run = make_run(stella, project.pk, "S01", {"ester": Amount(10.0, "mM", 0.1)})
+    columns = {"A": "ester", "B": "acid"}
+    table = make_reported_table(stella, run, decay_file(10.0, 0.01, seed=1), columns, constant_u=SIGMA)
+    newer = make_reported_table(stella, run, decay_file(10.0, 0.01, seed=2), columns, constant_u=SIGMA)
+    enter_lot(**where, code="L-S", compound="ester")
+    make_up_stock(**where, code="S-S", portions=[Portion(1.0, "g", lot="L-S")], volume=(100.0, "mL"))
+    dataset = freeze_dataset(**where, name="theirs", table_ids=[table.pk])
+    version = write_version(**where, name="hydrolysis", text="ester --k--> acid")
+    about: dict[str, Any] = {"user": stella, "dataset": dataset, "mechanism_version": version}
+    fit, waiting = (request_fit(**about, constants=[Constant("k", start=s)]) for s in (0.02, 0.03))
+    compute_now(fit)
+    return {
+        "slug": project.slug,
+        "username": stella.username,
+        "run_id": run.pk,
+        "number": 1,
+        "form": "csv",
+        "file_id": table.signal_table.file_id,
+        "signal_table_id": table.signal_table_id,
+        "table_id": table.pk,
+        "newer_table_id": newer.pk,
+        "version_id": version.pk,
+        "mechanism_id": version.mechanism_id,
+        "dataset_id": dataset.pk,
+        "fit_id": fit.pk,
+        "open_fit_id": waiting.pk,
+    }
 
 
 @contextmanager

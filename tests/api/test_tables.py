@@ -199,3 +199,16 @@ def test_a_reduction_sent_twice_with_a_key_gets_its_first_answer(asked: Asked) -
     path = f"runs/{table.run_id}/tables/"
     first, second = (asked.script.post(path, body, Idempotency_Key="t-1") for _ in range(2))
     assert first.status_code == second.status_code == 201 and "Idempotency-Replayed" in second
+
+
+@pytest.mark.parametrize("path", ["tables/{}.csv", "tables/{}.parquet", "tables/{}.json", "tables/{}/"])
+def test_numbers_have_heads_without_bodies_and_say_what_they_take(asked: Asked, path: str) -> None:
+    path = path.format(asked.study.tables[0].pk)
+    head, whole = asked.script.ask("HEAD", path), asked.script.get(path)
+    sent = b"".join(head.streaming_content) if head.streaming else head.content
+    assert head.status_code == 200 and sent == b"" and head["ETag"] == whole["ETag"]
+    options = asked.script.ask("OPTIONS", path)
+    assert options.status_code == 200 and options["Content-Type"] == "application/json"
+    assert options["Allow"] == "GET, HEAD, OPTIONS"
+    for method in ("POST", "DELETE", "PUT"):
+        problem(asked.script.ask(method, path, {}), 405)

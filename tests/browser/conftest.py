@@ -3,32 +3,26 @@
 from __future__ import annotations
 
 import os
-import shutil
 from collections.abc import Callable, Iterator
 from typing import Any
 
 import pytest
 from django.test import Client
-from playwright.sync_api import Browser, BrowserContext, Page, Request, sync_playwright
+from playwright.sync_api import Browser, BrowserContext, Page, sync_playwright
+
+from tests.browser.watching import TELL_VIOLATIONS, start_browser, watch
 
 # Playwright's calls run inside an event loop, where Django otherwise refuses its database.
 os.environ.setdefault("DJANGO_ALLOW_ASYNC_UNSAFE", "1")
 
-TELL_VIOLATIONS = """
-document.addEventListener("securitypolicyviolation", (event) => {
-  console.error(`content policy: ${event.violatedDirective} refused ${event.blockedURI} ${event.sourceFile ?? ""}`);
-});
-"""
 WINDOW: Any = {"width": 1280, "height": 900}
 
 
 @pytest.fixture(scope="session")
 def chromium() -> Iterator[Browser]:
     """The browser of the whole session: $CHROMIUM, or `chromium` of the path."""
-    path = os.environ.get("CHROMIUM") or shutil.which("chromium") or shutil.which("chromium-browser")
-    assert path, "no browser: put chromium on the path or its file into CHROMIUM"
     with sync_playwright() as playwright:
-        browser = playwright.chromium.launch(executable_path=path, args=["--no-sandbox"])
+        browser = start_browser(playwright)
         yield browser
         browser.close()
 
@@ -64,22 +58,6 @@ def open_page(chromium: Browser, server_address: str) -> Iterator[Callable[..., 
     for context in contexts:
         context.close()
     assert not complaints, complaints
-
-
-def watch(page: Page, complaints: list[str]) -> None:
-    """Write down everything that the browser complains about."""
-    page.set_default_timeout(10_000)
-    page.on("console", lambda m: complaints.append(m.text) if m.type in ("error", "warning") else None)
-    page.on("pageerror", lambda error: complaints.append(str(error)))
-    page.on(
-        "requestfailed", lambda request: complaints.append(failure(request)) if failure(request) else None
-    )
-
-
-def failure(request: Request) -> str:
-    """Why a request failed; a download is no failure, though the page does not get its answer."""
-    reason = str(request.failure or "")
-    return "" if reason == "net::ERR_ABORTED" else f"{request.url}: {reason}"
 
 
 def log_in(context: BrowserContext, user: Any, address: str) -> None:

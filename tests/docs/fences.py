@@ -6,13 +6,16 @@ import contextlib
 import io
 import math
 import re
-from collections.abc import Callable, Iterable, Iterator
+from collections.abc import Callable, Iterable, Iterator, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
 ROOT = Path(__file__).resolve().parents[2]
 DOCS = ROOT / "docs"
+OVER_REST = (DOCS / "how-to" / "log-a-run.md", DOCS / "how-to" / "pull-a-data-set.md")
+"""Pages that talk to a server; test_rest_snippets.py runs them."""
+
 FENCE = re.compile(r"```(\S*)\s*\Z")
 NUMBER = re.compile(r"([+-]?\d+(?:\.\d+)?(?:e[+-]?\d+)?)")
 
@@ -70,11 +73,16 @@ def blocks_under(page: Path, heading: str) -> list[Block]:
 
 
 def run_page(
-    page: Path, after_each: Callable[[], None] = lambda: None, *, blocks: Iterable[Block] | None = None
+    page: Path,
+    after_each: Callable[[], None] = lambda: None,
+    *,
+    blocks: Iterable[Block] | None = None,
+    others: Mapping[str, Callable[[Block], str]] | None = None,
 ) -> dict[str, Any]:
     """Run a page's Python blocks in one namespace; a block of text right after one is what it prints.
 
     ``after_each`` is called after every Python block; ``blocks`` runs these of the page, in this order.
+    ``others`` runs blocks of other kinds and gives what they print.
     """
     namespace: dict[str, Any] = {"__name__": page.stem}
     printed: str | None = None
@@ -87,8 +95,10 @@ def run_page(
                 exec(code, namespace)
             printed = out.getvalue()
             after_each()
+        elif others is not None and block.kind in others:
+            printed = others[block.kind](block)
         elif block.kind == "text":
-            assert printed is not None, f"{block}: no Python block stands before this output"
+            assert printed is not None, f"{block}: nothing that is run stands before this output"
             assert same_output(printed, block.text), f"{block}: printed\n{printed}\nnot\n{block.text}"
             printed = None
     return namespace

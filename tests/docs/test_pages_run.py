@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import replace
 from pathlib import Path
+from typing import Any
 
 import pytest
 
@@ -12,9 +13,20 @@ from kinetics_db.errors import Conflict
 from kinetics_db.fits.models import FitResult
 from kinetics_db.jobs.models import Job
 from kinetics_db.provenance.models import AuditEntry
-from tests.docs.fences import DOCS, blocks_in_docs, blocks_of, blocks_under, run_page, same_output
+from tests.docs.fences import (
+    DOCS,
+    OVER_REST,
+    blocks_in_docs,
+    blocks_of,
+    blocks_under,
+    run_page,
+    same_output,
+)
+from tests.factories.small import make_study
+from tests.factories.tokens import make_token
 
 TUTORIAL = DOCS / "tutorial" / "first-fit.md"
+REST = DOCS / "reference" / "rest.md"
 
 
 def do_waiting_work() -> None:
@@ -81,8 +93,35 @@ def test_a_page_about_the_engine_runs_without_a_database_and_prints_what_it_show
     run_page(page)
 
 
+@pytest.mark.django_db(transaction=True)
+def test_scripts_of_the_rest_page_read_a_dataset_and_wait_for_a_fit(
+    live_server: Any, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    study = make_study()
+    there = {
+        "http://127.0.0.1:8765": live_server.url,
+        "rw_...": make_token(study.user, scope="write")[1],
+        "datasets/1/": f"datasets/{study.dataset.pk}/",
+        "dataset=1": f"dataset={study.dataset.pk}",
+        "mechanism_version=1": f"mechanism_version={study.version.pk}",
+    }
+    blocks = [block for block in blocks_of(REST) if block.kind == "python"]
+    for shown, meant in there.items():
+        assert any(shown in block.text for block in blocks), shown
+        blocks = [replace(block, text=block.text.replace(shown, meant)) for block in blocks]
+    monkeypatch.setattr("time.sleep", lambda seconds: do_waiting_work())
+    names = run_page(REST, blocks=blocks)
+    assert len(names["frame"]) == 48
+    assert names["fit"]["state"] == "done" and names["constant"]["name"] == "k"
+
+
 def test_no_page_with_python_is_left_out() -> None:
-    assert {block.page for block in blocks_in_docs("python")} == {TUTORIAL, *WITHOUT_DATABASE}
+    assert {block.page for block in blocks_in_docs("python")} == {
+        TUTORIAL,
+        REST,
+        *OVER_REST,
+        *WITHOUT_DATABASE,
+    }
 
 
 @pytest.mark.parametrize(

@@ -7,10 +7,17 @@ import re
 from dataclasses import fields
 
 import pytest
+from django.conf import settings
 from django.test import Client
 
 import api.urls
-from api.errors import STATUS, problem_details
+from api.errors import MOST_PROBLEMS, STATUS, problem_details
+from api.negotiation import MOST_IN_JSON
+from api.parsers import DEEPEST
+from api.schema import MEANINGS
+from api.simulate import MOST_SPECIES, MOST_TIMES, MOST_VALUES, SECONDS
+from kinetics_db.accounts.idempotency import KEPT
+from kinetics_db.accounts.services import LONGEST_LIFE
 from kinetics_db.engine.calibration import AsReported, InternalStandard, MeasuredSignal, ReportedColumn
 from kinetics_db.engine.fitting.problem import Constant, Settings
 from kinetics_db.engine.reading.options import DELIMITERS, ENCODINGS, ReadingOptions
@@ -19,7 +26,9 @@ from kinetics_db.engine.units import STORED_UNITS
 from kinetics_db.errors import InvalidInput
 from kinetics_db.jobs.models import Job
 from kinetics_db.materials.services import enter_compound
+from kinetics_db.paging import LARGEST_SIZE, SIZE
 from kinetics_db.runs.entry import CONTROL_KINDS, SECTIONS, Amount, ChargeEntry, RunEntry
+from kinetics_db.runs.query_params import PARAMETERS
 from kinetics_db.runs.services import log_run
 from tests.docs.fences import DOCS, ROOT, blocks_in_docs
 from tests.docs.messages import messages_in
@@ -162,12 +171,46 @@ def test_sections_and_controls_of_a_run_are_documented_with_their_units() -> Non
     assert all(f"`{kind}`" in text_of("run-snapshot.md") for kind in CONTROL_KINDS if kind)
 
 
-def test_addresses_and_statuses_of_rest_are_documented() -> None:
-    addresses = {f"/api/v1/{pattern.pattern}" for pattern in api.urls.urlpatterns}
+def test_every_request_of_rest_is_documented_and_no_other() -> None:
+    served = {
+        (method.upper(), re.sub(r"<(?:\w+:)?(\w+)>", r"{\1}", str(pattern.pattern)))
+        for pattern in api.urls.urlpatterns
+        if pattern.name != "elsewhere"
+        for method in pattern.callback.cls.http_method_names
+        if method not in ("head", "options") and hasattr(pattern.callback.cls, method)
+    }
+    rows = re.findall(r"^\| `([A-Z]+) ([^`]+)` \| \S", text_of("rest.md"), re.MULTILINE)
+    assert len(rows) == len(set(rows)) and set(rows) == served
+
+
+def test_every_status_that_a_request_may_be_refused_with_is_documented() -> None:
+    documented = {
+        int(s) for s in re.findall(r"^\| (\d{3}) \|", section("rest.md", "## Errors"), re.MULTILINE)
+    }
+    assert documented == {*(status for status, _ in STATUS.values()), *MEANINGS, 405, 406, 500}
+
+
+def test_filters_limits_and_rates_of_rest_are_documented_as_they_are() -> None:
     page = text_of("rest.md")
-    assert {a for _, a in re.findall(r"^## `(GET|POST) ([^`]+)`", page, re.MULTILINE)} == addresses
-    documented = {int(s) for s in re.findall(r"^\| (\d{3}) \|", page, re.MULTILINE)}
-    assert documented == {status for status, _ in STATUS.values()}
+    filters = page.split("Filters of `GET runs/`, all of which must hold:")[1].split(" `order` is")[0]
+    assert set(re.findall(r"`(\w+)`", filters)) == set(PARAMETERS)
+    flat = re.sub(r"\s+", " ", page)
+    base = (ROOT / "kinetics_db" / "config" / "settings" / "base.py").read_text(encoding="utf-8")
+    rates = dict(re.findall(r'"RATEWRIGHT_API_(\w+)_A_MINUTE", (\d+)\)', base))
+    for shown in (
+        f"{rates['REQUESTS']} requests a minute for a person and {rates['ANONYMOUS']} for an address",
+        f"at most {LONGEST_LIFE.days} days",
+        f"at most {settings.DATA_UPLOAD_MAX_MEMORY_SIZE // 2**20} MiB",
+        f"{SIZE} rows or `?size=` 1 to {LARGEST_SIZE}",
+        f"within {KEPT.days} days",
+        f"depth beyond {DEEPEST}",
+        f"up to {MOST_TIMES} `times`",
+        f"At most {MOST_SPECIES} species and {MOST_VALUES:,} values",
+        f"up to {MOST_IN_JSON // 10**6} million values",
+    ):
+        assert shown in flat, shown
+    assert SECONDS == 10.0 and "It may last ten seconds" in flat
+    assert MOST_PROBLEMS == 100 and "the first hundred" in flat
 
 
 @pytest.mark.django_db

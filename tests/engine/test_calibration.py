@@ -139,6 +139,17 @@ def test_weak_signals_get_their_uncertainty_by_monte_carlo_with_a_stated_seed() 
     assert u[2] == pytest.approx(linear[2], rel=1e-12)
 
 
+def test_more_weak_readings_than_can_be_drawn_are_refused_with_the_draws_that_would_do() -> None:
+    rows = [[float(i), 0.5, 4.0] for i in range(300)]
+    with pytest.raises(InvalidInput) as refused:
+        reduce_internal_standard(signals(rows), replace(RECIPE, draws=1_000_000))
+    (problem,) = refused.value.problems
+    assert problem.field == "signals"
+    assert "300 or more readings are below 10 times their noise" in problem.message
+    assert problem.cure == "average neighbouring readings first, or 666000 draws"
+    reduce_internal_standard(signals(rows[:20]), replace(RECIPE, draws=20_000))
+
+
 def test_the_monte_carlo_interval_agrees_with_the_exact_distribution_of_the_ratio() -> None:
     from scipy.optimize import brentq
     from scipy.stats import norm

@@ -161,7 +161,9 @@ def _extent(i: int) -> dict[str, Any]:
     times = np.linspace(0.0, 3600.0, POINTS)
     rate = 1e-3 * np.exp(6000 * (1 / 313.15 - 1 / kelvin(i)))
     noise = np.random.default_rng(i).normal(0.0, SIGMA, POINTS)
-    values = np.column_stack([times, concentration(i) * np.exp(-rate * times) + noise, np.full(POINTS, SIGMA)])
+    values = np.column_stack(
+        [times, concentration(i) * np.exp(-rate * times) + noise, np.full(POINTS, SIGMA)]
+    )
     return {
         "blob": Table(COLUMNS, values).to_bytes(),
         "rows": POINTS,

@@ -139,7 +139,7 @@ def test_a_token_of_one_project_finds_only_runs_of_it(project: Project) -> None:
     assert list(runs_found(user=user, query=query).values_list("code", flat=True)) == ["X1"]
 
 
-def test_a_page_of_rows_costs_three_queries_and_says_what_a_list_needs(project: Project) -> None:
+def test_a_page_of_rows_costs_two_queries_and_says_what_a_list_needs(project: Project) -> None:
     user = project.created_by
     with CaptureQueriesContext(connection) as queries:
         page = page_of(
@@ -155,7 +155,7 @@ def test_a_page_of_rows_costs_three_queries_and_says_what_a_list_needs(project: 
             )
             for code, row in rows.items()
         }
-    assert len(queries) == 3
+    assert len(queries) == 2
     assert told["K02"] == ("tern", "mira", Run.objects.get(code="K01"), "")
     assert told["k03"] == ("tern", "mira", None, "blank")
     first = rows["K01"]
@@ -176,6 +176,10 @@ def test_a_row_shows_the_newest_table_that_nothing_supersedes(project: Project) 
     supersede_table(user=user, older=one, newer=two, reason="longer")
     (row,) = run_rows([run])
     assert (row.table, row.files, row.tables) == (three, 3, 3)
+    assert row.table is not None and row.table.table.to_bytes() == bytes(three.blob)
+    known = (row.table.number, row.table.rows, row.table.last_time, row.table.basis)
+    assert known == (3, three.rows, three.last_time, "mol/L")
+    assert run_rows([run], numbers=False)[0].table is None
     assert run_rows([]) == []
 
 

@@ -147,7 +147,7 @@ def test_words(text: str, expected: RunQuery) -> None:
         ("[A]0 50 xM", 1, "unknown unit 'xM'", "did you mean M"),
         ("[A]0 5 h", 1, "a time is no concentration", "50..150 mM"),
         ("[A]0 50", 1, "the unit is missing", "50..150 mM"),
-        ("[A]0 1,5 mM", 1, "the unit is missing", "with a point in decimals"),
+        ("[A]0 1,5 mM", 7, "has a comma between digits", "a decimal point"),
         ("[A]0 50-150 mM", 1, "is no number with a unit", "50..150 mM"),
         ("[A]0 50...150 mM", 1, "is no number with a unit", "50..150 mM"),
         ("[A]0 .. mM", 1, "at least one end", "50..150 mM"),

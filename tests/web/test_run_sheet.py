@@ -192,3 +192,8 @@ def test_the_page_costs_the_same_however_much_there_is(browser: Client, fitted: 
         html_of(browser, run)
     assert len(many) <= len(few)
     assert len(many) <= MOST_QUERIES
+
+
+def test_the_start_of_a_run_is_shown_in_the_readers_zone(browser: Client, study: Study) -> None:
+    run = study.run("K01", started="2026-03-09T13:00:00+01:00")
+    assert "started 2026-03-09 12:00 UTC" in text_of(html_of(browser, run))

@@ -28,6 +28,8 @@ MAX_COLUMNS = 2_000
 SAMPLE = 300
 SAMPLE_CHARACTERS = 150_000
 HEADER_SEARCH = 2_000
+HEADER_CELLS = 200_000
+"""Most lines, and most cells of them, among which a header is looked for."""
 
 _RULE = re.compile(r"[-=_+|;,\s*]+")
 _BELOW_ONE_OR_ODD = re.compile(r"(?<![\d.,])[+-]?0*,\d|\d,(?:\d{1,2}|\d{4,})(?!\d)|\d{4,},\d|,\d+[eE]")
@@ -95,6 +97,8 @@ def find_layout(lines: Sequence[str], options: ReadingOptions) -> Layout:
     skipped = {first_line + 1} if separator else set()
     sample = _sample(lines, options, skipped)
     delimiter, decimal, width, most = _best_pair(sample, stated, options)
+    if width > MAX_COLUMNS:
+        raise InvalidInput(f"the table has {width} columns", cure=f"at most {MAX_COLUMNS}")
     search = _Search(lines, options, delimiter, decimal, (width, most), skipped)
     header_line, header, units_line, units_row, first = search.header()
     named = without_empty_end(header)
@@ -249,11 +253,15 @@ class _Search:
             return self._below(number, self._cells(number, header=True))
         named: tuple[int, list[str]] | None = None
         fallback: tuple[int, list[str]] | None = None
+        seen = 0
         for number in range(1, min(len(self.lines), HEADER_SEARCH) + 1):
             line = self.lines[number - 1].strip()
             if not line or number in self.skipped:
                 continue
             cells = self._cells(number, header=True)
+            seen += len(cells)
+            if seen > HEADER_CELLS:
+                break
             if not is_comment(line, self.options, self.delimiter):
                 if self._is_header(cells):
                     found = self._below(number, cells)

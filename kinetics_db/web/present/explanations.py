@@ -9,6 +9,8 @@ from kinetics_db.engine.shown_numbers import percent, plain, probability
 from kinetics_db.evidence.explanations import Explanation, Explanations, Version
 from kinetics_db.web.present.grid import css_of
 
+STOPPED = "stopped"
+
 
 @dataclass(frozen=True)
 class ExplanationLine:
@@ -21,7 +23,7 @@ class ExplanationLine:
 
 @dataclass(frozen=True)
 class ExplanationList:
-    """Verdicts newest first; ``earlier`` counts those that a newer fit of the same model and data replaces."""
+    """Verdicts newest first, after them those of stopped fits; ``earlier`` counts what is not shown beside them."""
 
     lines: Sequence[ExplanationLine]
     earlier: int
@@ -30,9 +32,9 @@ class ExplanationList:
 
 
 def explanation_list(explanations: Explanations) -> ExplanationList:
-    """The newest verdict of each version on each dataset's table of the run."""
+    """The newest verdict of each version on each dataset's table of the run; a finished fit before a stopped one."""
     newest: dict[tuple[int, int, int], Explanation] = {}
-    for found in explanations.verdicts:
+    for found in sorted(explanations.verdicts, key=lambda one: one.fit_status == STOPPED):
         newest.setdefault((found.version.id, found.dataset_id, found.table_id), found)
     lines = [ExplanationLine(found, css_of(found.verdict), _reasons(found)) for found in newest.values()]
     return ExplanationList(

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Sequence
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -42,13 +42,12 @@ def reduced_sheet(
     notes: Sequence[str],
     scale_errors: Sequence[Mapping[str, Any]],
     title: str,
-    species: Iterable[str],
     warnings: Sequence[str] = (),
     first: int,
     last: int = 0,
 ) -> ReducedSheet:
-    """The sheet of a table; ``species`` are the run's compounds, whose colours come first on every page."""
-    units = units_of_table(table, basis)
+    """The sheet of a table."""
+    units, positions = units_of_table(table, basis), positions_of(table.names("concentration"))
     known = with_uncertainties(table)
     return ReducedSheet(
         notes=notes,
@@ -56,15 +55,13 @@ def reduced_sheet(
         scale_errors=[scale_error_words(error) for error in scale_errors],
         without_uncertainty=[name for name in table.names("concentration") if name not in known],
         numbers=concentrations_sheet(table, units=units, basis=basis, first=first, last=last),
-        chart=concentrations(
-            table, basis=basis, title=title, name=title, units=units, positions=positions_of(species)
-        ),
+        chart=concentrations(table, basis=basis, title=title, name=title, units=units, positions=positions),
         span=span_of(table),
         rows=table.rows,
     )
 
 
-def tried_sheet(result: ConcentrationTableResult, *, species: Iterable[str]) -> ReducedSheet:
+def tried_sheet(result: ConcentrationTableResult) -> ReducedSheet:
     """The sheet of a reduction that is not stored."""
     errors = [
         {"owner": e.owner, "relative_u": e.relative_u, "columns": list(e.columns)}
@@ -76,7 +73,6 @@ def tried_sheet(result: ConcentrationTableResult, *, species: Iterable[str]) -> 
         notes=result.notes,
         scale_errors=errors,
         title="Concentrations by this recipe",
-        species=species,
         warnings=[problem_words(problem) for problem in result.warnings],
         first=5,
         last=3,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from datetime import datetime
 from typing import TYPE_CHECKING, Any
 
 from kinetics_db.runs.selectors import start_concentrations
@@ -38,6 +39,7 @@ class ChargeLine:
 class RunPage:
     """What a run's page shows of the run and its tables."""
 
+    started: datetime | None
     temperature: Shown | None
     volume: Shown | None
     assumed_additive: bool
@@ -74,6 +76,7 @@ def run_page(sheet: RunSheet, tables: Sequence[ConcentrationTable]) -> RunPage:
     ]
     volume = content["volume"]
     return RunPage(
+        started=datetime.fromisoformat(content["started"]) if content["started"] else None,
         temperature=temperature_of(content),
         volume=None if volume is None else volume_shown(volume["value"], volume["u"]),
         assumed_additive=bool(volume and volume["assumed_additive"]),

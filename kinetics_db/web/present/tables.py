@@ -112,7 +112,7 @@ def concentrations_sheet(
 
     headings = [Heading(table.names("time")[0], units.time, "time")]
     for column in shown:
-        words = "value(standard uncertainty)" if column.name in known else "value"
+        words = "value(u)" if column.name in known else "value"
         headings.append(Heading(column.name, unit, words))
     return _sheet(table, headings, row, first, last, len(columns) - len(shown))
 

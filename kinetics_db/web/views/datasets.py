@@ -23,7 +23,7 @@ from kinetics_db.paging import page_of
 from kinetics_db.projects.selectors import may_contribute, project_with_role, require_contributor
 from kinetics_db.runs.query import RunQuery, runs_found
 from kinetics_db.web.csv_files import csv_download
-from kinetics_db.web.dataset_forms import DatasetForm, TableRow, numbers_in, table_rows
+from kinetics_db.web.dataset_forms import DatasetForm, TableRow, numbers_in, table_rows, typed_for
 from kinetics_db.web.forms import form_response, problem_words
 from kinetics_db.web.pages import ReadersRequest, form_page, page
 from kinetics_db.web.present.datasets import item_sheets
@@ -88,8 +88,9 @@ def new_dataset(request: ReadersRequest, slug: str) -> HttpResponse:
 
 
 def _found(request: ReadersRequest, project: Project, form: DatasetForm) -> Found:
-    """Tables by the filter; what is chosen already is shown first, whatever the filter says."""
+    """Tables by the filter; those chosen or typed for already are shown first, whatever the filter says."""
     chosen = numbers_in(request.POST.getlist("tables"))
+    touched = {*chosen, *typed_for(request.POST)}
     every = current_tables_in(user=request.user, project_id=project.pk).defer(*HEAVY)
     every = every.prefetch_related("columns")
     matching = every.none()
@@ -103,7 +104,7 @@ def _found(request: ReadersRequest, project: Project, form: DatasetForm) -> Foun
     shown = list(matching[: MOST_SHOWN + 1])
     total = len(shown) if len(shown) <= MOST_SHOWN else matching.count()
     known = {table.pk for table in shown}
-    kept = [table for table in every.filter(pk__in=chosen) if table.pk not in known] if chosen else []
+    kept = [table for table in every.filter(pk__in=touched) if table.pk not in known] if touched else []
     data = request.POST if request.method == "POST" else None
     return Found(matching, table_rows([*kept, *shown[:MOST_SHOWN]], chosen=chosen, data=data), total)
 

@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
 from urllib.parse import urlencode
 
 from django.contrib import messages
 from django.http import HttpRequest, HttpResponse, StreamingHttpResponse
 from django.shortcuts import redirect, render
+from django.template.loader import render_to_string
 from django.urls import path
 
 from kinetics_db.errors import InvalidInput, NotFound
@@ -16,6 +18,8 @@ from kinetics_db.measurements.rows import run_rows
 from kinetics_db.measurements.selectors import files_of_run, tables_of_run
 from kinetics_db.paging import Page, page_of
 from kinetics_db.projects.selectors import may_contribute, project_with_role
+from kinetics_db.provenance.remembered import Remembered
+from kinetics_db.provenance.selectors import head_of_record
 from kinetics_db.runs.query import RUN_ORDERS, RunQuery, runs_found
 from kinetics_db.runs.selectors import entry_of, replicates_of, run_by_id, run_sheet
 from kinetics_db.runs.services import seal_run
@@ -26,26 +30,45 @@ from kinetics_db.web.present.explanations import explanation_list
 from kinetics_db.web.present.run_list import run_list
 from kinetics_db.web.present.run_sheet import run_page
 
+if TYPE_CHECKING:
+    from kinetics_db.projects.models import Project
+
 LONGEST_NUMBER = 8
+LISTS: Remembered[tuple[Project, str]] = Remembered(200)
+"""Projects with pages of their lists as HTML: runs, tables, projects, roles and accounts are all audited."""
 
 
 @page
 def runs(request: ReadersRequest, slug: str) -> HttpResponse:
     """Runs of a project, 50 at a time. ``?q=`` filters, ``?by=`` orders. A filter that cannot be read lists nothing."""
-    project, role = project_with_role(user=request.user, slug=slug)
-    text, order = request.GET.get("q", ""), _order(request)
+    user = request.user
+    text, order, cursor = request.GET.get("q", ""), _order(request), request.GET.get("cursor", "")
     query, problems = _query(text)
-    found: Page | None = None
-    if query is not None:
-        matching = runs_found(user=request.user, query=query, project_id=project.pk)
-        found = page_of(matching, order=RUN_ORDERS[order], cursor=request.GET.get("cursor"))
+
+    def listed() -> tuple[Project, str]:
+        project, role = project_with_role(user=user, slug=slug)
+        found: Page | None = None
+        if query is not None:
+            matching = runs_found(user=user, query=query, project_id=project.pk)
+            found = page_of(matching, order=RUN_ORDERS[order], cursor=cursor)
+        return project, _section(project, role != "reader", text, problems, found, order)
+
+    key = (user.pk, user.limits, user.time_zone, slug, text, order, cursor)
+    project, section = LISTS.get(key, head=head_of_record(), make=listed)
+    context = {"project": project, "section": section}
+    return render(request, "web/runs/list.html", context, status=200 if query is not None else 400)
+
+
+def _section(
+    project: Project, may_write: bool, text: str, problems: list[str], found: Page | None, order: str
+) -> str:
+    """The list with its filter and margin."""
     kept = {"q": text} if text else {}
-    return render(
-        request,
-        "web/runs/list.html",
+    return render_to_string(
+        "web/runs/section.html",
         {
             "project": project,
-            "may_write": role != "reader",
+            "may_write": may_write,
             "text": text,
             "problems": problems,
             "page": found,
@@ -55,7 +78,6 @@ def runs(request: ReadersRequest, slug: str) -> HttpResponse:
             "by_time": _heading(order, "oldest", "newest", ("oldest first", "newest first"), "newest", kept),
             "query": urlencode({**kept, "by": order}),
         },
-        status=200 if query is not None else 400,
     )
 
 

@@ -106,7 +106,7 @@ def _sent(request: ReadersRequest, found: SignalTable) -> HttpResponse:
                 messages.success(request, f"Table {stored.number} of run {found.file.run.code} is stored.")
                 return redirect("web:table", stored.pk)
             result = preview_reduction(user=user, signal_table=found, recipe=recipe)
-            tried = tried_sheet(result, species=_compounds(found))
+            tried = tried_sheet(result)
         except InvalidInput as error:
             filled.show(error)
     return _shown(request, found, filled, tried=tried)

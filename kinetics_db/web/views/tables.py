@@ -18,7 +18,6 @@ from kinetics_db.fits.selectors import fits_in
 from kinetics_db.measurements.selectors import table_by_id, tables_of_run
 from kinetics_db.measurements.services import supersede_table
 from kinetics_db.projects.selectors import may_contribute, require_contributor
-from kinetics_db.runs.selectors import latest_revision, start_concentrations
 from kinetics_db.web.downloads import csv_response
 from kinetics_db.web.forms import PlainForm, form_response, problems_shown
 from kinetics_db.web.pages import ReadersRequest, download, form_page, page
@@ -63,7 +62,6 @@ def table(request: ReadersRequest, table_id: int) -> HttpResponse:
         notes=found.notes,
         scale_errors=found.scale_errors,
         title=f"{title}: concentrations",
-        species=[part.compound for part in start_concentrations(latest_revision(run))],
         first=SHOWN_ROWS,
     )
     datasets = list(datasets_in(user=user, project_id=run.project_id).filter(items__table=found)[:MOST_USES])
