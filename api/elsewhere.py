@@ -23,4 +23,4 @@ class Elsewhere(APIView):
     def initial(self, request: Request, *args: Any, **kwargs: Any) -> None:
         """Refuse before the method, or the form of the answer, matters."""
         slash = "" if request.path.endswith("/") else "; addresses end with a slash"
-        raise NotFound(f"There is nothing at {request.path}{slash}.")
+        raise NotFound(f"There is nothing at {request.path:.200}{slash}.")

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import json
 import logging
 from collections.abc import Sequence
 from http import HTTPStatus
@@ -11,7 +12,8 @@ from django.conf import settings
 from django.core.exceptions import RequestDataTooBig, SuspiciousOperation
 from django.core.signals import got_request_exception
 from django.db import InterfaceError, OperationalError
-from django.http import UnreadablePostError
+from django.http import HttpRequest, HttpResponse, UnreadablePostError
+from django.views.defaults import bad_request as page_of_bad_request
 from rest_framework.response import Response
 from rest_framework.views import exception_handler
 
@@ -27,6 +29,7 @@ from kinetics_db.errors import (
 
 logger = logging.getLogger("api")
 
+BASE = "/api/v1/"
 MEDIA_TYPE = "application/problem+json"
 RETRY_SECONDS = 5
 MOST_PROBLEMS = 100
@@ -66,6 +69,16 @@ def problem_details(error: Exception, context: dict[str, Any]) -> Response:
         if name in response:
             answer[name] = response[name]
     return answer
+
+
+def bad_request(request: HttpRequest, exception: Exception) -> HttpResponse:
+    """400 for what is refused before any view: problem details below /api/v1/, a page elsewhere."""
+    if not request.path.startswith(BASE):
+        return page_of_bad_request(request, exception)
+    detail = "the address, host name or form of the request is not what this server accepts"
+    answer = _problem(400, detail)
+    headers = {"Cache-Control": answer["Cache-Control"]}
+    return HttpResponse(json.dumps(answer.data), status=400, content_type=MEDIA_TYPE, headers=headers)
 
 
 def plain_problem(problem: Problem) -> dict[str, Any]:

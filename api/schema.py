@@ -145,7 +145,8 @@ def operation(
     body = page_serializer(answers) if paged else answers
     extra = [*params, *(PAGE_PARAMETERS if paged else ())]
     extra += [KEY_PARAMETER] * keyed + [MATCH_PARAMETER] * matched
-    statuses = {*ALWAYS, *errors, *(WITH_BODY if takes is not None else ()), *((412, 428) if matched else ())}
+    reads_body = takes is not None or keyed  # a POST without values takes an empty object, and reads it
+    statuses = {*ALWAYS, *errors, *(WITH_BODY if reads_body else ()), *((412, 428) if matched else ())}
     bodies = body if isinstance(body, Mapping) else dict.fromkeys(media_types, body)
     good = [status] if isinstance(status, int) else status
     responses: dict[Any, Any] = {

@@ -135,7 +135,8 @@ def _parts(text: str) -> Iterator[tuple[int, str]]:
             depth -= 1
         elif letter == "," and not depth:
             if text[position - 1 : position].isdecimal() and text[position + 1 : position + 2].isdecimal():
-                message = f"'{text[begin:position].strip()[-20:]},{text[position + 1 : position + 10]}' has a comma between digits"
+                around = f"{text[begin:position].strip()[-20:]},{text[position + 1 : position + 10]}"
+                message = f"'{around}' has a comma between digits"
                 cure = "a decimal point, or a blank after the comma between two conditions"
                 raise InvalidInput(Problem(message, 1, position + 1, FIELD, cure))
             part = text[begin:position]

@@ -14,10 +14,10 @@ from django.shortcuts import render
 from django.utils import timezone
 from django.views.decorators.cache import never_cache
 from django.views.decorators.http import require_http_methods, require_POST, require_safe
-from django_htmx.http import HttpResponseClientRedirect
 
 from kinetics_db.errors import Conflict, InvalidInput, NotFound, NotPermitted, RatewrightError, Unavailable
 from kinetics_db.projects.selectors import roles_remembered
+from kinetics_db.web.logged_out import logged_out
 
 if TYPE_CHECKING:
     from django_htmx.middleware import HtmxDetails
@@ -82,15 +82,13 @@ def _guarded(view: View) -> View:
 
 
 def _behind_login(view: View) -> View:
-    """Send strangers to the login; a part of a page that htmx asks for is no place for a login form."""
+    """Send strangers to the login, or say that the session has ended where something would be lost (`logged_out`)."""
     guarded = login_required(view)
 
     @wraps(view)
     def entered(request: HttpRequest, *args: Any, **kwargs: Any) -> HttpResponseBase:
-        response = guarded(request, *args, **kwargs)
-        if not request.user.is_authenticated and getattr(request, "htmx", False):
-            return HttpResponseClientRedirect(response.headers["Location"])
-        return response
+        told = None if request.user.is_authenticated else logged_out(request)
+        return guarded(request, *args, **kwargs) if told is None else told
 
     return entered
 

@@ -34,6 +34,9 @@ from tests.access.world import OURS, RANK, World, add_elsewhere, make_world, und
 from tests.factories.people import make_member, make_project, make_user
 from tests.factories.tokens import make_token
 
+# The answers do not hang on the database; the second pass on SQLite need not repeat them.
+pytestmark = pytest.mark.postgresql
+
 DEAD, LIMITED, HERE, READING = "dead", "to another project", "to this project", "reading"
 OTHER_METHODS_BY = ("nobody", "owner")
 """Who tries the methods that an endpoint does not have."""

@@ -12,6 +12,9 @@ from kinetics_db.web.urls import urlpatterns
 from tests.access.world import RANK, ROLES, World, leads_to_login, make_world, undone
 from tests.factories.tokens import make_token
 
+# The answers do not hang on the database; the second pass on SQLite need not repeat them.
+pytestmark = pytest.mark.postgresql
+
 #: Page -> (role that may read it, role that may send it). None: the page has no such method.
 #: 'nobody' is everyone, 'stranger' everyone who is logged in.
 PAGES: dict[str, tuple[str | None, str | None]] = {

@@ -2,104 +2,68 @@
 
 from __future__ import annotations
 
-import base64
 import json
 import random
-from collections.abc import Iterator, Mapping
+import re
+from collections.abc import Iterator, Mapping, Sequence
 from dataclasses import dataclass, field, replace
-from typing import Any
+from typing import Any, TypeVar
 from urllib.parse import quote
 
+from drf_spectacular.generators import SchemaGenerator
+
+from api.urls import urlpatterns
+from kinetics_db.materials.services import Portion, make_up_stock
 from tests.access.endpoints import ENDPOINTS, Keys, Method, address, encoded
+from tests.access.world import World
+from tests.api.hostile_requests import BODIES, CURSORS, HEADERS, MANY, MARKUP, PLACES, TEXTS, VALUES
+from tests.factories.people import make_member
 
-JSON = "application/json"
-MANY = 100_000
-MARKUP = "<script>alert(1)</script>"
-SAMPLE = 8
-"""Values that are tried in each place of a body, of `VALUES`; every place gets others. Headers likewise."""
+NOT_DESCRIBED = ("docs", "elsewhere")
+"""Pages to read the description, and what is nowhere."""
 
-#: JSON as it is written, so that it may be what no encoder writes.
-VALUES: tuple[str, ...] = (
-    "null", "true", "0", "-1", "1e400", "-1e-400", "1" + "0" * 30, "9223372036854775808", "0.1", '""', '"  "',
-    '"1e400"', '"-1"', f'"{"x" * MANY}"', '"a\\u0000b"', '"\\ud800"', '"\\u202etxt.exe\\u200b"', '"\\u0007\\u001b[31m"',
-    json.dumps(MARKUP), '"../../etc/passwd"', '"9999-99-99"', "[]", "[[[]]]", "[null]", "{}", '{"a":1,"a":2}',
-    '{"value":{},"unit":[]}', "[" * 60 + "]" * 60, "[" + ",".join("0" * 2000) + "]", "NaN", "'x'", '"\U0001f9ea"',
-)  # fmt: skip
+T = TypeVar("T")
+Place = tuple[str | int, ...]
+"""Names and positions that lead to a part of plain values."""
 
-#: Whole bodies with their media types.
-BODIES: Mapping[str, tuple[bytes, str]] = {
-    "nothing": (b"", JSON),
-    "nothing of no type": (b"{}", ""),
-    "null": (b"null", JSON),
-    "a list": (b"[]", JSON),
-    "a text": (b'"x"', JSON),
-    "a number": (b"1", JSON),
-    "a text without end": (b'"' + b"x" * MANY, JSON),
-    "half an object": (b'{"name": ', JSON),
-    "two objects": (b"{}{}", JSON),
-    "a name twice": (b'{"name": "a", "name": "b"}', JSON),
-    "deeper than anybody reads": (b'{"a":' * MANY, JSON),
-    "brackets without end": (b"[" * MANY, JSON),
-    "not UTF-8": (b'{"name": "\xff\xfe"}', JSON),
-    "a surrogate as bytes": (b'{"name": "\xed\xa0\x80"}', JSON),
-    "UTF-16": ('{"name": "x"}'.encode("utf-16"), f"{JSON}; charset=utf-16"),
-    "a byte order mark": (b"\xef\xbb\xbf{}", JSON),
-    "a NUL": (b'{"name": "a\0b"}', JSON),
-    "infinite": (b'{"name": Infinity}', JSON),
-    "very many names": (json.dumps({f"n{i}": 0 for i in range(20_000)}).encode(), JSON),
-    "a name without end": (json.dumps({"n" * MANY: 1}).encode(), JSON),
-    "plain text": (b"name=x", "text/plain"),
-    "a form": (b"name=x&reason=y", "application/x-www-form-urlencoded"),
-    "a form without a boundary": (b"name=x", "multipart/form-data"),
-    "a form without parts": (b"--b--\r\n", "multipart/form-data; boundary=b"),
-    "a form that breaks off": (b'--b\r\nContent-Disposition: form-data; name="file"', "multipart/form-data; boundary=b"),
-    "a form with a boundary of markup": (b"x", f"multipart/form-data; boundary={MARKUP}"),
-    "XML": (b'<?xml version="1.0"?><!DOCTYPE x [<!ENTITY y "z">]><x>&y;</x>', "application/xml"),
-    "no media type at all": (b"{}", "????"),
-    "a media type without end": (b"{}", "application/" + "x" * 10_000),
-    "another charset": (b"{}", f"{JSON}; charset=nonsense"),
-}  # fmt: skip
-
-TEXTS: tuple[str, ...] = (
-    "", " ", "0", "-1", "1e400", "nan", "1" + "0" * 30, "9223372036854775808", "x" * 6000, "\0", "\x1b[31m", "\u202ex\u200b",
-    "\U0001f9ea", MARKUP, "../../etc/passwd", "%", "{}", "[]", "null", "';--", "\u0663", "a\nb",
-)  # fmt: skip
-
-PLACES: tuple[str, ...] = (
-    "0", "-1", "1" + "0" * 30, "9223372036854775807", "9223372036854775808", "1e400", "1.0", "%00", "%FF%FE", "%ED%A0%80",
-    "..", "..%2F..", "%2e%2e", quote(MARKUP), quote("\u202ex"), "x" * 6000, "%20", "0x1", "\u0663", "a%0Ab", "%0d%0aSet-Cookie:x=1",
-)  # fmt: skip
-
-
-def cursor_of(plain: Any) -> str:
-    return base64.urlsafe_b64encode(json.dumps(plain).encode()).decode().rstrip("=")
-
-
-CURSORS: tuple[str, ...] = (
-    "x", "====", "\u00e9", base64.b64encode(b"[" * 1400).decode(), cursor_of({}), cursor_of([1, 2, 3]), cursor_of(["after"]),
-    *(
-        cursor_of(["after", order, values])
-        for order in (["-created", "-id"], ["name", "id"], ["slug", "id"], ["-number", "-id"], ["code", "id"])
-        for values in ([{}, 1], ["x", "y"], [None, None], [True, False], [1e308, 10**30], ["0001-01-01T00:00+23:59", 1],
-                       ["\0", 1], ["\ud800", 1], [-(2**63), 2**63 - 1], ["9999-12-31T23:59:59-23:59", 0], [1, 2, 3])
-    ),
-)  # fmt: skip
-
-HEADERS: tuple[dict[str, str], ...] = (
-    {"Accept": ""}, {"Accept": "*/*;q=0"}, {"Accept": ",,,;;;===" * 50}, {"Accept": "text/html"}, {"Accept": "image/*"},
-    {"Accept": "application/json; version=../.."}, {"Accept": "application/json;q=abc"}, {"Accept": "x" * 9000},
-    {"Accept": "\xe9/\xff"}, {"Accept": "text/csv;q=0.9,application/vnd.apache.parquet"},
-    {"Accept": ",".join(["a/b"] * 2000)}, {"Accept-Encoding": "nonsense;q=9"}, {"Accept-Language": MARKUP},
-    {"If-None-Match": "*"}, {"If-None-Match": '"'}, {"If-None-Match": "W/"}, {"If-None-Match": '"x",' * 3000},
-    {"If-None-Match": "\xe9"}, {"If-Match": '"'}, {"If-Match": "x" * 9000}, {"If-Match": 'W/"x"'}, {"If-Match": "\xe9, \"\xff\""},
-    {"If-Modified-Since": "never"}, {"If-Range": '"x"'}, {"Range": "bytes=0-"}, {"Range": "bytes=5-1,-9" + "9" * 99},
-    {"Range": "rows=1-2"}, {"X-HTTP-Method-Override": "DELETE"}, {"X-Method-Override": "PUT"}, {"X-HTTP-Method": "NONSENSE"},
-    {"Idempotency-Key": " "}, {"Idempotency-Key": "x" * 256}, {"Idempotency-Key": "\xe9"}, {"Idempotency-Key": "a b"},
-    {"Idempotency-Key": "\x07"}, {"Content-Encoding": "gzip"}, {"Expect": "nonsense"}, {"Transfer-Encoding": "chunked"},
-    {"X-Forwarded-For": "\xff" * 99}, {"X-Forwarded-Host": "elsewhere.example"}, {"Origin": "null"}, {"Cookie": ";=;\xe9=\xff; sessionid=" + "x" * 5000},
-    {"Authorization": "Bearer"}, {"Authorization": "Bearer rw_" + "x" * 9000}, {"Authorization": "bearer \xe9\xff"},
-    {"Authorization": "Basic !!!"}, {"Authorization": "Digest x=y"}, {"Authorization": MARKUP},
-)  # fmt: skip
+AMOUNT = {"value": 1, "unit": "mL", "uncertainty": 0.1}
+CHARGE = {"stock": "S-1", "amount": AMOUNT, "note": "last"}
+#: Bodies with more in them than the access tests need.
+RICH: Mapping[tuple[str, str], dict[str, Any]] = {
+    ("projects", "POST"): {"description": "d"},
+    ("compounds", "POST"): {
+        "formula": "C2H6O",
+        "molar_mass": 46.07,
+        "density": {"value": 0.789, "unit": "g/mL"},
+        "hazard_statements": ["H225"],
+        "reason": "looked up",
+    },
+    ("lots", "POST"): {"purity": 0.9, "purity_uncertainty": 0.01, "supplier_note": "n", "reason": "r"},
+    ("stocks", "POST"): {
+        "solvent": "water",
+        "made_on": "2026-03-01",
+        "temperature": {"value": 20, "unit": "degC"},
+        "reason": "r",
+    },
+    ("runs", "POST"): {
+        "charges": [CHARGE, {"compound": "alcohol", "amount": {"value": 2, "unit": "mM"}}],
+        "total_volume": {"value": 10, "unit": "mL"},
+        "temperature": {"value": 40, "unit": "degC", "uncertainty": 0.1},
+        "atmosphere": "argon",
+        "started": "2026-03-09T09:30:00+01:00",
+        "replicate_of": "K01",
+        "control_kind": "",
+        "notes": "n",
+        "sections": {"clock": {"zero": "z", "first contact": {"value": 5, "unit": "s"}}},
+    },
+    ("run", "PATCH"): {"charges": [CHARGE], "total_volume": {"value": 10, "unit": "mL"}, "reason": "r"},
+    ("fits", "POST"): {
+        "casting": {"compounds": {"alcohol": "alcohol"}, "columns": {"ketone": None}},
+        "settings": {"seed": 1, "starts": 2, "max_seconds": 60},
+        "start_concentrations": [{"species": "alcohol", "start": 0.1, "scope": "own per run"}],
+        "without_owners": [],
+    },
+}
 
 
 @dataclass(frozen=True)
@@ -134,11 +98,36 @@ class Operation:
         headers |= {"Accept": "text/html"} if self.name == "docs" else {}
         return Try(self, "in order", path, body, content_type, headers)
 
+    @property
+    def title(self) -> str:
+        return f"{self.verb} {self.template}"
+
+    @property
+    def places(self) -> Keys:
+        """What stands in the address."""
+        waiting = self.name in ("stop-fit", "retry-fit")
+        return {**self.keys, "fit_id": self.keys["open_fit_id"]} if waiting else self.keys
+
     def body(self) -> Any:
-        return self.method.body(self.keys) if self.method.body else None
+        body = self.method.body(self.keys) if self.method.body else None
+        return {**body, **RICH.get((self.name, self.verb), {})} if body is not None else None
 
     def parameters(self, where: str) -> list[str]:
         return [one["name"] for one in self.described.get("parameters", ()) if one["in"] == where]
+
+
+def operations_of(world: World, **more: Any) -> tuple[Mapping[str, Any], list[Operation]]:
+    """The description, and every operation with a request of the world's owner."""
+    schema = json.loads(json.dumps(SchemaGenerator().get_schema(request=None, public=True), default=str))
+    project = world.study.project
+    make_member(project, "reader", "nina")
+    portion = Portion(1.0, "g", compound="alcohol", uncertainty=0.01)
+    where: dict[str, Any] = {"user": project.created_by, "project_id": project.pk}
+    make_up_stock(**where, code="S-1", portions=[portion], volume=(100.0, "mL"), volume_uncertainty=0.1)
+    keys = {**world.keys, "username": "nina", "number": 1, "form": "csv", "token_id": 1, **more}
+    named = {p.name: "/api/v1/" + re.sub(r"<\w+:(\w+)>", r"{\1}", str(p.pattern)) for p in urlpatterns}
+    described = {name: path for name, path in named.items() if name not in NOT_DESCRIBED}
+    return schema, operations(schema, keys, described)
 
 
 def operations(schema: Mapping[str, Any], keys: Keys, templates: Mapping[str, str]) -> list[Operation]:
@@ -167,45 +156,48 @@ def resolved(part: Any, schema: Mapping[str, Any]) -> Any:
     return [resolved(value, schema) for value in part] if isinstance(part, list) else part
 
 
-def tries(operation: Operation) -> Iterator[Try]:
-    """Everything that is tried on an operation."""
-    yield from in_the_address(operation)
-    yield from in_the_query(operation)
+@dataclass(frozen=True)
+class Choice:
+    """Some of the hostile things, the same ones every time and others in each place; all of them when thorough."""
+
+    thorough: bool = False
+
+    def of(self, things: Sequence[T], number: int, where: str) -> Sequence[T]:
+        if self.thorough or number >= len(things):
+            return things
+        return random.Random(where).sample(things, number)
+
+
+def tries(operation: Operation, choice: Choice) -> Iterator[Try]:
+    """What is tried on an operation."""
+    yield operation.good()
+    yield from in_the_address(operation, choice)
+    yield from in_the_query(operation, choice)
     if operation.verb != "GET":
-        yield from as_the_body(operation)
-        yield from in_the_body(operation)
+        yield from as_the_body(operation, choice)
+        yield from in_the_body(operation, choice)
     good = operation.good()
-    for header in chosen_by(operation).sample(HEADERS, 2 * SAMPLE):
+    for header in choice.of(HEADERS, 10, operation.title):
         what = f"header {next(iter(header.items()))!r:.60}"
         yield replace(good, what=what, headers={**good.headers, **header})
 
 
-def chosen_by(operation: Operation) -> random.Random:
-    """The same choices every time, other ones for each operation."""
-    return random.Random(f"{operation.verb} {operation.template}")
-
-
-def in_the_address(operation: Operation) -> Iterator[Try]:
+def in_the_address(operation: Operation, choice: Choice) -> Iterator[Try]:
     good = operation.good()
     for name in operation.parameters("path"):
-        for place in PLACES:
-            others = {**operation.keys, **aliases(operation)}
-            path = operation.template.replace(f"{{{name}}}", place).format(**others)
+        for place in choice.of(PLACES, 6, f"{operation.title} {name}"):
+            path = operation.template.replace(f"{{{name}}}", place).format(**operation.places)
             query = good.path.partition("?")[2]
             yield replace(good, what=f"{name} is {place:.30}", path=f"{path}?{query}")
 
 
-def aliases(operation: Operation) -> dict[str, Any]:
-    return {"fit_id": operation.keys["open_fit_id"]} if operation.name in ("stop-fit", "retry-fit") else {}
-
-
-def in_the_query(operation: Operation) -> Iterator[Try]:
+def in_the_query(operation: Operation, choice: Choice) -> Iterator[Try]:
     good = operation.good()
     path, _, given = good.path.partition("?")
     kept = [pair for pair in given.split("&") if pair]
     for name in operation.parameters("query"):
         others = [pair for pair in kept if not pair.startswith(f"{name}=")]
-        for text in CURSORS if name == "cursor" else TEXTS:
+        for text in choice.of(CURSORS if name == "cursor" else TEXTS, 6, f"{operation.title} {name}"):
             pairs = [*others, f"{name}={quote(text, errors='surrogatepass')}"]
             yield replace(good, what=f"?{name}={text!r:.30}", path=f"{path}?{'&'.join(pairs)}")
         yield replace(good, what=f"?{name} without a value", path=f"{path}?{'&'.join([*others, name])}")
@@ -226,24 +218,23 @@ def in_the_query(operation: Operation) -> Iterator[Try]:
         yield replace(good, what=f"query with {what}", path=f"{path}?{'&'.join([*kept, *pairs])}")
 
 
-def as_the_body(operation: Operation) -> Iterator[Try]:
+def as_the_body(operation: Operation, choice: Choice) -> Iterator[Try]:
     good = operation.good()
-    for what, (body, content_type) in BODIES.items():
+    for what, (body, content_type) in choice.of(list(BODIES.items()), 12, operation.title):
         yield replace(good, what=f"the body is {what}", body=body, content_type=content_type)
 
 
-def in_the_body(operation: Operation) -> Iterator[Try]:
+def in_the_body(operation: Operation, choice: Choice) -> Iterator[Try]:
     """Each place of a body that is in order, and each that the description names, with some of the values."""
     body = operation.body()
     if body is None or not operation.schema:
         return
-    good, chosen = operation.good(), chosen_by(operation)
-    whole = filled(body, operation.schema)
+    good, whole = operation.good(), filled(body, operation.schema)
     for place in places(whole):
-        for value in ("absent", *chosen.sample(VALUES, SAMPLE)):
-            changed = put(whole, place, value)
-            what = f"{'.'.join(map(str, place))} is {value:.40}"
-            yield replace(good, what=what, body=changed.encode("utf-8", "surrogatepass"))
+        where = ".".join(map(str, place))
+        for value in (ABSENT, *choice.of(VALUES, 4, f"{operation.title} {where}")):
+            changed = put(whole, body, place, value)
+            yield replace(good, what=f"{where} is {value:.40}", body=changed.encode("utf-8", "surrogatepass"))
 
 
 def filled(body: Any, schema: Mapping[str, Any], depth: int = 0) -> Any:
@@ -270,7 +261,7 @@ def sketch(part: Mapping[str, Any], depth: int = 0) -> Any:
     }
 
 
-def places(value: Any, at: tuple[str | int, ...] = ()) -> Iterator[tuple[str | int, ...]]:
+def places(value: Any, at: Place = ()) -> Iterator[Place]:
     """Where something stands in plain values, outermost first."""
     if at:
         yield at
@@ -282,28 +273,24 @@ def places(value: Any, at: tuple[str | int, ...] = ()) -> Iterator[tuple[str | i
 
 
 HERE = "\u2603 here"
+ABSENT = "absent"
 
 
-def put(value: Any, place: tuple[str | int, ...], text: str) -> str:
-    """JSON of plain values with the text at a place; other places that were only sketched are left out."""
-    marked = _marked(value, place, text == "absent")
+def put(whole: Any, own: Any, place: Place, text: str) -> str:
+    """JSON of the own values with the text at a place of the whole, which may be one that they do not have."""
+    marked = _marked(whole, own, place, text == ABSENT)
     return json.dumps(marked, ensure_ascii=False).replace(f'"{HERE}"', text)
 
 
-def _marked(value: Any, place: tuple[str | int, ...], absent: bool) -> Any:
+def _marked(whole: Any, own: Any, place: Place, absent: bool) -> Any:
     if not place:
         return HERE
     first, rest = place[0], place[1:]
-    if isinstance(value, dict):
-        kept = {k: v for k, v in value.items() if v is not None or k == first}
-        return {
-            k: _marked(v, rest, absent) if k == first else v
-            for k, v in kept.items()
-            if not (absent and k == first and not rest)
-        }
-    kept_list = list(value)
-    if absent and not rest:
-        del kept_list[int(first)]
-    else:
-        kept_list[int(first)] = _marked(kept_list[int(first)], rest, absent)
-    return kept_list
+    gone = absent and not rest
+    if isinstance(whole, dict):
+        mine = own if isinstance(own, dict) else {k: v for k, v in whole.items() if v is not None}
+        changed = {} if gone else {first: _marked(whole[first], mine.get(first), rest, absent)}
+        return {**{k: v for k, v in mine.items() if k != first}, **changed}
+    mine = own if isinstance(own, list) and len(own) == len(whole) else whole
+    at = int(first)
+    return [*mine[:at], *([] if gone else [_marked(whole[at], mine[at], rest, absent)]), *mine[at + 1 :]]

@@ -8,7 +8,7 @@ import pytest
 
 from tests.api.study import Asked
 
-pytestmark = pytest.mark.django_db
+pytestmark = [pytest.mark.django_db, pytest.mark.postgresql]
 
 NASTY: tuple[Any, ...] = (
     None, True, False, 0, -1, 2**53, 1.5, -0.0, 1e300, 5e-324, "", " ", "x" * 5000, "\u202e\ufeff", "<b>'\";--",

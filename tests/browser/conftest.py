@@ -8,13 +8,14 @@ from typing import Any
 
 import pytest
 from django.test import Client
-from playwright.sync_api import Browser, BrowserContext, Page, sync_playwright
+from playwright.sync_api import Browser, BrowserContext, Page, expect, sync_playwright
 
 from tests.browser.watching import TELL_VIOLATIONS, start_browser, watch
 
 # Playwright's calls run inside an event loop, where Django otherwise refuses its database.
 os.environ.setdefault("DJANGO_ALLOW_ASYNC_UNSAFE", "1")
 
+expect.set_options(timeout=10_000)  # other tests run beside these
 WINDOW: Any = {"width": 1280, "height": 900}
 
 

@@ -8,7 +8,8 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from kinetics_db.engine.reading import ReadingOptions, ReadResult, read
+from kinetics_db.engine.reading import ReadingOptions, ReadResult, layout, read
+from kinetics_db.engine.reading.headers import parse_header
 from kinetics_db.errors import InvalidInput
 
 
@@ -255,3 +256,22 @@ def test_what_was_written_is_what_is_read(
     table = read((ends.join(lines) + ends).encode(encoding)).table
     expected = [[t, np.nan if value is None else value, 0.25] for t, value in rows]
     assert np.array_equal(table.values, np.array(expected) + 0.0, equal_nan=True)
+
+
+def test_far_too_many_columns_are_refused_before_each_is_looked_at() -> None:
+    begun = time.process_time()
+    with pytest.raises(InvalidInput, match="the table has 100000 columns"):
+        read(b"1," * 100_000)
+    assert time.process_time() - begun < 1.5
+
+
+def test_a_header_is_looked_for_among_no_more_cells_than_a_person_could_mean(
+    monkeypatch: pytest.MonkeyPatch,
+) -> None:
+    looked_at = []
+    monkeypatch.setattr(layout, "parse_header", lambda cell: looked_at.append(cell) or parse_header(cell))
+    monkeypatch.setattr(layout, "HEADER_CELLS", 2_000)
+    words, numbers = ",".join(f"name {i}" for i in range(100)), ",".join("1" * 100)
+    with pytest.raises(InvalidInput, match="no column is named as the time"):
+        read("\n".join([words] * 500 + [numbers] * 500).encode())
+    assert 2_000 <= len(looked_at) < 4_000
