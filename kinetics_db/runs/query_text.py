@@ -8,7 +8,7 @@ Parts stand between commas, in any order, and all must hold::
     by mira               who logged it        replicate of K01      repeats that run
     control blank         that kind of control; 'control any', 'no control'
     has table, no table   whether it has a concentration table
-    project tern          of that project
+    project oxidation     of that project
     K0, code K0           the code begins so
 
 Names that hold a comma, a bracket or a quotation mark stand in quotation marks, doubled inside.

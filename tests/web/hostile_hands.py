@@ -148,13 +148,13 @@ Try = tuple[str, Sent, list[tuple[str, bytes]]]
 
 
 def one_field_at_a_time(form: PageForm, texts: dict[str, bytes], *, turn: int | None = None) -> Iterator[Try]:
-    """Each field with each text, the rest as it stands.
+    """Each field with each text, the rest as it stands; of many fields, which are alike, every third.
 
-    With ``turn`` each field with one of them, all texts in turn, and of many fields that are alike every third.
+    With ``turn`` each of them with one text, all texts in turn.
     """
     labels, names = list(texts), worth_a_value(form)
-    if turn is not None and len(names) > MANY_FIELDS:
-        names = names[turn % 3 :: 3]
+    if len(names) > MANY_FIELDS:
+        names = names[(turn or 0) % 3 :: 3]
     for number, name in enumerate(names):
         for label in labels if turn is None else [labels[(turn + number) % len(labels)]]:
             value = texts[label]

@@ -40,8 +40,8 @@ class PageForm:
 
     @property
     def key(self) -> tuple[str, ...]:
-        """The same for all buttons of one form."""
-        return (self.action.partition("?")[0], *(one.name for one in self.fields))
+        """The same for all that can be asked with one form."""
+        return tuple(one.name for one in self.fields)
 
     @property
     def stores_on_a_page(self) -> bool:
