@@ -82,10 +82,8 @@ class Chart:
     @property
     def words(self) -> str:
         """What the chart shows, for those who do not see it."""
-        series = [
-            Series(s.name, s.position, s.x, s.y, model_times=s.model_x, model=s.model_y) for s in self.series
-        ]
-        plot = Plot("", self.title, series, self.time_unit, self.value_unit, self.model_name)
+        series = [Series(s.name, s.x, s.y, model_times=s.model_x, model=s.model_y) for s in self.series]
+        plot = Plot(series, self.time_unit, self.value_unit, self.model_name)
         return describe(plot)
 
 
