@@ -225,5 +225,6 @@ def test_the_account_page_costs_few_queries(browser: Client, django_assert_max_n
 
 def test_a_strangers_account_is_nobodys(client: Client, study: Study) -> None:
     assert client.get(ACCOUNT)["Location"] == "/login/?next=/account/"
-    assert client.post(ACCOUNT, password_sent()).status_code == 302
+    refused = client.post(ACCOUNT, password_sent())
+    assert refused.status_code == 403 and "You are logged out" in refused.content.decode()
     assert User.objects.get(pk=study.user.pk).check_password(PASSWORD)

@@ -141,7 +141,9 @@ def test_what_was_typed_is_kept_and_escaped(browser: Client, study: Study) -> No
 
 
 def test_a_stranger_makes_projects_of_his_own_and_nobody_does_so_unseen(client: Client, db: None) -> None:
-    assert client.post(ADDRESS, {"name": "X"})["Location"].startswith("/login/")
+    refused = client.post(ADDRESS, {"name": "X"})
+    assert refused.status_code == 403 and "You are logged out" in refused.content.decode()
+    assert not Project.objects.exists()
     client.force_login(make_user("otto"))
     client.post(ADDRESS, {"name": "Of Otto"})
     assert Project.objects.get().created_by.username == "otto"

@@ -148,7 +148,8 @@ def test_old_tokens_are_listed_with_their_state(browser: Client, study: Study) -
 
 def test_strangers_are_sent_to_the_login(client: Client, db: None) -> None:
     assert client.get(ADDRESS)["Location"] == f"/login/?next={ADDRESS}"
-    assert client.post(ADDRESS, sent()).status_code == 302
+    refused = client.post(ADDRESS, sent())
+    assert refused.status_code == 403 and "You are logged out" in refused.content.decode()
     assert client.post(f"{ADDRESS}1/withdraw/").status_code == 302
 
 
