@@ -16,7 +16,9 @@ FOLDERS_OF_CODE := $(wildcard kinetics_db api workers tests manage.py)
 # Tests that do not touch the database are not run a second time.
 TESTS_WITHOUT_DATABASE := tests/engine tests/architecture tests/processes tests/services tests/factories \
 	tests/bench tests/browser tests/__pycache__
-TESTS_ON_SQLITE = $(filter-out $(TESTS_WITHOUT_DATABASE),$(patsubst %/.,%,$(wildcard tests/*/.)))
+# REST answers the same on either; the flows try it on SQLite too.
+TESTS_ON_POSTGRESQL := tests/api tests/access tests/scale
+TESTS_ON_SQLITE = $(filter-out $(TESTS_WITHOUT_DATABASE) $(TESTS_ON_POSTGRESQL),$(patsubst %/.,%,$(wildcard tests/*/.)))
 
 # Threads inside the linear algebra cost more than they bring for small matrices.
 export OPENBLAS_NUM_THREADS := 1

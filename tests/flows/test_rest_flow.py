@@ -23,7 +23,7 @@ from tests.factories.tokens import make_token
 from tests.flows.rest_client import RestClient, all_at_once
 from tests.flows.test_alpha_pinene import FILE, NAMES, PUBLISHED, TEXT
 
-pytestmark = [pytest.mark.processes, pytest.mark.postgresql, pytest.mark.django_db(transaction=True)]
+pytestmark = [pytest.mark.processes, pytest.mark.django_db(transaction=True)]
 
 Start = Callable[..., Any]
 K, SIGMA = 0.01, 5e-5
