@@ -242,7 +242,9 @@ def test_superseded_tables_are_not_offered_and_make_a_dataset_stale(
     dataset = study.dataset()
     newer = study.table(Run.objects.get(code="K01"), k=2.1e-3, name="again.txt")
     supersede_table(user=study.user, older=tables[0], newer=newer, reason="phase was wrong")
-    assert f'value="{tables[0].pk}"' not in browser.get(NEW).content.decode()
+    html = browser.get(NEW).content.decode()
+    assert f'name="tables" value="{newer.pk}"' in html
+    assert f'name="tables" value="{tables[0].pk}"' not in html
     text = text_of(browser.get(f"/datasets/{dataset.pk}/").content.decode())
     assert "table 1 of run K01 has been superseded" in text
     assert "superseded since" in text
